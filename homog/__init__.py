@@ -1,0 +1,1 @@
+"""Effective elastic properties of lattices and folded sheets, from a requirement to ranked unit cells."""

@@ -1,0 +1,248 @@
+"""The effective tensor: eliminate the nodal freedoms, and report every motion that costs nothing.
+
+The elimination is an LDL' factorisation written over the batch (batch axis last, loops over the few freedoms), and
+the effective stiffness is the Schur complement of the macroscopic strains, C = (D - F' K^+ F) / V. The pivots tell
+the rank: a pivot below RANK_TOLERANCE of its own diagonal entry is a null vector of K, dropped and counted as a
+mechanism, never handed to a solver in the hope that it complains. The same test on C itself finds uniform strains
+that cost nothing: there no Poisson's ratio exists, and the mode is named instead.
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+from typing import TYPE_CHECKING
+
+import numpy as np
+from numpy.typing import NDArray
+
+from homog.assembly import dense, freedoms, sparse, strain_count
+from homog.cell import STRAINS, Kind, Status, UnitCell
+from homog.elements import check_model
+from homog.errors import GeometryError, InputError, MechanismError
+from homog.tensors import voigt_factors
+
+if TYPE_CHECKING:
+    import pandas as pd
+
+Array = NDArray[np.float64]
+
+RANK_TOLERANCE = 1e-11
+"""A pivot below this share of its diagonal entry (dense path) is a null vector: round-off leaves 1e-16 to 1e-13."""
+SPARSE_RANK_TOLERANCE = 1e-9
+"""The same for the sparse path, where a null vector may be spread over 1e5 freedoms."""
+SPARSE_SHIFT = 1e-15
+"""Relative shift of the diagonal by which SuperLU survives an exactly singular matrix."""
+DENSE_LIMIT = 240
+"""Largest number of freedoms that goes through the dense batched path."""
+CHUNK_ENTRIES = 2**18
+"""Entries of M in one chunk of the batch: keeps the elimination in cache."""
+DEFAULT_MODEL = "timoshenko"
+
+
+@dataclass(frozen=True, eq=False)
+class Effective:
+    """What a cell, or each member of a batch, is as a homogeneous material.
+
+    Parameters
+    ----------
+    stiffness : ndarray of shape (..., v, v)
+        Mandel stiffness: MPa, or for sheets [A B; B D] in N/mm, N, N mm. NaN where `status` is IMPOSSIBLE.
+    relative_density : ndarray of shape (...)
+        Solid share, joints counted once.
+    mechanisms : ndarray of int of shape (...)
+        Motions that cost no energy: of the nodes at held macroscopic strain, plus uniform strains.
+    status : ndarray of int of shape (...)
+        `homog.cell.Status`.
+    cell : UnitCell
+        Where it came from.
+    model : str
+        The wall model.
+    """
+
+    stiffness: Array
+    relative_density: Array
+    mechanisms: NDArray[np.int64]
+    status: NDArray[np.int8]
+    cell: UnitCell
+    model: str
+
+    @property
+    def kind(self) -> Kind:
+        """`planar`, `sheet` or `spatial`."""
+        return self.cell.kind
+
+    def table(self, columns: list[str] | None = None) -> pd.DataFrame:
+        """Return the output quantities, one row a member, flattened in C order (all columns unless named)."""
+        from homog.columns import table  # the data model's one door upwards
+
+        return table(self, columns)
+
+
+def homogenize(cell: UnitCell, *, model: str = DEFAULT_MODEL) -> Effective:
+    """Return the effective stiffness of a periodic cell or of every member of a batch.
+
+    Parameters
+    ----------
+    cell : UnitCell
+        With batch shape (...).
+    model : str
+        `euler` or `timoshenko`.
+
+    Returns
+    -------
+    Effective
+        A bad member of a batch has a status and NaN and leaves its neighbours alone.
+
+    Raises
+    ------
+    GeometryError, MechanismError
+        For a single cell (batch shape ()) that is impossible, or that a uniform strain deforms at no energy.
+    InputError
+        For a cell whose blocks do not fit its points or their kinds.
+
+    Examples
+    --------
+    >>> import homog
+    >>> cell = homog.build("square-grid", length=10.0, thickness=0.5)
+    >>> float(homog.homogenize(cell, model="euler").stiffness[0, 0].round(6))  # E t/l
+    0.05
+    """
+    check_model(model)
+    cell.check()
+    shape = cell.shape
+    flat = cell if len(shape) == 1 else cell.at(None) if not shape else _flattened(cell)
+    members = flat.shape[0]
+    good = (
+        (flat.status == Status.OK)
+        & np.isfinite(flat.points).all(axis=(-1, -2))
+        & np.isfinite(flat.lattice).all(axis=(-1, -2))
+        & (flat.volume > 0.0)
+    )
+    good = np.broadcast_to(good, (members,))
+    v = strain_count(cell.kind)
+    count = freedoms(flat).count
+    C = np.empty((members, v, v))
+    upper = np.empty((members, v))
+    mechanisms = np.zeros(members, np.int64)
+    with np.errstate(all="ignore"):
+        if count <= DENSE_LIMIT:
+            step = max(8, CHUNK_ENTRIES // (count + v) ** 2)
+            for start in range(0, members, step):
+                part = slice(start, min(start + step, members))
+                M = dense(flat, model, part)
+                size = part.stop - part.start
+                if M.shape[-1] != size:
+                    M = np.broadcast_to(M, M.shape[:2] + (size,)).copy()
+                upper[part] = np.diagonal(M[count:, count:]).copy()
+                mechanisms[part] = eliminate(M, count)
+                C[part] = np.moveaxis(M[count:, count:], -1, 0)
+        else:
+            for i in range(members):
+                C[i], upper[i], mechanisms[i] = _sparse_member(flat.at(i), model)
+        C = np.tril(C) + np.swapaxes(np.tril(C, -1), -1, -2)
+        finite = good & np.isfinite(C).all(axis=(-1, -2))
+        C = np.where(finite[:, None, None], C / flat.volume[..., None, None], np.nan)
+        soft = _null_count(C, upper / flat.volume[..., None])
+    mechanisms = np.where(finite, mechanisms + soft, 0)
+    status = np.where(finite, np.where(soft > 0, Status.MECHANISM, Status.OK), Status.IMPOSSIBLE).astype(np.int8)
+    density = np.where(finite, np.broadcast_to(flat.relative_density, (members,)), np.nan)
+    effective = Effective(
+        stiffness=C.reshape(shape + (v, v)),
+        relative_density=density.reshape(shape),
+        mechanisms=mechanisms.reshape(shape),
+        status=status.reshape(shape),
+        cell=cell,
+        model=model,
+    )
+    if not shape and status[0] == Status.IMPOSSIBLE:
+        raise GeometryError(
+            f"Cell '{cell.family}' has a value that is not finite or walls of no length; check its parameters"
+        )
+    if not shape and status[0] == Status.MECHANISM:
+        raise MechanismError(
+            f"Cell '{cell.family}' has no resistance to the uniform strain {soft_mode(effective.stiffness, cell.kind)}; "
+            "brace it, stiffen its joints, or read its stiffness from a batch of one"
+        )
+    return effective
+
+
+def _flattened(cell: UnitCell) -> UnitCell:
+    shape = cell.shape
+    return cell.at(tuple(np.indices(shape).reshape(len(shape), -1)))
+
+
+def eliminate(M: Array, count: int) -> NDArray[np.int64]:
+    """Eliminate the first `count` freedoms of symmetric matrices (N, N, b) in place; return how many were null.
+
+    Right-looking LDL' on the lower triangle: afterwards M[count:, count:] holds the Schur complement in its lower
+    triangle. Positive semi-definite matrices need no pivoting: a null pivot has a null column.
+    """
+    size = len(M)
+    dead = np.zeros(M.shape[-1], np.int64)
+    diagonal = np.stack([M[i, i] for i in range(count)]) if count else np.empty((0, M.shape[-1]))
+    for j in range(count):
+        null = ~(M[j, j] > RANK_TOLERANCE * diagonal[j])
+        dead += null
+        column = M[j + 1 :, j]
+        factor = column * np.where(null, 0.0, 1.0 / M[j, j])
+        for i in range(size - j - 1):
+            M[j + 1 + i, j + 1 : j + 2 + i] -= factor[i] * column[: i + 1]
+    return dead
+
+
+def _null_count(C: Array, upper: Array) -> NDArray[np.int64]:
+    """Return how many uniform strains cost nothing, judged against the affine (upper bound) stiffness."""
+    M = np.moveaxis(C, 0, -1).copy()
+    size = len(M)
+    null = np.zeros(C.shape[0], np.int64)
+    for j in range(size):
+        soft = ~(M[j, j] > RANK_TOLERANCE * upper[:, j])
+        null += soft
+        factor = M[j + 1 :, j] * np.where(soft, 0.0, 1.0 / M[j, j])
+        M[j + 1 :, j + 1 :] -= factor[:, None] * M[j + 1 :, j]
+    return null
+
+
+def _sparse_member(cell: UnitCell, model: str) -> tuple[Array, Array, int]:
+    """Return V C, the affine stiffness' diagonal and the number of null pivots of one large cell."""
+    import scipy.sparse as sp
+    from scipy.sparse.linalg import splu
+
+    K, F, D = sparse(cell, model)
+    diagonal = K.diagonal()
+    scale = 1.0 / np.sqrt(np.where(diagonal > 0.0, diagonal, 1.0))
+    if not (np.isfinite(diagonal).all() and np.isfinite(D).all()):
+        return np.full_like(D, np.nan), np.diagonal(D), 0
+    unit = sp.diags(scale) @ K @ sp.diags(scale) + SPARSE_SHIFT * sp.identity(len(scale))
+    factor = splu(
+        unit.tocsc(), permc_spec="MMD_AT_PLUS_A", diag_pivot_thresh=0.0, options={"SymmetricMode": True}
+    )
+    null = np.abs(factor.U.diagonal()) < SPARSE_RANK_TOLERANCE
+    right = F * scale[:, None]
+    return D - right.T @ factor.solve(right), np.diagonal(D), int(null.sum())
+
+
+def soft_mode(stiffness: Array, kind: Kind) -> str:
+    """Return the softest uniform strain of one Mandel stiffness (v, v) in words, engineering shear.
+
+    >>> soft_mode(np.diag([1.0, 1.0, 0.0]), "planar")
+    'g12 +1.00'
+    """
+    if not np.isfinite(stiffness).all():
+        raise InputError("The stiffness is not finite: it has no soft mode to name")
+    size = np.sqrt(np.maximum(np.diagonal(stiffness), np.diagonal(stiffness).max() * RANK_TOLERANCE))
+    if kind != "sheet":  # one unit: the mode of least energy for its size
+        size = np.ones_like(size)
+    values, vectors = np.linalg.eigh(stiffness / np.outer(size, size))
+    mode = vectors[:, 0] / size * voigt_factors(len(size), sheet=kind == "sheet")
+    mode = mode / mode[np.argmax(np.abs(mode))]
+    named = [f"{name} {value:+.2f}" for name, value in zip(STRAINS[kind], mode, strict=True) if abs(value) > 5e-3]
+    return " ".join(named)
+
+
+def condition(stiffness: Array) -> Array:
+    """Return smallest over largest eigenvalue of Mandel stiffness matrices (..., v, v); NaN in, NaN out."""
+    bad = ~np.isfinite(stiffness).all(axis=(-1, -2))
+    values = np.linalg.eigvalsh(np.where(bad[..., None, None], np.eye(stiffness.shape[-1]), stiffness))
+    return np.where(bad, math.nan, values[..., 0] / values[..., -1])

@@ -1,0 +1,136 @@
+"""The true section: how much solid a cell holds when every joint is counted once.
+
+A planar section is the set of points within t/2 of a wall's centre line. Around a joint it splits into the sectors
+between neighbouring walls, and in each sector the union of the two half walls has a closed form, so the area is the
+sum of the walls less one term a sector: exact as long as neighbouring joints do not run into each other, which is
+reported as `merged`. Round struts in space are treated the same way, cone by cone.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+
+import numpy as np
+from numpy.typing import NDArray
+
+Array = NDArray[np.float64]
+Index = NDArray[np.int64]
+
+AZIMUTHS = 720  # points round a strut for its joints' volume; the integrand is continuous: error below 1e-5 of it
+
+
+def sector_surplus(beta: Array, a: Array, b: Array) -> Array:
+    """Return the area by which the union in a sector differs from two half walls, ndarray of the inputs' shape.
+
+    Two walls of half thickness a and b leave a point at the angle beta (0 to 2 pi). Where the two faces meet in an
+    inner corner the walls overlap by (a^2 + b^2) cot(beta)/2 + a b / sin(beta); elsewhere the round end of the
+    thicker one adds a sector of its disc (elementary geometry).
+    """
+    sine, cosine = np.sin(beta), np.cos(beta)
+    with np.errstate(divide="ignore", invalid="ignore"):
+        corner = -(a**2 + b**2) * cosine / (2.0 * sine) - a * b / sine
+    large, small = np.maximum(a, b), np.minimum(a, b)
+    psi = np.arcsin(small / large)
+    rounded = large**2 / 2.0 * (beta - np.pi / 2.0 - psi) - small * np.sqrt(large**2 - small**2) / 2.0
+    meets = (beta < np.pi) & (b + a * cosine >= 0.0) & (a + b * cosine >= 0.0)
+    return np.where(meets, corner, rounded)
+
+
+def corner_cut(beta: Array, a: Array, b: Array) -> Array:
+    """Return how far along wall a its face is swallowed by the corner with wall b (0 where the corner is outer)."""
+    with np.errstate(divide="ignore", invalid="ignore"):
+        cut = (b + a * np.cos(beta)) / np.sin(beta)
+    return np.where(beta < np.pi, np.maximum(cut, 0.0), 0.0)
+
+
+def _arms(n: int, nodes: Index) -> list[Sequence[tuple[int, int]]]:
+    """Return for each point the (wall, end) pairs that meet there."""
+    arms: list[list[tuple[int, int]]] = [[] for _ in range(n)]
+    for wall, ends in enumerate(nodes):
+        for end, point in enumerate(ends):
+            arms[point].append((wall, end))
+    return [tuple(found) for found in arms]
+
+
+def element_vectors(points: Array, lattice: Array, nodes: Index, shifts: Index) -> Array:
+    """Return the vector from first to second node of each two-node element, ndarray of shape (..., m, d)."""
+    images = points[..., nodes, :] + np.einsum("mkp,...pd->...mkd", shifts.astype(float), lattice)
+    return np.asarray(images[..., 1, :] - images[..., 0, :])
+
+
+def wall_section(points: Array, lattice: Array, nodes: Index, shifts: Index, thickness: Array) -> tuple[Array, Array]:
+    """Return the area of the union of straight walls and whether their joints run into each other.
+
+    Parameters
+    ----------
+    points, lattice : ndarray of shape (..., n, 2), (..., 2, 2)
+    nodes, shifts : ndarray of int, shape (m, 2), (m, 2, 2)
+    thickness : ndarray of shape (..., m)
+
+    Returns
+    -------
+    area : ndarray of shape (...), mm2 per cell
+    merged : ndarray of bool, shape (...); there the area is not exact and the void beside a wall has closed
+    """
+    vectors = element_vectors(points, lattice, nodes, shifts)
+    lengths = np.linalg.norm(vectors, axis=-1)
+    half = np.broadcast_to(thickness, lengths.shape) / 2.0
+    area = (2.0 * half * lengths).sum(axis=-1)
+    cuts = np.zeros(lengths.shape + (2, 2))  # wall, end, left or right of its direction
+    for arms in _arms(points.shape[-2], nodes):
+        walls = np.array([wall for wall, _ in arms])
+        ends = np.array([end for _, end in arms])
+        out = vectors[..., walls, :] * np.where(ends == 0, 1.0, -1.0)[:, None]
+        direction = np.arctan2(out[..., 1], out[..., 0])
+        order = np.argsort(direction, axis=-1, kind="stable")
+        direction = np.take_along_axis(direction, order, -1)
+        beta = np.diff(direction, axis=-1, append=direction[..., :1] + 2.0 * np.pi)
+        wide = np.take_along_axis(half[..., walls], order, -1)
+        after = np.roll(wide, -1, axis=-1)
+        area = area + sector_surplus(beta, wide, after).sum(axis=-1)
+        here, there = corner_cut(beta, wide, after), corner_cut(beta, after, wide)
+        for arm, (wall, end) in enumerate(arms):
+            found = order == arm  # where this arm stands in the counter-clockwise order
+            left = np.where(found, here, 0.0).sum(axis=-1)
+            right = np.where(found, np.roll(there, 1, axis=-1), 0.0).sum(axis=-1)
+            cuts[..., wall, end, :] = np.stack([left, right] if end == 0 else [right, left], -1)
+    merged = (cuts.sum(axis=-2) >= lengths[..., None]).any(axis=(-1, -2))
+    return np.asarray(area), np.asarray(merged)
+
+
+def strut_volume(points: Array, lattice: Array, nodes: Index, shifts: Index, diameter: Array) -> Array:
+    """Return the volume (...,) of the union of round struts of one diameter per cell, joints counted once, mm3.
+
+    Around a joint each strut owns the cone of directions nearer to it than to its neighbours. The part of the strut
+    (of radius r) outside its cone has the volume r^3/3 times the integral over the azimuth of cot(chi), chi the
+    cone's half angle there; between struts at the angle b, cot(chi) = cot(b/2) cos(azimuth from the neighbour).
+    Where a strut has no neighbour on a side (chi > 90 deg) its round end adds a part of a ball (elementary geometry).
+    """
+    vectors = element_vectors(points, lattice, nodes, shifts)
+    lengths = np.linalg.norm(vectors, axis=-1)
+    r = np.asarray(diameter) / 2.0
+    volume = np.pi * r**2 * lengths.sum(axis=-1)
+    azimuth = 2.0 * np.pi * np.arange(AZIMUTHS) / AZIMUTHS
+    for arms in _arms(points.shape[-2], nodes):
+        walls = np.array([wall for wall, _ in arms])
+        sign = np.array([1.0 if end == 0 else -1.0 for _, end in arms])
+        out = vectors[..., walls, :] * sign[:, None] / lengths[..., walls, None]
+        for i in range(len(arms)):
+            axis = out[..., i, :]
+            side = np.where(np.abs(axis[..., 2:]) > 0.9, [1.0, 0.0, 0.0], [0.0, 0.0, 1.0])
+            e2 = np.cross(side, axis)
+            e2 /= np.linalg.norm(e2, axis=-1, keepdims=True)
+            e3 = np.cross(axis, e2)
+            cot = np.full(axis.shape[:-1] + (AZIMUTHS,), -np.inf)
+            for j in range(len(arms)):
+                if j == i:
+                    continue
+                cosine = np.einsum("...d,...d->...", axis, out[..., j, :])[..., None]
+                towards = (
+                    np.einsum("...d,...d->...", e2, out[..., j, :])[..., None] * np.cos(azimuth)
+                    + np.einsum("...d,...d->...", e3, out[..., j, :])[..., None] * np.sin(azimuth)
+                )
+                cot = np.maximum(cot, towards / (1.0 - cosine))
+            lost = np.where(cot > 0.0, cot, np.where(np.isinf(cot), -1.0, cot / np.sqrt(1.0 + cot**2)))
+            volume = volume - r**3 / 3.0 * 2.0 * np.pi * lost.mean(axis=-1)
+    return np.asarray(volume)
