@@ -15,14 +15,17 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 from dataclasses import dataclass
+from typing import TYPE_CHECKING
 
 import numpy as np
-import scipy.sparse as sp
 from numpy.typing import NDArray
 
 from homog.cell import Block, Kind, UnitCell
 from homog.elements import check_block, check_model, element, rotations
 from homog.tensors import basis
+
+if TYPE_CHECKING:
+    import scipy.sparse as sp
 
 Array = NDArray[np.float64]
 Index = NDArray[np.int64]
@@ -155,9 +158,9 @@ def dense(cell: UnitCell, model: str, members: slice | None = None) -> Array:
                 strain.append(row)
             for i in range(s):
                 pull: dict[int, Array] = {}
-                for j in np.flatnonzero(coupled[i]):
-                    for number, value in strain[j].items():
-                        term = W[i, j, e] * value
+                for other in np.flatnonzero(coupled[i]):
+                    for number, value in strain[other].items():
+                        term = W[i, other, e] * value
                         pull[number] = pull[number] + term if number in pull else term
                 for a, value in strain[i].items():
                     for b, force in pull.items():
@@ -170,6 +173,8 @@ def dense(cell: UnitCell, model: str, members: slice | None = None) -> Array:
 
 def sparse(cell: UnitCell, model: str) -> tuple[sp.csc_matrix, Array, Array]:
     """Return K (N, N) sparse, F (N, v) and D (v, v) of one cell."""
+    import scipy.sparse as sp
+
     free = freedoms(cell)
     v = strain_count(cell.kind)
     F, D = np.zeros((free.count + 1, v)), np.zeros((v, v))

@@ -212,7 +212,7 @@ class UnitCell:
         shape = self.shape
 
         def pick(values: NDArray[Any], tail: int) -> NDArray[Any]:
-            return np.broadcast_to(values, shape + values.shape[values.ndim - tail :])[index]
+            return np.asarray(np.broadcast_to(values, shape + values.shape[values.ndim - tail :])[index])
 
         blocks = tuple(
             dataclasses.replace(b, props={name: pick(value, 1) for name, value in b.props.items()}) for b in self.blocks

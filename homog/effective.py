@@ -119,7 +119,7 @@ def homogenize(cell: UnitCell, *, model: str = DEFAULT_MODEL) -> Effective:
         & np.isfinite(flat.lattice).all(axis=(-1, -2))
         & (flat.volume > 0.0)
     )
-    good = np.broadcast_to(good, (members,))
+    good = np.asarray(np.broadcast_to(good, (members,)))
     v = strain_count(cell.kind)
     count = freedoms(flat).count
     C = np.empty((members, v, v))
@@ -215,9 +215,7 @@ def _sparse_member(cell: UnitCell, model: str) -> tuple[Array, Array, int]:
     if not (np.isfinite(diagonal).all() and np.isfinite(D).all()):
         return np.full_like(D, np.nan), np.diagonal(D), 0
     unit = sp.diags(scale) @ K @ sp.diags(scale) + SPARSE_SHIFT * sp.identity(len(scale))
-    factor = splu(
-        unit.tocsc(), permc_spec="MMD_AT_PLUS_A", diag_pivot_thresh=0.0, options={"SymmetricMode": True}
-    )
+    factor = splu(unit.tocsc(), permc_spec="MMD_AT_PLUS_A", diag_pivot_thresh=0.0, options={"SymmetricMode": True})
     null = np.abs(factor.U.diagonal()) < SPARSE_RANK_TOLERANCE
     right = F * scale[:, None]
     return D - right.T @ factor.solve(right), np.diagonal(D), int(null.sum())

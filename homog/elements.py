@@ -260,7 +260,7 @@ def _inverse3(f: Array) -> Array:
             a, b = [k for k in range(3) if k != i], [k for k in range(3) if k != j]
             minor = f[a[0], b[0]] * f[a[1], b[1]] - f[a[0], b[1]] * f[a[1], b[0]]
             w[i, j] = w[j, i] = minor if (i + j) % 2 == 0 else -minor
-    return w / (f[0, 0] * w[0, 0] + f[0, 1] * w[0, 1] + f[0, 2] * w[0, 2])
+    return np.asarray(w / (f[0, 0] * w[0, 0] + f[0, 1] * w[0, 1] + f[0, 2] * w[0, 2]))
 
 
 # strut: stretch, twist, bending in two planes ------------------------------------------------------------------------
@@ -357,7 +357,9 @@ def check_block(kind: str, d: int, k: int, props: Props) -> None:
     """Raise InputError where a block does not fit its kind: dimension, number of nodes, property names."""
     e = element(kind)
     if d not in e.dimensions:
-        raise InputError(f"Element '{kind}' lives in {' or '.join(map(str, e.dimensions))} dimensions, the cell has {d}")
+        raise InputError(
+            f"Element '{kind}' lives in {' or '.join(map(str, e.dimensions))} dimensions, the cell has {d}"
+        )
     if k != e.nodes:
         raise InputError(f"Element '{kind}' joins {e.nodes} nodes, the block gives {k}")
     for name in e.required:

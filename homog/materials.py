@@ -100,6 +100,7 @@ class Material:
     poisson : float, -0.9999 to 0.4999
     density_kg_m3 : float, 20 to 3e4 kg/m3
     yield_MPa : float, yield or else strength, NaN where the solid has none
+    deep : bool, planar cells much deeper along axis 3 than their walls are thick: plane strain instead of plane stress
 
     Raises
     ------
@@ -115,6 +116,7 @@ class Material:
     poisson: float
     density_kg_m3: float
     yield_MPa: float = math.nan
+    deep: bool = False
 
     def __post_init__(self) -> None:
         _check(self)
@@ -124,13 +126,15 @@ class Material:
         """G = E / (2 (1 + nu)) in MPa."""
         return self.modulus_MPa / (2.0 * (1.0 + self.poisson))
 
-    def plane_strain(self) -> tuple[float, float]:
-        """Return the modulus E / (1 - nu^2) in MPa and the ratio nu / (1 - nu) of a wall that is deep along axis 3.
+    @property
+    def wall_modulus_MPa(self) -> float:
+        """Modulus of a planar cell's walls: E in plane stress, E / (1 - nu^2) where they are deep (plane strain)."""
+        return self.modulus_MPa / (1.0 - self.poisson**2) if self.deep else self.modulus_MPa
 
-        Put into the plane-stress formulas they give plane strain. The ratio may exceed 0.5, which no solid may, so
-        the pair is not a `Material`.
-        """
-        return self.modulus_MPa / (1.0 - self.poisson**2), self.poisson / (1.0 - self.poisson)
+    @property
+    def wall_poisson(self) -> float:
+        """Poisson's ratio of a planar cell's walls: nu in plane stress, nu / (1 - nu) where they are deep."""
+        return self.poisson / (1.0 - self.poisson) if self.deep else self.poisson
 
     def replaced(self, **values: Any) -> Material:
         """Return a copy with some values replaced; InputError for an unknown or impossible one."""

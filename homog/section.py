@@ -126,10 +126,9 @@ def strut_volume(points: Array, lattice: Array, nodes: Index, shifts: Index, dia
                 if j == i:
                     continue
                 cosine = np.einsum("...d,...d->...", axis, out[..., j, :])[..., None]
-                towards = (
-                    np.einsum("...d,...d->...", e2, out[..., j, :])[..., None] * np.cos(azimuth)
-                    + np.einsum("...d,...d->...", e3, out[..., j, :])[..., None] * np.sin(azimuth)
-                )
+                towards = np.einsum("...d,...d->...", e2, out[..., j, :])[..., None] * np.cos(azimuth) + np.einsum(
+                    "...d,...d->...", e3, out[..., j, :]
+                )[..., None] * np.sin(azimuth)
                 cot = np.maximum(cot, towards / (1.0 - cosine))
             lost = np.where(cot > 0.0, cot, np.where(np.isinf(cot), -1.0, cot / np.sqrt(1.0 + cot**2)))
             volume = volume - r**3 / 3.0 * 2.0 * np.pi * lost.mean(axis=-1)

@@ -129,4 +129,4 @@ def orthotropic(E1: ArrayLike, E2: ArrayLike, nu12: ArrayLike, G12: ArrayLike) -
     S = np.zeros(e1.shape + (3, 3))
     S[..., 0, 0], S[..., 1, 1], S[..., 2, 2] = 1.0 / e1, 1.0 / e2, 0.5 / g
     S[..., 0, 1] = S[..., 1, 0] = -nu / e1
-    return np.linalg.inv(S)
+    return np.asarray(np.linalg.inv(S), float)

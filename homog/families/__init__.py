@@ -11,7 +11,8 @@ from homog.cell import UnitCell
 from homog.errors import unknown
 from homog.families import chiral, folded, planar, rotating, spatial
 from homog.families.base import Family, Parameter, Rule
-from homog.materials import UNIT, Material, material as named_material
+from homog.materials import UNIT, Material
+from homog.materials import material as named_material
 
 FAMILIES: Mapping[str, Family] = MappingProxyType(
     {f.id: f for module in (planar, chiral, rotating, folded, spatial) for f in module.FAMILIES}

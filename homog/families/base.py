@@ -9,7 +9,7 @@ from __future__ import annotations
 
 import dataclasses
 import math
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -201,7 +201,7 @@ def batch(*rows: Any) -> Array:
     return np.stack([np.broadcast_to(row, shape) for row in inner], axis=-2)
 
 
-def topology(elements: list[list[tuple[int, tuple[int, ...]]]]) -> tuple[Index, Index]:
+def topology(elements: Sequence[Sequence[tuple[int, tuple[int, ...]]]]) -> tuple[Index, Index]:
     """Return nodes (m, k) and shifts (m, k, p) from elements written as [(node, shift), ...]."""
     nodes = np.array([[node for node, _ in ends] for ends in elements])
     shifts = np.array([[shift for _, shift in ends] for ends in elements])
@@ -210,14 +210,14 @@ def topology(elements: list[list[tuple[int, tuple[int, ...]]]]) -> tuple[Index, 
 
 def wall_props(thickness: Array, material: Material, **more: Array) -> dict[str, Array]:
     """Return the properties of walls of the given thickness (..., m)."""
-    modulus, poisson = np.array([material.modulus_MPa]), np.array([material.poisson])
+    modulus, poisson = np.array([material.wall_modulus_MPa]), np.array([material.wall_poisson])
     return {"thickness": thickness, "modulus": modulus, "poisson": poisson, **more}
 
 
 def wall_cell(
     points: Array,
     lattice: Array,
-    elements: list[list[tuple[int, tuple[int, ...]]]],
+    elements: Sequence[Sequence[tuple[int, tuple[int, ...]]]],
     thickness: Array,
     material: Material,
 ) -> UnitCell:

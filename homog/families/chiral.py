@@ -54,11 +54,11 @@ def _anti_tetrachiral(p: Values, material: Material) -> UnitCell:
         arcs = [[(4 * k + i, (0, 0)), (4 * k + (i + 1) % 4, (0, 0))] for k in (0, 1) for i in range(4)]
         turn = np.array([0.0] * 4 + [-np.pi / 2.0] * 8)  # the ring, run counter-clockwise, bulges to the right
         nodes, shifts = topology(ligaments + arcs)
-        blocks = (Block("wall", nodes, shifts, wall_props(np.asarray(t)[..., None] + np.zeros(12), material, arc=turn)),)
+        blocks = (
+            Block("wall", nodes, shifts, wall_props(np.asarray(t)[..., None] + np.zeros(12), material, arc=turn)),
+        )
     solid = 2.0 * node_area(r, t, node) + 2.0 * t * (x + y) - 8.0 * tangent_overlap(r, t)
-    return UnitCell(
-        points, lattice, blocks, parent=material, solid=solid, slenderness=t / np.minimum(x, y) + zero
-    )
+    return UnitCell(points, lattice, blocks, parent=material, solid=solid, slenderness=t / np.minimum(x, y) + zero)
 
 
 def _nodes_collide(p: Values, material: Material) -> NDArray[np.bool_]:

@@ -43,13 +43,17 @@ def _tips_collide(p: Values, material: Material) -> np.ndarray:
     return tips
 
 
-GIBSON = "Gibson, Ashby, Schajer & Robertson 1982, Proc. R. Soc. A 382, 25; Gibson & Ashby, Cellular Solids, 1997, ch. 4"
+GIBSON = (
+    "Gibson, Ashby, Schajer & Robertson 1982, Proc. R. Soc. A 382, 25; Gibson & Ashby, Cellular Solids, 1997, ch. 4"
+)
 
 
 def _square(p: Values, material: Material) -> UnitCell:
     l = p["length"]
     walls = [[(0, (0, 0)), (0, (1, 0))], [(0, (0, 0)), (0, (0, 1))]]
-    return wall_cell(batch([0.0 * l, 0.0 * l]), batch([l, 0.0], [0.0, l]), walls, batch(*[p["thickness"]] * 2), material)
+    return wall_cell(
+        batch([0.0 * l, 0.0 * l]), batch([l, 0.0], [0.0, l]), walls, batch(*[p["thickness"]] * 2), material
+    )
 
 
 def _triangular(p: Values, material: Material) -> UnitCell:

@@ -21,7 +21,7 @@ Corner = tuple[int, tuple[int, int]]
 
 
 def _ligament_hinge(p: Values, material: Material) -> Array:
-    return np.asarray(material.modulus_MPa * p["ligament_thickness"] ** 3 / (12.0 * p["ligament_length"]))
+    return np.asarray(material.wall_modulus_MPa * p["ligament_thickness"] ** 3 / (12.0 * p["ligament_length"]))
 
 
 def _units(
@@ -45,10 +45,11 @@ def _squares(p: Values, material: Material) -> UnitCell:
     lattice = batch([centre, centre], [-centre, centre])
     A: list[Corner] = [(0, (0, 0)), (1, (0, 0)), (2, (0, 0)), (3, (0, 0))]
     B: list[Corner] = [(0, (0, 0)), (1, (0, -1)), (2, (1, -1)), (3, (1, 0))]  # left, bottom, right, top corner of B
-    bars = [[U[i], U[(i + 1) % 4]] for U in (A, B) for i in range(4)] + [[U[i], U[i + 2]] for U in (A, B) for i in (0, 1)]
-    nu = material.poisson
+    bars = [[U[i], U[(i + 1) % 4]] for U in (A, B) for i in range(4)]
+    bars += [[U[i], U[i + 2]] for U in (A, B) for i in (0, 1)]
+    nu = material.wall_poisson
     edge, brace = 1.0 / (2.0 * (1.0 + nu)), np.sqrt(2.0) * nu / (1.0 - nu**2)  # of W = H = side
-    rigidity = np.asarray(material.modulus_MPa * a)[..., None] * np.array([edge] * 8 + [brace] * 4)
+    rigidity = np.asarray(material.wall_modulus_MPa * a)[..., None] * np.array([edge] * 8 + [brace] * 4)
     hinges = []
     for i in range(4):  # pin i is corner i of A and of B; both neighbours on the same side of the pin face one void
         shift = np.array(A[i][1]) - np.array(B[i][1])
@@ -72,7 +73,7 @@ def _triangles(p: Values, material: Material) -> UnitCell:
     B: list[Corner] = [(0, (0, 0)), (1, (1, 0)), (2, (0, 1))]
     bars = [[U[i], U[(i + 1) % 3]] for U in (A, B) for i in range(3)]
     # three bars of a triangle: areal stiffness as the plate's, E side / (2 sqrt3 (1 - nu)); shear exact at nu = 1/3
-    each = material.modulus_MPa * a / (2.0 * np.sqrt(3.0) * (1.0 - material.poisson))
+    each = material.wall_modulus_MPa * a / (2.0 * np.sqrt(3.0) * (1.0 - material.wall_poisson))
     hinges = []
     for i in range(3):
         shift = np.array(A[i][1]) - np.array(B[i][1])

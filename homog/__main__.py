@@ -1,0 +1,5 @@
+"""`python -m homog` is the command line."""
+
+from homog.cli import entry
+
+entry()

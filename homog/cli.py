@@ -1,0 +1,531 @@
+"""The command line. Only this module prints and chooses exit codes; nobody imports it.
+
+Exit status: 0 done, 1 an internal fault, 2 bad input (one line on standard error), 3 nothing in the brief's range
+meets it. Heavy libraries load inside the commands, so that `--help` is quick.
+"""
+
+from __future__ import annotations
+
+import json
+import math
+import os
+import sys
+from collections.abc import Mapping, Sequence
+from pathlib import Path
+from typing import TYPE_CHECKING, Annotated, Any
+
+import typer
+
+from homog import __version__
+from homog.errors import HomogError, InputError
+
+if TYPE_CHECKING:
+    from rich.console import Console
+    from rich.table import Table
+
+    from homog.effective import Effective
+    from homog.materials import Material
+
+app = typer.Typer(
+    name="homog",
+    no_args_is_help=True,
+    add_completion=False,
+    pretty_exceptions_enable=False,
+    rich_markup_mode="rich",
+    help="From a requirement to a lattice or folded sheet: effective stiffness in every direction, screened and ranked.",
+    epilog="Start with 'homog families', then 'homog evaluate reentrant-honeycomb', then write a brief and 'homog screen' "
+    "it. Screening only, not design evidence: local codes and licensed practice decide.",
+)
+
+Assignments = Annotated[
+    list[str] | None,
+    typer.Argument(metavar="[PARAM=VALUE]...", help="Parameters of the family, mm and degrees; defaults otherwise."),
+]
+FamilyId = Annotated[str, typer.Argument(metavar="ID", help="Family identifier; 'homog families' lists them.")]
+MaterialName = Annotated[
+    str | None, typer.Option("--material", metavar="NAME", help="Parent by name ('homog materials').")
+]
+Modulus = Annotated[float | None, typer.Option("--modulus", metavar="MPA", help="Parent's Young's modulus, MPa.")]
+Poisson = Annotated[float | None, typer.Option("--poisson", metavar="NU", help="Parent's Poisson's ratio.")]
+SolidDensity = Annotated[
+    float | None, typer.Option("--solid-density", metavar="KG_M3", help="Parent's density, kg/m3.")
+]
+Deep = Annotated[
+    bool, typer.Option("--deep", help="Planar cells deep along axis 3: plane strain instead of plane stress.")
+]
+Model = Annotated[
+    str, typer.Option("--model", metavar="M", help="euler (flexure, stretch) or timoshenko (adds shear).")
+]
+Overwrite = Annotated[bool, typer.Option("--overwrite", help="Replace a file that is there already.")]
+
+
+def _console() -> Console:
+    from rich.console import Console
+
+    return Console(width=None if sys.stdout.isatty() else 140, highlight=False, soft_wrap=False)
+
+
+def _table(*headers: str, title: str = "", numeric: Sequence[str] = ()) -> Table:
+    from rich import box
+    from rich.table import Table
+
+    table = Table(box=box.SIMPLE_HEAD, title=title or None, title_justify="left", title_style="bold", pad_edge=False)
+    for header in headers:
+        table.add_column(header, justify="right" if header in numeric else "left", overflow="fold")
+    return table
+
+
+def _parent(
+    name: str | None, modulus: float | None, poisson: float | None, density: float | None, deep: bool
+) -> Material:
+    from homog.materials import UNIT, material
+
+    values: dict[str, Any] = {}
+    for key, value in (("modulus_MPa", modulus), ("poisson", poisson), ("density_kg_m3", density)):
+        if value is not None:
+            values[key] = value
+    parent = material(name) if name is not None else UNIT
+    if values:
+        parent = parent.replaced(name="given values" if name is None else f"{parent.name}, changed", **values)
+    return parent.replaced(deep=True) if deep else parent
+
+
+def _assigned(words: Sequence[str] | None) -> dict[str, str]:
+    given: dict[str, str] = {}
+    for word in words or ():
+        name, equals, value = word.partition("=")
+        if not equals or not name or not value:
+            raise InputError(f"'{word}' is not PARAM=VALUE; write for example angle=-30, without blanks")
+        if name in given:
+            raise InputError(f"Parameter '{name}' is given twice; give it once")
+        given[name] = value
+    return given
+
+
+def _numbers(family_id: str, given: Mapping[str, str]) -> dict[str, Any]:
+    """Return each parameter as a number, a word, or for LOW:HIGH:COUNT and A,B,C an array of numbers."""
+    import numpy as np
+
+    from homog.families import family
+
+    found = family(family_id)
+    out: dict[str, Any] = {}
+    for name, text in given.items():
+        if found.parameter(name).choices:
+            out[name] = text
+            continue
+        try:
+            if ":" in text:
+                low, high, count = text.split(":")
+                if int(count) < 1:
+                    raise InputError(f"Parameter '{name}' = {text}: an empty range; COUNT must be at least 1")
+                out[name] = np.linspace(float(low), float(high), int(count))
+            elif "," in text:
+                out[name] = np.array([float(part) for part in text.split(",")])
+            else:
+                out[name] = float(text)
+        except ValueError as error:
+            if isinstance(error, InputError):
+                raise
+            raise InputError(
+                f"Parameter '{name}' = {text!r} is not a number; write {name}=VALUE, in a sweep also LOW:HIGH:COUNT or A,B,C"
+            ) from None
+    return out
+
+
+def _one(family_id: str, words: Sequence[str] | None, parent: Material, model: str) -> Effective:
+    """Return one evaluated cell as a batch of one, so that a mechanism is reported and not raised."""
+    import numpy as np
+
+    from homog.effective import homogenize
+    from homog.families import build, family
+
+    given = _numbers(family_id, _assigned(words))
+    for name, value in given.items():
+        if np.ndim(value):
+            raise InputError(f"Parameter '{name}' has {np.size(value)} values; give one, or use 'homog sweep'")
+    cell = build(family_id, material=parent, **given)  # raises where the cell cannot exist
+    first = next(p.name for p in family(family_id).parameters if not p.choices)
+    batch = build(family_id, material=parent, **{**given, first: np.reshape(cell.parameters[first], (1,))})
+    return homogenize(batch, model=model)
+
+
+@app.command()
+def families(
+    id: Annotated[str | None, typer.Argument(metavar="[ID]", help="Family to explain; all are listed without.")] = None,
+) -> int:
+    """List the families of unit cells, or explain one: parameters, ranges, source, output quantities."""
+    from homog.columns import COLUMNS, columns_of
+    from homog.families import FAMILIES, family
+
+    console = _console()
+    if id is None:
+        table = _table("id", "kind", "symmetry", "parameters")
+        for found in FAMILIES.values():
+            table.add_row(found.id, found.kind, found.symmetry, ", ".join(p.name for p in found.parameters))
+        console.print(table)
+        console.print("'homog families ID' explains one.")
+        return 0
+    found = family(id)
+    console.print(f"{found.title}  ({found.id}; {found.kind}, effective symmetry {found.symmetry})", style="bold")
+    if found.notes:
+        console.print(found.notes)
+    table = _table("parameter", "default", "allowed", "meaning", numeric=("default",))
+    for p in found.parameters:
+        default = p.default if isinstance(p.default, str) else f"{p.default:g} {p.unit}".strip()
+        table.add_row(
+            p.name, f"= {default}" if isinstance(p.default, str) and not p.choices else default, p.allowed, p.meaning
+        )
+    console.print(table)
+    if found.rules:
+        console.print("Impossible where:")
+        for rule in found.rules:
+            console.print(f"  {rule.code}: {rule.words}")
+    console.print(f"Source: {found.source}")
+    table = _table("output quantity", "meaning")
+    for name in columns_of(found.kind):
+        table.add_row(name, COLUMNS[name].meaning)
+    console.print(table)
+    return 0
+
+
+@app.command()
+def materials(
+    name: Annotated[
+        str | None, typer.Argument(metavar="[NAME]", help="Parent to show with ranges and sources.")
+    ] = None,
+) -> int:
+    """List the parent materials, or show one with the range, source and status of every value."""
+    from homog.materials import CONFIRM, material, material_values
+    from homog.materials import materials as known
+
+    console = _console()
+    if name is not None:
+        table = _table("quantity", "value", "low", "high", "status", "source", "note", numeric=("value", "low", "high"))
+        for row in material_values(material(name).name):
+            low, high = (f"{row[key]:g}" if math.isfinite(row[key]) else "" for key in ("low", "high"))
+            value = f"{row['value']:g}" if math.isfinite(row["value"]) else "none"
+            table.add_row(row["quantity"], value, low, high, row["status"], row["source"], row["note"])
+    else:
+        table = _table("name", "E MPa", "nu", "kg/m3", "yield MPa", numeric=("E MPa", "nu", "kg/m3", "yield MPa"))
+        for m in known().values():
+            strength = f"{m.yield_MPa:g}" if math.isfinite(m.yield_MPa) else "none"
+            table.add_row(m.name, f"{m.modulus_MPa:g}", f"{m.poisson:g}", f"{m.density_kg_m3:g}", strength)
+    console.print(table)
+    console.print(CONFIRM)
+    return 0
+
+
+@app.command()
+def processes() -> int:
+    """List the manufacturing processes with the walls and tolerances they can hold."""
+    from homog.materials import CONFIRM
+    from homog.materials import processes as known
+
+    numeric = ("min wall", "recommended", "tolerance +-", "max cell")
+    table = _table("name", *numeric, "status", "note", numeric=numeric)
+    for p in known().values():
+        cell = f"{p.max_cell_mm:g}" if math.isfinite(p.max_cell_mm) else ""
+        table.add_row(
+            p.name,
+            f"{p.min_wall_mm:g}",
+            f"{p.recommended_wall_mm:g}",
+            f"{p.wall_tolerance_mm:g}",
+            cell,
+            p.status,
+            p.note,
+        )
+    console = _console()
+    console.print(table)
+    console.print(f"Lengths in mm. {CONFIRM}")
+    return 0
+
+
+@app.command()
+def evaluate(
+    id: FamilyId,
+    parameters: Assignments = None,
+    material: MaterialName = None,
+    modulus: Modulus = None,
+    poisson: Poisson = None,
+    solid_density: SolidDensity = None,
+    deep: Deep = False,
+    model: Model = "timoshenko",
+    as_json: Annotated[bool, typer.Option("--json", help="Print one JSON object instead of tables.")] = False,
+) -> int:
+    """Evaluate one unit cell: every output quantity, the whole stiffness, the verdict and its reasons.
+
+    Example: homog evaluate reentrant-honeycomb angle=-30 thickness=1 --material "PA12 laser-sintered"
+    """
+    from homog.columns import COLUMNS, reason_text
+    from homog.columns import evaluate as evaluated
+    from homog.report import WHAT_IT_IS, number
+    from homog.tensors import stiffness_to_voigt
+
+    parent = _parent(material, modulus, poisson, solid_density, deep)
+    effective = _one(id, parameters, parent, model)
+    row = {name: values[0] for name, values in evaluated(effective).items()}
+    cell = effective.cell
+    stiffness = stiffness_to_voigt(effective.stiffness[0], sheet=effective.kind == "sheet")
+    given = {name: _plain(values.reshape(-1)[0]) for name, values in cell.parameters.items()}
+    quantities = {name: _plain(row[name]) for name in COLUMNS if name in row}
+    if as_json:
+        from dataclasses import asdict
+
+        print(json.dumps({
+            "family": cell.family,
+            "parameters": given,
+            "material": {key: _plain(value) for key, value in asdict(parent).items()},
+            "model": model,
+            "relative_density": _plain(row["relative_density"]),
+            "mechanisms": int(row["mechanisms"]),
+            "stiffness": [[_plain(x) for x in line] for line in stiffness],
+            "columns": quantities,
+        }, indent=2))  # fmt: skip
+        return 0
+    from homog.families import family
+
+    console = _console()
+    found = family(id)
+    console.print(f"{found.title}  ({id}):  {row['verdict']}", style="bold")
+    units = {p.name: p.unit for p in found.parameters}
+    console.print(", ".join(f"{name} {value if isinstance(value, str) else f'{value:g}'} {units[name]}".strip()
+                            for name, value in given.items()))  # fmt: skip
+    deep_words = ", walls deep (plane strain)" if parent.deep else ""
+    console.print(f"parent {parent.name}: E {parent.modulus_MPa:g} MPa, nu {parent.poisson:g}, "
+                  f"{parent.density_kg_m3:g} kg/m3{deep_words}; model {model}")  # fmt: skip
+    table = _table("quantity", "value", "meaning", numeric=("value",))
+    for name, value in quantities.items():
+        if name in ("verdict", "reasons", "soft_mode") or value is None:
+            continue
+        table.add_row(name, number(value), COLUMNS[name].meaning)
+    console.print(table)
+    unit = "[A B; B D] in N/mm, N, N mm" if effective.kind == "sheet" else "MPa"
+    axes = ["11", "22", "12"] if effective.kind == "planar" else ["11", "22", "33", "23", "13", "12"]
+    axes = ["N11", "N22", "N12", "M11", "M22", "M12"] if effective.kind == "sheet" else axes
+    table = _table("", *axes, title=f"stiffness, {unit} (Voigt, engineering shear)", numeric=axes)
+    floor = 1e-12 * float(abs(stiffness).max())
+    for axis, line in zip(axes, stiffness, strict=True):
+        table.add_row(axis, *(number(x if abs(x) > floor else 0.0) for x in line))
+    console.print(table)
+    if row["soft_mode"]:
+        console.print(f"soft mode: {row['soft_mode']}")
+    for code in str(row["reasons"]).split():
+        console.print(f"{code}: {reason_text(code)}")
+    console.print(WHAT_IT_IS, style="dim")
+    return 0
+
+
+def _plain(value: Any) -> Any:
+    """Return a JSON value: numbers as they are, no value (NaN) as null."""
+    if isinstance(value, str):
+        return str(value)
+    if isinstance(value, bool):
+        return value
+    x = float(value)
+    if not math.isfinite(x):
+        return None
+    return int(x) if hasattr(value, "dtype") and value.dtype.kind in "iu" else x
+
+
+@app.command()
+def polar(
+    id: FamilyId,
+    out: Annotated[Path, typer.Option("--out", metavar="FILE", help="Figure to write: .svg, .png or .pdf.")],
+    parameters: Assignments = None,
+    material: MaterialName = None,
+    modulus: Modulus = None,
+    poisson: Poisson = None,
+    solid_density: SolidDensity = None,
+    deep: Deep = False,
+    model: Model = "timoshenko",
+    overwrite: Overwrite = False,
+) -> int:
+    """Draw E, nu and G of one cell against direction, with the cell beside them.
+
+    Example: homog polar reentrant-honeycomb angle=-30 thickness=1 --material PLA --out bow-tie.png
+    """
+    from homog.families import family
+    from homog.report import whole_file
+
+    parent = _parent(material, modulus, poisson, solid_density, deep)
+    effective = _one(id, parameters, parent, model)
+    from homog import plots
+
+    figure = plots.polar_figure(effective, title=family(id).title)
+    with whole_file(out, overwrite=overwrite) as temporary:
+        plots.save(figure, temporary)
+    print(f"wrote {out}")
+    return 0
+
+
+@app.command()
+def sweep(
+    id: FamilyId,
+    out: Annotated[Path, typer.Option("--out", metavar="FILE", help="Table to write: .csv or .parquet.")],
+    parameters: Annotated[
+        list[str] | None,
+        typer.Argument(
+            metavar="PARAM=LOW:HIGH:COUNT...", help="Spans; also PARAM=VALUE and PARAM=A,B,C. All combinations."
+        ),
+    ] = None,
+    material: MaterialName = None,
+    modulus: Modulus = None,
+    poisson: Poisson = None,
+    solid_density: SolidDensity = None,
+    deep: Deep = False,
+    model: Model = "timoshenko",
+    overwrite: Overwrite = False,
+) -> int:
+    """Evaluate all combinations of some parameters and write one row each, every output quantity a column.
+
+    Example: homog sweep arrowhead outer_angle=20:40:21 inner_angle=50:80:31 --material PLA --out sweep.csv
+    """
+    import numpy as np
+    import pandas as pd
+
+    from homog.columns import table as tabulate
+    from homog.effective import homogenize
+    from homog.families import build
+    from homog.report import provenance, write_table
+
+    if out.suffix not in (".csv", ".parquet"):
+        raise InputError(f"Table '{out}': allowed are .csv and .parquet")
+    if out.exists() and not overwrite:
+        raise InputError(f"File '{out}' is there already; choose another name or add --overwrite")
+    parent = _parent(material, modulus, poisson, solid_density, deep)
+    given = _numbers(id, _assigned(parameters))
+    spans = {name: np.atleast_1d(value) for name, value in given.items() if not isinstance(value, str)}
+    sizes = [len(values) for values in spans.values()]
+    count = math.prod(sizes)
+    if count > 5_000_000:
+        raise InputError(f"{count:,} combinations; at most 5,000,000 in one sweep: lower a COUNT")
+    chunk, parts = 8192, []
+    with _progress(count, f"sweeping {id}") as advance:
+        for start in range(0, count, chunk):
+            number = np.arange(start, min(start + chunk, count))
+            where = np.unravel_index(number, sizes) if sizes else ()
+            point = {name: values[index] for (name, values), index in zip(spans.items(), where, strict=True)}
+            words = {name: value for name, value in given.items() if isinstance(value, str)}
+            cell = build(id, material=parent, **point, **words)
+            parts.append(tabulate(homogenize(cell if cell.shape else cell.at(None), model=model)))
+            advance(len(number))
+    whole = pd.concat(parts, ignore_index=True)
+    write_table(whole, out, provenance(__version__, model, parent, family=id, rows=len(whole)), overwrite=overwrite)
+    print(f"wrote {out}: {len(whole):,} rows")
+    return 0
+
+
+@app.command()
+def screen(
+    brief: Annotated[Path, typer.Argument(metavar="BRIEF", help="The requirement, a TOML file.")],
+    out: Annotated[Path, typer.Option("--out", metavar="FOLDER", help="New folder for tables, figures and summary.")],
+) -> int:
+    """Screen a brief: every candidate evaluated, the ones that meet it ranked, drawn and summed up.
+
+    Writes candidates.csv, shortlist.csv, a polar plot per shortlisted cell, a property chart, summary.md and a copy of
+    the brief. Exit status 3 if nothing meets it: the summary then says what is in the way.
+    """
+    from homog.brief import read_brief
+    from homog.report import whole_folder, write_screening
+    from homog.screening import run_screen
+
+    asked = read_brief(brief)
+    with whole_folder(out) as place:
+        with _progress(asked.count, "screening") as advance:
+            found = run_screen(asked, progress=advance)
+        tell = _teller()
+        write_screening(found, place, version=__version__, brief_name=brief.name, progress=tell)
+        tell("")
+    if not found.met:
+        worst = max(found.falls, key=lambda fall: fall.missed)
+        print(
+            f"nothing of {asked.count:,} candidates meets the brief; most miss: {worst.limit.words}. See {out / 'summary.md'}"
+        )
+        return 3
+    best = found.shortlist.iloc[0]
+    print(
+        f"{found.met:,} of {asked.count:,} candidates meet the brief; first: {best['family']} (candidate {best['candidate']})."
+    )
+    print(f"Results: {out / 'summary.md'}")
+    return 0
+
+
+class _progress:
+    """A progress bar on a terminal, silence in a pipe; yields a function that takes the number just done."""
+
+    def __init__(self, total: int, words: str) -> None:
+        self.total, self.words, self.bar = total, words, None
+
+    def __enter__(self) -> Any:
+        if not sys.stderr.isatty():
+            return lambda done: None
+        from rich.console import Console
+        from rich.progress import BarColumn, MofNCompleteColumn, Progress, TextColumn, TimeRemainingColumn
+
+        self.bar: Any = Progress(
+            TextColumn("{task.description}"), BarColumn(), MofNCompleteColumn(), TimeRemainingColumn(),
+            console=Console(stderr=True), transient=True,
+        )  # fmt: skip
+        self.bar.start()
+        task = self.bar.add_task(self.words, total=self.total)
+        return lambda done: self.bar.advance(task, done)
+
+    def __exit__(self, *error: Any) -> None:
+        if self.bar is not None:
+            self.bar.stop()
+
+
+def _teller() -> Any:
+    """Return a function that shows what is being written, on a terminal only."""
+    if not sys.stderr.isatty():
+        return lambda step: None
+    return lambda step: print(f"\r\033[K{f'writing {step}' if step else ''}", end="", file=sys.stderr, flush=True)
+
+
+@app.callback(invoke_without_command=True)
+def _root(
+    context: typer.Context,
+    version: Annotated[bool, typer.Option("--version", help="Print the version and stop.")] = False,
+) -> None:
+    if version:
+        print(f"homog-cells {__version__}")
+        raise typer.Exit(0)
+
+
+def main(argv: Sequence[str] | None = None) -> int:
+    """Run the command line on `argv` (the process's own arguments if None) and return the exit status."""
+    try:
+        status = app(args=list(sys.argv[1:] if argv is None else argv), prog_name="homog", standalone_mode=False)
+        return int(status or 0)
+    except HomogError as error:
+        print(f"homog: {error}", file=sys.stderr)
+        return 2
+    except KeyboardInterrupt:
+        print("homog: stopped; nothing was written", file=sys.stderr)
+        return 130
+    except BrokenPipeError:
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        return 0
+    except Exception as error:
+        if hasattr(error, "format_message"):  # the option parser's own complaints
+            message = " ".join(str(error.format_message()).split())
+            if not message:
+                return 0
+            print(f"homog: {message} Try 'homog --help'.", file=sys.stderr)
+            return 2
+        if type(error).__name__ == "Abort":
+            return 130
+        import traceback
+
+        traceback.print_exc()
+        print(
+            f"homog: internal fault: {type(error).__name__}: {error}; please report it with the command",
+            file=sys.stderr,
+        )
+        return 1
+
+
+def entry() -> None:
+    """Run as the installed command."""
+    sys.exit(main())

@@ -1,0 +1,395 @@
+"""The one list of output quantities.
+
+A `Column` is a name with its unit, a meaning, the kinds of cell that have it, and a function of `Results`: the batch's
+tensors and what several columns share (compliance, extremes, bounds, reasons), each computed once and only if asked
+for. Registration in COLUMNS brings tables, `--json`, limits in a brief and the documentation along.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Mapping, Sequence
+from dataclasses import dataclass
+from functools import cached_property
+from types import MappingProxyType
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from homog import bounds, directional
+from homog.cell import Kind, Status
+from homog.effective import Effective, condition, soft_mode
+from homog.elements import WALL_SHEAR
+from homog.errors import unknown
+from homog.families import FAMILIES
+from homog.tensors import compliance_to_voigt, stiffness_to_voigt
+
+if TYPE_CHECKING:
+    import pandas as pd
+
+Array = NDArray[np.float64]
+Mask = NDArray[np.bool_]
+
+PLANAR: tuple[Kind, ...] = ("planar",)
+SHEET: tuple[Kind, ...] = ("sheet",)
+SPATIAL: tuple[Kind, ...] = ("spatial",)
+ALL: tuple[Kind, ...] = ("planar", "sheet", "spatial")
+
+SLENDER_CAUTION, SLENDER_REJECT = 0.05, 0.25
+LIGAMENT_CAUTION = 0.5
+COUPLING_CAUTION = 0.1
+REACH_CAUTION_DEG = 5.0
+SINGULAR_CAUTION = 1e-6
+CELLS_CAUTION = 4.0
+
+REASONS: Mapping[str, tuple[str, str]] = {
+    "not-finite": ("reject", "a value is not finite"),
+    "walls-merge": ("reject", "the joints run into each other and close the void beside a wall"),
+    "soft-mode": ("reject", "a uniform strain costs no energy: no Poisson's ratio exists, the mode is in soft_mode"),
+    "not-positive": ("reject", "the stiffness is not positive definite: the model is wrong there"),
+    "above-voigt": ("reject", "stiffer than the Voigt bound allows at this density (voigt_ratio over 1): the model or "
+                    "the density is wrong there"),
+    "above-hashin-shtrikman": ("reject", "stiffer than the Hashin-Shtrikman bound allows an isotropic cell "
+                               "(hashin_shtrikman_ratio over 1): the model or the density is wrong there"),
+    "nu-outside-limits": ("reject", "a Poisson's ratio outside what a stable material can have"),
+    "walls-thick": ("reject", f"a wall or strut is thicker than {SLENDER_REJECT:g} of its length: no beam any more"),
+    "beam-model": ("caution", f"a wall or strut is thicker than {SLENDER_CAUTION:g} of its length and joints are taken "
+                   "as points: at 0.1 a re-entrant cell comes out about 20 % too soft, at 0.2 about 43 %"),
+    "ligament-stubby": ("caution", f"the ligament is thicker than {LIGAMENT_CAUTION:g} of its length: no flexure strip"),
+    "sheet-model": ("caution", "bar-and-hinge model of a folded sheet: signs and ratios are sound, stiffness may be "
+                    "off by a factor of 2.6 against a full shell"),
+    "internal-mechanism": ("caution", "joints can move at no energy, although no uniform strain is free"),
+    "near-singular": ("caution", f"the softest strain is under {SINGULAR_CAUTION:g} of the stiffest: small flaws decide"),
+    "coupled": ("caution", "stretch along the axes comes with shear (eta1_12): a strip must be free to shear"),
+    "reach-short": ("caution", f"auxetic only within {REACH_CAUTION_DEG:g} deg of axis 1: alignment decides"),
+    "few-cells": ("caution", f"fewer than {CELLS_CAUTION:g} cells across the part: edges decide"),
+}  # fmt: skip
+
+
+class Results:
+    """What the columns of a batch share, each computed once.
+
+    Parameters
+    ----------
+    effective : Effective
+        A batch of any shape; everything here is flat, one entry a member in C order.
+    part : sequence of float
+        Size of the part along axes 1, 2, (3) in mm, if it is known.
+    """
+
+    def __init__(self, effective: Effective, part: Sequence[float] = ()) -> None:
+        self.effective, self.part = effective, tuple(part)
+        self.cell, self.kind, self.parent = effective.cell, effective.kind, effective.cell.parent
+        self.shape = effective.status.shape
+        self.count = int(effective.status.size)
+        self.status = effective.status.reshape(-1)
+        self.stiffness = effective.stiffness.reshape((self.count,) + effective.stiffness.shape[-2:])
+        self.density = effective.relative_density.reshape(-1)
+
+    def flat(self, values: NDArray[Any]) -> NDArray[Any]:
+        """Return values of the batch's shape (or that broadcast to it) as a flat array."""
+        return np.broadcast_to(values, self.shape).reshape(-1)
+
+    @cached_property
+    def size(self) -> Array:
+        """Repeat along each axis, (count, d)."""
+        size = self.cell.size
+        return np.broadcast_to(size, self.shape + size.shape[-1:]).reshape(self.count, -1)
+
+    @cached_property
+    def compliance(self) -> Array:
+        """Mandel compliance, NaN where there is none: impossible members and soft modes."""
+        sound = self.status == Status.OK
+        safe = np.where(sound[:, None, None], self.stiffness, np.eye(self.stiffness.shape[-1]))
+        return np.where(sound[:, None, None], np.linalg.inv(safe), np.nan)
+
+    @cached_property
+    def membrane(self) -> Array:
+        """Compliance as of a material, 1/MPa: plane (count, 3, 3), a sheet's over its slab, or spatial (6, 6)."""
+        if self.kind != "sheet":
+            return self.compliance
+        return np.asarray(self.compliance[:, :3, :3] * self.flat(self.cell.height)[:, None, None])
+
+    @cached_property
+    def voigt(self) -> Array:
+        """`membrane` in Voigt's form, engineering shear."""
+        return compliance_to_voigt(self.membrane)
+
+    @cached_property
+    def plate(self) -> Array:
+        """A sheet's [A B; B D], Voigt."""
+        return stiffness_to_voigt(self.stiffness, sheet=True)
+
+    @cached_property
+    def extremes(self) -> directional.Extremes:
+        """Extremes over every direction."""
+        if self.kind == "spatial":
+            return directional.space_extremes(self.membrane)
+        return directional.plane_extremes(self.membrane)
+
+    @cached_property
+    def bounds(self) -> bounds.Report:
+        """Values over bounds."""
+        modulus, poisson = self.parent.modulus_MPa, self.parent.poisson
+        if self.kind == "planar":
+            modulus, poisson = self.parent.wall_modulus_MPa, self.parent.wall_poisson
+        return bounds.report(self.stiffness, self.density, modulus, poisson, sheet=self.kind == "sheet")
+
+    def young(self, i: int) -> Array:
+        return np.asarray(1.0 / self.voigt[:, i, i])
+
+    def ratio(self, i: int, j: int) -> Array:
+        return np.asarray(-self.voigt[:, j, i] / self.voigt[:, i, i])
+
+    @cached_property
+    def hexagon(self) -> Array:
+        """Young's modulus of the regular hexagonal honeycomb of equal density, parent and model, MPa.
+
+        rho = 2 tau/sqrt3 - tau^2/3 (joints counted once) and E = (4/sqrt3) E_s tau^3 / (1 + (3 + B) tau^2) with
+        B = 2 (1 + nu_s)/kappa, 0 for `euler` (Gibson & Ashby 1997, ch. 4; from memory, confirmed).
+        """
+        tau = np.sqrt(3.0) * (1.0 - np.sqrt(np.clip(1.0 - self.density, 0.0, None)))
+        B = 0.0 if self.effective.model == "euler" else 2.0 * (1.0 + self.parent.wall_poisson) / WALL_SHEAR
+        return np.asarray(4.0 / np.sqrt(3.0) * self.parent.wall_modulus_MPa * tau**3 / (1.0 + (3.0 + B) * tau**2))
+
+    @cached_property
+    def cells_across(self) -> Array:
+        """Fewest whole repeats across the part, NaN if its size is not known."""
+        if not self.part:
+            return np.full(self.count, np.nan)
+        axes = min(len(self.part), self.cell.p)
+        return np.asarray((np.asarray(self.part[:axes]) / self.size[:, :axes]).min(axis=-1))
+
+    @cached_property
+    def soft_modes(self) -> list[str]:
+        modes = [""] * self.count
+        for i in np.flatnonzero(self.status == Status.MECHANISM):
+            modes[i] = soft_mode(self.stiffness[i], self.kind)
+        return modes
+
+    @cached_property
+    def reasons(self) -> dict[str, Mask]:
+        """Where each reason applies; a family's own rules come under their codes."""
+        found: dict[str, Mask] = {}
+        impossible = self.status == Status.IMPOSSIBLE
+        explained = np.zeros(self.count, bool)
+        if impossible.any() and self.cell.family in FAMILIES:
+            for code, mask in FAMILIES[self.cell.family].impossible(self.cell.parameters, self.parent).items():
+                found[code] = self.flat(mask) & impossible
+                explained |= found[code]
+        marked = self.flat(np.asarray(self.cell.status) == Status.IMPOSSIBLE)
+        found["walls-merge"] = impossible & marked & ~explained
+        found["not-finite"] = impossible & ~marked
+        kinds = {block.kind for block in self.cell.blocks}
+        beams, slenderness = bool(kinds & {"wall", "strut"}), self.flat(self.cell.slenderness)
+        live = self.status == Status.OK
+        found["soft-mode"] = self.status == Status.MECHANISM
+        found["not-positive"] = live & self.bounds.not_positive
+        found["above-voigt"] = live & self.bounds.above_voigt
+        found["above-hashin-shtrikman"] = live & self.bounds.above_hashin_shtrikman
+        found["nu-outside-limits"] = live & self.bounds.nu_outside
+        found["walls-thick"] = live & beams & (slenderness > SLENDER_REJECT)
+        found["beam-model"] = live & beams & (slenderness > SLENDER_CAUTION) & (slenderness <= SLENDER_REJECT)
+        found["ligament-stubby"] = live & ("hinge" in kinds) & (slenderness > LIGAMENT_CAUTION)
+        found["sheet-model"] = live & ("fold" in kinds)
+        found["internal-mechanism"] = live & (self.effective.mechanisms.reshape(-1) > 0)
+        found["near-singular"] = live & (condition(self._unitless()) < SINGULAR_CAUTION)
+        S = self.membrane
+        shear = np.abs(S[:, :2, -1]) / np.sqrt(np.abs(S[:, [0, 1], [0, 1]] * S[:, -1, -1, None]))
+        found["coupled"] = live & (shear.max(axis=-1) > COUPLING_CAUTION)
+        found["reach-short"] = live & (self.ratio(0, 1) < 0.0) & (self.extremes.auxetic_reach_deg < REACH_CAUTION_DEG)
+        found["few-cells"] = live & (self.cells_across < CELLS_CAUTION)
+        return found
+
+    def _unitless(self) -> Array:
+        """The stiffness, of a sheet scaled to unit diagonal since its entries have different units."""
+        if self.kind != "sheet":
+            return self.stiffness
+        size = np.sqrt(np.diagonal(self.stiffness, axis1=-2, axis2=-1))
+        return np.asarray(self.stiffness / (size[:, :, None] * size[:, None, :]))
+
+    def worst(self, level: str) -> Mask:
+        """Where any reason of a level applies; a family's own rules reject."""
+        masks = [mask for code, mask in self.reasons.items() if reason_level(code) == level]
+        return np.logical_or.reduce(masks) if masks else np.zeros(self.count, bool)
+
+    def reason_words(self) -> NDArray[Any]:
+        """Reason codes of each member, joined by blanks."""
+        codes = list(self.reasons)
+        bits = np.zeros(self.count, np.int64)
+        for bit, code in enumerate(codes):
+            bits |= self.reasons[code].astype(np.int64) << bit
+        patterns, where = np.unique(bits, return_inverse=True)
+        words = [" ".join(code for bit, code in enumerate(codes) if pattern >> bit & 1) for pattern in patterns]
+        return np.array(words, dtype=object)[where]
+
+
+def reason_level(code: str) -> str:
+    """Return `reject` or `caution`; a family's own rules reject."""
+    return REASONS[code][0] if code in REASONS else "reject"
+
+
+def reason_text(code: str) -> str:
+    """Return what a reason code means."""
+    if code in REASONS:
+        return REASONS[code][1]
+    for family in FAMILIES.values():
+        for rule in family.rules:
+            if rule.code == code:
+                return rule.words
+    raise unknown("reason", code, REASONS)
+
+
+@dataclass(frozen=True)
+class Column:
+    """One output quantity: name with unit, meaning, the kinds of cell that have it, and its function of Results."""
+
+    name: str
+    meaning: str
+    kinds: tuple[Kind, ...]
+    of: Callable[[Results], NDArray[Any]]
+    text: bool = False
+
+
+def _extreme(name: str) -> Callable[[Results], Array]:
+    return lambda r: np.asarray(getattr(r.extremes, name))
+
+
+def _plate(i: int, j: int) -> Callable[[Results], Array]:
+    return lambda r: np.asarray(r.plate[:, i, j])
+
+
+def _bending(i: int, j: int) -> Callable[[Results], Array]:
+    return lambda r: np.asarray(-r.compliance[:, 3 + j, 3 + i] / r.compliance[:, 3 + i, 3 + i])
+
+
+def _coupling_of_sheet(r: Results) -> Array:
+    size = np.sqrt(np.diagonal(r.stiffness, axis1=-2, axis2=-1))
+    return np.asarray((np.abs(r.stiffness[:, :3, 3:]) / (size[:, :3, None] * size[:, None, 3:])).max(axis=(-1, -2)))
+
+
+def _verdict(r: Results) -> NDArray[Any]:
+    return np.where(r.worst("reject"), "reject", np.where(r.worst("caution"), "caution", "ok")).astype(object)
+
+
+_ALL_COLUMNS = (
+    Column("relative_density", "solid share of the cell, joints counted once", ALL, lambda r: r.density),
+    Column("density_kg_m3", "density of the cell", ALL, lambda r: r.density * r.parent.density_kg_m3),
+    Column("E1_MPa", "Young's modulus along axis 1 (a sheet's over its slab)", ALL, lambda r: r.young(0)),
+    Column("E2_MPa", "Young's modulus along axis 2", ALL, lambda r: r.young(1)),
+    Column("E3_MPa", "Young's modulus along axis 3", SPATIAL, lambda r: r.young(2)),
+    Column("G12_MPa", "shear modulus in the plane 1-2", ALL, lambda r: 1.0 / r.voigt[:, -1, -1]),
+    Column("G13_MPa", "shear modulus in the plane 1-3", SPATIAL, lambda r: 1.0 / r.voigt[:, 4, 4]),
+    Column("G23_MPa", "shear modulus in the plane 2-3", SPATIAL, lambda r: 1.0 / r.voigt[:, 3, 3]),
+    Column("nu12", "-e2/e1 under a pull along 1", ALL, lambda r: r.ratio(0, 1)),
+    Column("nu21", "-e1/e2 under a pull along 2", ALL, lambda r: r.ratio(1, 0)),
+    Column("nu13", "-e3/e1 under a pull along 1", SPATIAL, lambda r: r.ratio(0, 2)),
+    Column("nu31", "-e1/e3 under a pull along 3", SPATIAL, lambda r: r.ratio(2, 0)),
+    Column("nu23", "-e3/e2 under a pull along 2", SPATIAL, lambda r: r.ratio(1, 2)),
+    Column("nu32", "-e2/e3 under a pull along 3", SPATIAL, lambda r: r.ratio(2, 1)),
+    Column("eta1_12", "gamma12/e1 under a pull along 1: stretch that shears", ALL,
+           lambda r: r.voigt[:, -1, 0] / r.voigt[:, 0, 0]),
+    *(Column(f"A{i + 1}{j + 1}_N_per_mm".replace("A33", "A66").replace("A13", "A16").replace("A23", "A26"),
+             "membrane stiffness of the sheet", SHEET, _plate(i, j)) for i in range(3) for j in range(i, 3)),
+    *(Column(f"D{i + 1}{j + 1}_N_mm".replace("D33", "D66").replace("D13", "D16").replace("D23", "D26"),
+             "bending stiffness of the sheet", SHEET, _plate(3 + i, 3 + j)) for i in range(3) for j in range(i, 3)),
+    Column("membrane_bending_coupling", "largest |B_ij| / sqrt(A_ii D_jj), z from mid-height", SHEET, _coupling_of_sheet),
+    Column("bending_nu12", "-k2/k1 under a moment along 1: negative is a dome, positive a saddle", SHEET, _bending(0, 1)),
+    Column("bending_nu21", "-k1/k2 under a moment along 2", SHEET, _bending(1, 0)),
+    Column("nu_min", "smallest Poisson's ratio of all directions", ALL, _extreme("nu_min")),
+    Column("nu_min_deg", "direction of nu_min from axis 1", ALL, _extreme("nu_min_deg")),
+    Column("nu_max", "largest Poisson's ratio of all directions", ALL, _extreme("nu_max")),
+    Column("nu_max_deg", "direction of nu_max from axis 1", ALL, _extreme("nu_max_deg")),
+    Column("E_min_MPa", "smallest Young's modulus of all directions", ALL, _extreme("E_min")),
+    Column("E_min_deg", "direction of E_min from axis 1", ALL, _extreme("E_min_deg")),
+    Column("E_max_MPa", "largest Young's modulus of all directions", ALL, _extreme("E_max")),
+    Column("E_max_deg", "direction of E_max from axis 1", ALL, _extreme("E_max_deg")),
+    Column("G_min_MPa", "smallest shear modulus of all directions", ALL, _extreme("G_min")),
+    Column("G_max_MPa", "largest shear modulus of all directions", ALL, _extreme("G_max")),
+    Column("auxetic_share", "share of directions with a negative Poisson's ratio", ALL, _extreme("auxetic_share")),
+    Column("auxetic_reach_deg", "how far the load may turn from axis 1 before nu reaches 0", ALL,
+           _extreme("auxetic_reach_deg")),
+    Column("anisotropy", "E_max over E_min", ALL, _extreme("anisotropy")),
+    Column("E1_per_hexagon", "E1 over that of the regular hexagonal honeycomb of equal density and parent", ALL,
+           lambda r: r.young(0) / r.hexagon),
+    Column("E1_per_bound", "E1 over the Voigt bound, relative density times the parent's modulus", ALL,
+           lambda r: r.young(0) / (r.density * r.parent.modulus_MPa)),
+    Column("E1_per_hashin_shtrikman", "E1 over the Hashin-Shtrikman bound (isotropic cells only)", ALL,
+           lambda r: r.bounds.young_ratio),
+    Column("voigt_ratio", "largest stiffness over the Voigt bound, of any strain", ALL, lambda r: r.bounds.voigt_ratio),
+    Column("hashin_shtrikman_ratio", "largest of K and G over the Hashin-Shtrikman bound (isotropic cells only)", ALL,
+           lambda r: r.bounds.hashin_shtrikman_ratio),
+    Column("slenderness", "largest thickness over length in the cell", ALL, lambda r: r.flat(r.cell.slenderness)),
+    Column("thinnest_mm", "thinnest wall, strut, ligament or sheet to be made", ALL, lambda r: r.flat(r.cell.thinnest)),
+    Column("cell_1_mm", "repeat along axis 1", ALL, lambda r: r.size[:, 0]),
+    Column("cell_2_mm", "repeat along axis 2", ALL, lambda r: r.size[:, 1]),
+    Column("cell_3_mm", "repeat along axis 3", SPATIAL, lambda r: r.size[:, 2]),
+    Column("largest_cell_mm", "largest repeat", ALL, lambda r: r.size[:, : r.cell.p].max(axis=-1)),
+    Column("height_mm", "thickness of the slab that holds the sheet", SHEET, lambda r: r.flat(r.cell.height)),
+    Column("cells_across", "fewest repeats across the part, if its size is given", ALL, lambda r: r.cells_across),
+    Column("mechanisms", "motions that cost no energy", ALL, lambda r: r.effective.mechanisms.reshape(-1)),
+    Column("soft_mode", "the uniform strain that costs no energy", ALL,
+           lambda r: np.array(r.soft_modes, dtype=object), text=True),
+    Column("verdict", "ok, caution or reject", ALL, _verdict, text=True),
+    Column("reasons", "codes of what speaks against the cell or its model", ALL, Results.reason_words, text=True),
+)  # fmt: skip
+
+COLUMNS: Mapping[str, Column] = MappingProxyType({column.name: column for column in _ALL_COLUMNS})
+
+
+def column(name: str) -> Column:
+    """Return the column of that name, or raise InputError with the nearest names."""
+    if name not in COLUMNS:
+        raise unknown("column", name, COLUMNS, "'homog families ID' lists what a family has")
+    return COLUMNS[name]
+
+
+def columns_of(kind: Kind) -> list[str]:
+    """Return the names of the columns that a kind of cell has, in order."""
+    return [name for name, found in COLUMNS.items() if kind in found.kinds]
+
+
+def parameter_columns(effective: Effective) -> dict[str, NDArray[Any]]:
+    """Return a family's parameters under their column names (with units), flat; a custom cell has its own names."""
+    family = FAMILIES.get(effective.cell.family)
+    named = {p.name: p.column for p in family.parameters} if family else {}
+    shape = effective.status.shape
+    return {
+        named.get(name, name): np.broadcast_to(value, shape).reshape(-1)
+        for name, value in effective.cell.parameters.items()
+    }
+
+
+def evaluate(effective: Effective, names: Sequence[str] | None = None, *, part: Sequence[float] = ()) -> dict[str, Any]:
+    """Return family, parameters and output quantities as flat arrays by column name.
+
+    Parameters
+    ----------
+    effective : Effective
+        A batch of any shape (m members).
+    names : sequence of str
+        Columns wanted, all of the cell's kind if not given; a column that the kind does not have is NaN.
+    part : sequence of float
+        Size of the part along the axes, mm, for `cells_across`.
+
+    Returns
+    -------
+    dict of str to ndarray of shape (m,)
+    """
+    results = Results(effective, part)
+    wanted = columns_of(effective.kind) if names is None else list(names)
+    out: dict[str, Any] = {"family": np.full(results.count, effective.cell.family, dtype=object)}
+    out.update(parameter_columns(effective))
+    with np.errstate(all="ignore"):
+        for name in wanted:
+            found = column(name)
+            has = effective.kind in found.kinds
+            out[name] = found.of(results) if has else np.full(results.count, np.nan)
+    return out
+
+
+def table(effective: Effective, names: Sequence[str] | None = None, *, part: Sequence[float] = ()) -> pd.DataFrame:
+    """Return `evaluate` as a DataFrame, one row a member."""
+    import pandas as pd
+
+    return pd.DataFrame(evaluate(effective, names, part=part))

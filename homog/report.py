@@ -1,0 +1,328 @@
+"""What is handed over: tables, figures, a summary in an engineer's words, and the provenance beside them.
+
+Files appear whole or not at all: a screening is written into a hidden folder beside its place and renamed at the end.
+Results that are already there are never overwritten unless that is asked for.
+"""
+
+from __future__ import annotations
+
+import dataclasses
+import hashlib
+import json
+import math
+import os
+import platform
+import shutil
+import tempfile
+from collections.abc import Callable, Iterator, Mapping, Sequence
+from contextlib import contextmanager
+from datetime import UTC, datetime
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from homog.brief import Brief
+from homog.cell import UnitCell
+from homog.columns import reason_text
+from homog.effective import homogenize
+from homog.errors import InputError, MissingExtra
+from homog.families import FAMILIES
+from homog.materials import CONFIRM, Material
+from homog.screening import Screening
+
+if TYPE_CHECKING:
+    import pandas as pd
+
+WHAT_IT_IS = (
+    "Linear elasticity at small strain of an infinite, perfect lattice at room temperature, computed from beam, bar and "
+    "hinge models. Screening only, not design evidence: where failure can hurt someone, local codes and licensed "
+    "practice decide."
+)
+TABLE_FORMAT = "%.8g"
+SHOWN = ("density_kg_m3", "E1_MPa", "nu12", "auxetic_reach_deg", "E1_per_hexagon")
+
+
+@contextmanager
+def whole_file(path: Path, *, overwrite: bool = False) -> Iterator[Path]:
+    """Yield a temporary path beside `path`, renamed to it if the block succeeds and removed if not.
+
+    Raises
+    ------
+    InputError
+        For a file that is there already (unless `overwrite`), or a folder that cannot be written to.
+    """
+    if path.exists() and not overwrite:
+        raise InputError(f"File '{path}' is there already; choose another name or add --overwrite")
+    try:
+        handle, name = tempfile.mkstemp(dir=path.parent, prefix=f".{path.stem}.", suffix=path.suffix)
+    except OSError as error:
+        raise InputError(f"Cannot write '{path}': {error.strerror}; choose another place") from None
+    os.close(handle)
+    temporary = Path(name)
+    try:
+        yield temporary
+        temporary.chmod(0o666 & ~_umask())
+        os.replace(temporary, path)
+    finally:
+        temporary.unlink(missing_ok=True)
+
+
+def _umask() -> int:
+    mask = os.umask(0)
+    os.umask(mask)
+    return mask
+
+
+@contextmanager
+def whole_folder(folder: Path) -> Iterator[Path]:
+    """Yield a hidden folder beside `folder`, renamed to it if the block succeeds and removed if not.
+
+    Raises
+    ------
+    InputError
+        For a folder that already holds something, or a place that cannot be written to.
+    """
+    if folder.exists() and (not folder.is_dir() or any(folder.iterdir())):
+        raise InputError(f"Folder '{folder}' already holds results; choose another name or remove it first")
+    try:
+        folder.parent.mkdir(parents=True, exist_ok=True)
+        temporary = Path(tempfile.mkdtemp(dir=folder.parent, prefix=f".{folder.name}."))
+    except OSError as error:
+        raise InputError(f"Cannot write to '{folder}': {error.strerror}; choose another place") from None
+    try:
+        yield temporary
+        temporary.chmod(0o777 & ~_umask())
+        if folder.exists():
+            folder.rmdir()
+        os.replace(temporary, folder)
+    finally:
+        shutil.rmtree(temporary, ignore_errors=True)
+
+
+def provenance(version: str, model: str, material: Material, **more: Any) -> dict[str, Any]:
+    """Return what a reader needs to make the same numbers again."""
+    values = {k: v for k, v in dataclasses.asdict(material).items() if v == v}  # a NaN yield is left out
+    return {
+        "program": "homog-cells",
+        "version": version,
+        "python": platform.python_version(),
+        "numpy": np.__version__,
+        "written": datetime.now(UTC).isoformat(timespec="seconds"),
+        "model": model,
+        "material": values,
+        "note": WHAT_IT_IS,
+        **more,
+    }
+
+
+def write_table(table: pd.DataFrame, path: Path, meta: Mapping[str, Any], *, overwrite: bool = False) -> None:
+    """Write a table as CSV or Parquet by its suffix, whole or not at all, and its provenance to NAME.meta.json.
+
+    Raises
+    ------
+    InputError
+        For another suffix, or a file that is there already.
+    MissingExtra
+        For Parquet without pyarrow.
+    """
+    if path.suffix not in (".csv", ".parquet"):
+        raise InputError(f"Table '{path.name}': allowed are .csv and .parquet")
+    with whole_file(path, overwrite=overwrite) as temporary:
+        if path.suffix == ".csv":
+            table.to_csv(temporary, index=False, float_format=TABLE_FORMAT)
+        else:
+            try:
+                table.to_parquet(temporary, index=False, compression="zstd")
+            except ImportError:
+                raise MissingExtra("Writing Parquet", "parquet") from None
+        with whole_file(path.with_name(path.stem + ".meta.json"), overwrite=True) as beside:
+            beside.write_text(json.dumps(meta, indent=2) + "\n", encoding="utf-8")
+
+
+def write_screening(
+    screening: Screening, place: Path, *, version: str, brief_name: str = "brief.toml",
+    progress: Callable[[str], None] = lambda step: None,
+) -> None:  # fmt: skip
+    """Write candidates, shortlist, a polar plot per shortlisted cell, the property chart, the summary and the brief.
+
+    `place` is a folder that exists, usually that of `whole_folder`; `progress` is told what is being written.
+    """
+    from homog import plots
+
+    brief = screening.brief
+    meta = provenance(
+        version, brief.model, brief.material, title=brief.title,
+        brief_sha256=hashlib.sha256(brief.text.encode()).hexdigest(), candidates=brief.count, meeting=screening.met,
+        seeds=sorted({c.seed for c in brief.candidates if c.sampled}),
+    )  # fmt: skip
+    progress("tables")
+    write_table(screening.candidates, place / "candidates.csv", meta)
+    write_table(screening.shortlist, place / "shortlist.csv", meta)
+    (place / brief_name).write_text(brief.text, encoding="utf-8")
+    shown = screening.shortlist if screening.met else screening.nearest
+    if len(shown):
+        progress("property chart")
+        chart = plots.property_chart(
+            screening.candidates, shown, material=brief.material, limits=brief.limits, title=brief.title
+        )
+        for suffix in (".svg", ".png"):
+            plots.save(chart, place / f"chart{suffix}")
+    figures = []
+    for row in screening.shortlist.to_dict("records"):
+        rank, family = row["rank"], FAMILIES[row["family"]]
+        progress(f"polar plot {rank} of {len(screening.shortlist)}")
+        figure = plots.polar_figure(
+            homogenize(rebuilt(row, brief), model=brief.model),
+            limits=brief.limits, title=f"{rank}. {family.title}, candidate {row['candidate']}",
+        )  # fmt: skip
+        stem = f"polar-{rank:02d}-{family.id}"
+        for suffix in (".svg", ".png"):
+            plots.save(figure, place / f"{stem}{suffix}")
+        figures.append(f"{stem}.png")
+    progress("summary")
+    (place / "summary.md").write_text(summary(screening, figures=figures, version=version), encoding="utf-8")
+
+
+def rebuilt(row: Mapping[str, Any], brief: Brief) -> UnitCell:
+    """Return the cell of one row of a table."""
+    family = FAMILIES[row["family"]]
+    return family.build({p.name: row[p.column] for p in family.parameters}, brief.material)
+
+
+def parameter_words(row: Mapping[str, Any]) -> str:
+    """Return a row's parameters in words: `inclined 10 mm, angle -30 deg`."""
+    words = []
+    for p in FAMILIES[row["family"]].parameters:
+        value = row[p.column]
+        words.append(f"{p.name} {value if p.choices else number(value)}" + (f" {p.unit}" if p.unit else ""))
+    return ", ".join(words)
+
+
+def number(value: Any) -> str:
+    """Return a number to four significant digits, plain where that reads well."""
+    x = float(value)
+    if not math.isfinite(x):
+        return "-"
+    if x == 0.0 or 1e-3 <= abs(x) < 1e5:
+        return f"{x:.4g}" if abs(x) < 1e4 else f"{x:.0f}"
+    return f"{x:.3e}"
+
+
+def markdown(header: Sequence[str], lines: Sequence[Sequence[str]]) -> str:
+    """Return a Markdown table."""
+    rows = [header, ["---"] * len(header), *lines]
+    return "\n".join("| " + " | ".join(row) + " |" for row in rows) + "\n"
+
+
+def _asked(brief: Brief) -> str:
+    m, p = brief.material, brief.process
+    lines = [[limit.words, limit.origin] for limit in brief.limits]
+    deep = "; walls deep along axis 3 (plane strain)" if m.deep else ""
+    goals = ", ".join(f"{'smallest' if g.better == 'min' else 'largest'} {g.column}" for g in brief.goals)
+    part = " x ".join(f"{s:g}" for s in brief.part)
+    return "\n".join([
+        "## What was asked\n",
+        markdown(["limit", "from"], lines) if lines else "No limits.\n",
+        f"- Parent: {m.name}, E {m.modulus_MPa:g} MPa, nu {m.poisson:g}, {m.density_kg_m3:g} kg/m3{deep}. {CONFIRM}",
+        f"- Process: {p.name}" + (f", wall +-{p.wall_tolerance_mm:g} mm" if p.wall_tolerance_mm else "")
+        + (f"; recommended wall {p.recommended_wall_mm:g} mm" if p.recommended_wall_mm else "") + ".",
+        *([f"- Part: {part} mm."] if part else []),
+        f"- Ranked by {goals}" + (", Pareto front" if brief.front else "") + f"; {brief.keep} kept"
+        + (f", at most {brief.per_family} of a family" if brief.per_family < brief.keep else "") + ".",
+        f"- Model: {brief.model}.\n",
+    ])  # fmt: skip
+
+
+def _shown_columns(brief: Brief, table: pd.DataFrame) -> list[str]:
+    names = [*(limit.column for limit in brief.limits), *(goal.column for goal in brief.goals), *SHOWN]
+    return [name for name in dict.fromkeys(names) if name in table]
+
+
+def _cells(table: pd.DataFrame, brief: Brief, *, misses: bool) -> str:
+    columns = _shown_columns(brief, table)
+    lines = []
+    for i, row in enumerate(table.to_dict("records"), 1):
+        miss = []
+        for limit in brief.limits:
+            amount = row[f"miss_{limit.column}"]
+            if not amount == 0.0:
+                miss.append(f"{limit.column} by {number(amount)}")
+        lines.append([str(i), str(row["candidate"]), row["family"], parameter_words(row),
+                      *(number(row[name]) for name in columns), row["reasons"].replace(" ", ", ") or "none",
+                      *(["; ".join(miss)] if misses else [])])  # fmt: skip
+    return markdown(["", "no.", "family", "parameters", *columns, "cautions", *(["misses"] if misses else [])], lines)
+
+
+def _falls(screening: Screening) -> str:
+    table = screening.candidates
+    lines = [[f.limit.words, f"{f.missed:,}", f"{f.missed / len(table):.1%}", f"{f.alone:,}"] for f in screening.falls]
+    rejected = int((table["verdict"] == "reject").sum())
+    lines.append(["verdict not reject", f"{rejected:,}", f"{rejected / len(table):.1%}", ""])
+    families = []
+    for name, group in table.groupby("family", sort=True):
+        families.append([str(name), f"{len(group):,}", f"{int(group['meets'].sum()):,}",
+                         *(f"{int((group['verdict'] == v).sum()):,}" for v in ("ok", "caution", "reject"))])  # fmt: skip
+    return (
+        "## How many fell to what\n\n" + markdown(["limit", "missed", "share", "missed this alone"], lines) + "\n"
+        + markdown(["family", "candidates", "meet", "ok", "caution", "reject"], families)
+    )  # fmt: skip
+
+
+def _tolerance(screening: Screening) -> str:
+    brief, table = screening.brief, screening.shortlist
+    tolerance = brief.process.wall_tolerance_mm
+    if not tolerance or not len(table):
+        return ""
+    walls = table["thinnest_mm"].to_numpy(float)
+    share = tolerance / walls.min()
+    low = max(1.0 - share, 0.0) ** 3 - 1.0
+    return (
+        f"## What the wall tolerance does\n\nA wall that is {tolerance:g} mm off everywhere, on the thinnest shortlisted "
+        f"wall of {walls.min():g} mm, is {share:.0%}. Where walls bend, stiffness goes with the cube of the wall: "
+        f"{low:+.0%} to {(1.0 + share) ** 3 - 1.0:+.0%}. Density moves by about {share:.0%}, Poisson's ratio little. "
+        "A uniform bias counts; scatter from wall to wall hardly does. Print and measure a coupon first.\n"
+    )
+
+
+def summary(screening: Screening, *, figures: Sequence[str], version: str) -> str:
+    """Return the summary of a screening in Markdown: asked, found, fallen, and what the numbers are and are not."""
+    brief, met = screening.brief, screening.met
+    parts = [f"# {brief.title}\n"]
+    if met:
+        kept = len(screening.shortlist)
+        parts.append(f"**{met:,} of {brief.count:,} candidates meet the brief**; the {kept} best are listed here.\n")
+    else:
+        parts.append(f"**Nothing meets the brief**: none of {brief.count:,} candidates.\n")
+    parts.append(_asked(brief))
+    if met:
+        parts += [
+            "## What was found\n",
+            _cells(screening.shortlist, brief, misses=False),
+            "![property chart](chart.png)\n",
+        ]
+        reasons = screening.shortlist["reasons"]
+    else:
+        parts.append("## What is in the way\n")
+        worst = sorted(screening.falls, key=lambda fall: -fall.missed)
+        parts += [f"- {f.limit.words}: missed by {f.missed:,}, by {f.alone:,} as the only miss" for f in worst]
+        parts.append(
+            "\nA limit that many candidates miss alone is the one to relax first, or to widen the ranges for.\n"
+        )
+        parts += ["## Nearest candidates\n", _cells(screening.nearest, brief, misses=True)]
+        if len(screening.nearest):
+            parts.append("![property chart](chart.png)\n")
+        reasons = screening.nearest["reasons"]
+    codes = sorted({code for text in reasons for code in text.split()})
+    if codes:
+        parts += ["## What the cautions mean\n", *(f"- `{code}`: {reason_text(code)}." for code in codes), ""]
+    parts += [_falls(screening), _tolerance(screening)]
+    if figures:
+        parts += ["## Every direction\n", *(f"![{name}]({name})\n" for name in figures)]
+    parts += [
+        "## What these numbers are, and are not\n",
+        f"{WHAT_IT_IS} Directions, signs and ratios are firmer than absolute stiffness; `reasons` in the tables says "
+        "what speaks against each cell. Columns are explained by `homog families ID`.\n",
+        f"homog-cells {version}.\n",
+    ]
+    return "\n".join(part for part in parts if part)
