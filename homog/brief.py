@@ -289,10 +289,10 @@ class _Reader:
             if found.text:
                 raise self.fault(f"column '{name}' holds text and takes no limit", "limits", name)
             if not isinstance(spec, dict) or not spec or set(spec) - {"min", "max"}:
-                raise self.fault(f"limit on '{name}' = {spec!r}; write {{ min = ... }} or {{ max = ... }} or both",
+                raise self.fault(f"limit on '{name}' = {spec!r}; write {{ min = ... }}, {{ max = ... }} or both",
                                  "limits", name)  # fmt: skip
-            low, high = (self._number(spec.get(key, default), f"{name} {key}", "limits", name) if key in spec else default
-                         for key, default in (("min", -math.inf), ("max", math.inf)))  # fmt: skip
+            given_bounds = {key: self._number(value, f"{name} {key}", "limits", name) for key, value in spec.items()}
+            low, high = given_bounds.get("min", -math.inf), given_bounds.get("max", math.inf)
             if low > high:
                 raise self.fault(f"limit on '{name}': min {low:g} is above max {high:g}", "limits", name)
             limits.append(Limit(name, low, high))
@@ -381,7 +381,7 @@ class _Reader:
             low, high = self._span(spec, {"from", "to", "count"}, name, index)
             count = spec["count"]
             if isinstance(count, bool) or not isinstance(count, int) or not 1 <= count <= 1_000_000:
-                raise self.fault(f"'{name}': count = {count!r}; allowed: a whole number from 1 (an empty range has none)",
+                raise self.fault(f"'{name}': count = {count!r}; allowed: a whole number from 1 (0 is an empty range)",
                                  "candidates", name, index)  # fmt: skip
             return tuple(np.linspace(low, high, count).tolist())
         values: Sequence[Any] = spec if isinstance(spec, list) else [spec]

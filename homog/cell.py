@@ -55,6 +55,11 @@ def _readonly(values: ArrayLike, dtype: Any = np.float64) -> NDArray[Any]:
     return array
 
 
+def _cross2(a: Array, b: Array) -> Array:
+    """Area spanned by the in-plane parts of two vectors (..., d)."""
+    return np.asarray(a[..., 0] * b[..., 1] - a[..., 1] * b[..., 0])
+
+
 @dataclass(frozen=True, eq=False)
 class Block:
     """Elements of one kind.
@@ -141,7 +146,7 @@ class UnitCell:
         if (self.d, self.p) not in KINDS or self.points.ndim < 2 or self.lattice.shape[-1] != self.d:
             raise InputError(
                 f"Unit cell with points {self.points.shape} and lattice {self.lattice.shape}: allowed are "
-                "(..., n, 2) with (..., 2, 2), (..., n, 3) with (..., 3, 3), and for sheets (..., n, 3) with (..., 2, 3)"
+                "(..., n, 2) with (..., 2, 2), (..., n, 3) with (..., 3, 3), for sheets (..., n, 3) with (..., 2, 3)"
             )
 
     @property
@@ -175,9 +180,8 @@ class UnitCell:
     @property
     def volume(self) -> Array:
         """Area (planar, sheet; mm2) or volume (mm3) of the cell, ndarray of shape (...)."""
-        if self.kind == "sheet":
-            a, b = self.lattice[..., 0, :2], self.lattice[..., 1, :2]
-            return np.asarray(np.abs(a[..., 0] * b[..., 1] - a[..., 1] * b[..., 0]))
+        if self.p == 2:
+            return np.asarray(np.abs(_cross2(self.lattice[..., 0, :], self.lattice[..., 1, :])))
         return np.asarray(np.abs(np.linalg.det(self.lattice)))
 
     @property

@@ -10,7 +10,8 @@ import json
 import math
 import os
 import sys
-from collections.abc import Mapping, Sequence
+from collections.abc import Callable, Iterator, Mapping, Sequence
+from contextlib import contextmanager
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated, Any
 
@@ -32,9 +33,9 @@ app = typer.Typer(
     add_completion=False,
     pretty_exceptions_enable=False,
     rich_markup_mode="rich",
-    help="From a requirement to a lattice or folded sheet: effective stiffness in every direction, screened and ranked.",
-    epilog="Start with 'homog families', then 'homog evaluate reentrant-honeycomb', then write a brief and 'homog screen' "
-    "it. Screening only, not design evidence: local codes and licensed practice decide.",
+    help="From a requirement to a lattice or folded sheet: stiffness in every direction, screened and ranked.",
+    epilog="Start with 'homog families', then 'homog evaluate reentrant-honeycomb', then write a brief and "
+    "'homog screen' it. Screening only, not design evidence: local codes and licensed practice decide.",
 )
 
 Assignments = Annotated[
@@ -65,11 +66,11 @@ def _console() -> Console:
     return Console(width=None if sys.stdout.isatty() else 140, highlight=False, soft_wrap=False)
 
 
-def _table(*headers: str, title: str = "", numeric: Sequence[str] = ()) -> Table:
+def _table(*headers: str, numeric: Sequence[str] = ()) -> Table:
     from rich import box
     from rich.table import Table
 
-    table = Table(box=box.SIMPLE_HEAD, title=title or None, title_justify="left", title_style="bold", pad_edge=False)
+    table = Table(box=box.SIMPLE_HEAD, pad_edge=False)
     for header in headers:
         table.add_column(header, justify="right" if header in numeric else "left", overflow="fold")
     return table
@@ -128,7 +129,8 @@ def _numbers(family_id: str, given: Mapping[str, str]) -> dict[str, Any]:
             if isinstance(error, InputError):
                 raise
             raise InputError(
-                f"Parameter '{name}' = {text!r} is not a number; write {name}=VALUE, in a sweep also LOW:HIGH:COUNT or A,B,C"
+                f"Parameter '{name}' = {text!r} is not a number; write {name}=VALUE, "
+                "in a sweep also LOW:HIGH:COUNT or A,B,C"
             ) from None
     return out
 
@@ -257,37 +259,23 @@ def evaluate(
 
     Example: homog evaluate reentrant-honeycomb angle=-30 thickness=1 --material "PA12 laser-sintered"
     """
+    import numpy as np
+
     from homog.columns import COLUMNS, reason_text
-    from homog.columns import evaluate as evaluated
-    from homog.report import WHAT_IT_IS, number
-    from homog.tensors import stiffness_to_voigt
+    from homog.report import WHAT_IT_IS, evaluation, number
 
     parent = _parent(material, modulus, poisson, solid_density, deep)
     effective = _one(id, parameters, parent, model)
-    row = {name: values[0] for name, values in evaluated(effective).items()}
-    cell = effective.cell
-    stiffness = stiffness_to_voigt(effective.stiffness[0], sheet=effective.kind == "sheet")
-    given = {name: _plain(values.reshape(-1)[0]) for name, values in cell.parameters.items()}
-    quantities = {name: _plain(row[name]) for name in COLUMNS if name in row}
+    card = evaluation(effective)
+    given, quantities, stiffness = card["parameters"], card["columns"], np.array(card["stiffness"], float)
     if as_json:
-        from dataclasses import asdict
-
-        print(json.dumps({
-            "family": cell.family,
-            "parameters": given,
-            "material": {key: _plain(value) for key, value in asdict(parent).items()},
-            "model": model,
-            "relative_density": _plain(row["relative_density"]),
-            "mechanisms": int(row["mechanisms"]),
-            "stiffness": [[_plain(x) for x in line] for line in stiffness],
-            "columns": quantities,
-        }, indent=2))  # fmt: skip
+        print(json.dumps(card, indent=2))
         return 0
     from homog.families import family
 
     console = _console()
     found = family(id)
-    console.print(f"{found.title}  ({id}):  {row['verdict']}", style="bold")
+    console.print(f"{found.title}  ({id}):  {quantities['verdict']}", style="bold")
     units = {p.name: p.unit for p in found.parameters}
     console.print(", ".join(f"{name} {value if isinstance(value, str) else f'{value:g}'} {units[name]}".strip()
                             for name, value in given.items()))  # fmt: skip
@@ -303,29 +291,18 @@ def evaluate(
     unit = "[A B; B D] in N/mm, N, N mm" if effective.kind == "sheet" else "MPa"
     axes = ["11", "22", "12"] if effective.kind == "planar" else ["11", "22", "33", "23", "13", "12"]
     axes = ["N11", "N22", "N12", "M11", "M22", "M12"] if effective.kind == "sheet" else axes
-    table = _table("", *axes, title=f"stiffness, {unit} (Voigt, engineering shear)", numeric=axes)
-    floor = 1e-12 * float(abs(stiffness).max())
+    console.print(f"stiffness, {unit} (Voigt, engineering shear)", style="bold")
+    table = _table("", *axes, numeric=axes)
+    floor = 1e-12 * float(np.abs(stiffness).max())
     for axis, line in zip(axes, stiffness, strict=True):
         table.add_row(axis, *(number(x if abs(x) > floor else 0.0) for x in line))
     console.print(table)
-    if row["soft_mode"]:
-        console.print(f"soft mode: {row['soft_mode']}")
-    for code in str(row["reasons"]).split():
+    if quantities["soft_mode"]:
+        console.print(f"soft mode: {quantities['soft_mode']}")
+    for code in quantities["reasons"].split():
         console.print(f"{code}: {reason_text(code)}")
     console.print(WHAT_IT_IS, style="dim")
     return 0
-
-
-def _plain(value: Any) -> Any:
-    """Return a JSON value: numbers as they are, no value (NaN) as null."""
-    if isinstance(value, str):
-        return str(value)
-    if isinstance(value, bool):
-        return value
-    x = float(value)
-    if not math.isfinite(x):
-        return None
-    return int(x) if hasattr(value, "dtype") and value.dtype.kind in "iu" else x
 
 
 @app.command()
@@ -439,41 +416,31 @@ def screen(
         tell("")
     if not found.met:
         worst = max(found.falls, key=lambda fall: fall.missed)
-        print(
-            f"nothing of {asked.count:,} candidates meets the brief; most miss: {worst.limit.words}. See {out / 'summary.md'}"
-        )
+        print(f"nothing of {asked.count:,} candidates meets the brief; most miss: {worst.limit.words}.")
+        print(f"Results: {out / 'summary.md'}")
         return 3
     best = found.shortlist.iloc[0]
     print(
-        f"{found.met:,} of {asked.count:,} candidates meet the brief; first: {best['family']} (candidate {best['candidate']})."
+        f"{found.met:,} of {asked.count:,} candidates meet the brief; "
+        f"first: {best['family']} (candidate {best['candidate']})."
     )
     print(f"Results: {out / 'summary.md'}")
     return 0
 
 
-class _progress:
-    """A progress bar on a terminal, silence in a pipe; yields a function that takes the number just done."""
+@contextmanager
+def _progress(total: int, words: str) -> Iterator[Callable[[int], None]]:
+    """Show a progress bar on a terminal, nothing in a pipe; yield a function that takes the number just done."""
+    if not sys.stderr.isatty():
+        yield lambda done: None
+        return
+    from rich.console import Console
+    from rich.progress import BarColumn, MofNCompleteColumn, Progress, TextColumn, TimeRemainingColumn
 
-    def __init__(self, total: int, words: str) -> None:
-        self.total, self.words, self.bar = total, words, None
-
-    def __enter__(self) -> Any:
-        if not sys.stderr.isatty():
-            return lambda done: None
-        from rich.console import Console
-        from rich.progress import BarColumn, MofNCompleteColumn, Progress, TextColumn, TimeRemainingColumn
-
-        self.bar: Any = Progress(
-            TextColumn("{task.description}"), BarColumn(), MofNCompleteColumn(), TimeRemainingColumn(),
-            console=Console(stderr=True), transient=True,
-        )  # fmt: skip
-        self.bar.start()
-        task = self.bar.add_task(self.words, total=self.total)
-        return lambda done: self.bar.advance(task, done)
-
-    def __exit__(self, *error: Any) -> None:
-        if self.bar is not None:
-            self.bar.stop()
+    columns = (TextColumn("{task.description}"), BarColumn(), MofNCompleteColumn(), TimeRemainingColumn())
+    with Progress(*columns, console=Console(stderr=True), transient=True) as bar:
+        task = bar.add_task(words, total=total)
+        yield lambda done: bar.advance(task, done)
 
 
 def _teller() -> Any:

@@ -42,6 +42,8 @@ REACH_CAUTION_DEG = 5.0
 SINGULAR_CAUTION = 1e-6
 CELLS_CAUTION = 4.0
 
+VOIGT_PAIRS = (("11", 0, 0), ("12", 0, 1), ("16", 0, 2), ("22", 1, 1), ("26", 1, 2), ("66", 2, 2))
+
 REASONS: Mapping[str, tuple[str, str]] = {
     "not-finite": ("reject", "a value is not finite"),
     "walls-merge": ("reject", "the joints run into each other and close the void beside a wall"),
@@ -53,13 +55,13 @@ REASONS: Mapping[str, tuple[str, str]] = {
                                "(hashin_shtrikman_ratio over 1): the model or the density is wrong there"),
     "nu-outside-limits": ("reject", "a Poisson's ratio outside what a stable material can have"),
     "walls-thick": ("reject", f"a wall or strut is thicker than {SLENDER_REJECT:g} of its length: no beam any more"),
-    "beam-model": ("caution", f"a wall or strut is thicker than {SLENDER_CAUTION:g} of its length and joints are taken "
+    "beam-model": ("caution", f"a wall or strut is thicker than {SLENDER_CAUTION:g} of its length, with joints "
                    "as points: at 0.1 a re-entrant cell comes out about 20 % too soft, at 0.2 about 43 %"),
-    "ligament-stubby": ("caution", f"the ligament is thicker than {LIGAMENT_CAUTION:g} of its length: no flexure strip"),
-    "sheet-model": ("caution", "bar-and-hinge model of a folded sheet: signs and ratios are sound, stiffness may be "
-                    "off by a factor of 2.6 against a full shell"),
+    "ligament-stubby": ("caution", f"the ligament is over {LIGAMENT_CAUTION:g} of its length thick: no flexure strip"),
+    "sheet-model": ("caution", "bar-and-hinge model of a folded sheet: signs and ratios are sound, stiffness "
+                    "may be off by a factor of 2.6 against a full shell"),
     "internal-mechanism": ("caution", "joints can move at no energy, although no uniform strain is free"),
-    "near-singular": ("caution", f"the softest strain is under {SINGULAR_CAUTION:g} of the stiffest: small flaws decide"),
+    "near-singular": ("caution", f"the softest strain is under {SINGULAR_CAUTION:g} of the stiffest: flaws decide"),
     "coupled": ("caution", "stretch along the axes comes with shear (eta1_12): a strip must be free to shear"),
     "reach-short": ("caution", f"auxetic only within {REACH_CAUTION_DEG:g} deg of axis 1: alignment decides"),
     "few-cells": ("caution", f"fewer than {CELLS_CAUTION:g} cells across the part: edges decide"),
@@ -215,13 +217,17 @@ class Results:
 
     def reason_words(self) -> NDArray[Any]:
         """Reason codes of each member, joined by blanks."""
-        codes = list(self.reasons)
-        bits = np.zeros(self.count, np.int64)
-        for bit, code in enumerate(codes):
-            bits |= self.reasons[code].astype(np.int64) << bit
-        patterns, where = np.unique(bits, return_inverse=True)
-        words = [" ".join(code for bit, code in enumerate(codes) if pattern >> bit & 1) for pattern in patterns]
-        return np.array(words, dtype=object)[where]
+        return listed(self.reasons, self.count)
+
+
+def listed(masks: Mapping[str, Mask], count: int) -> NDArray[Any]:
+    """Return for each of `count` members the names whose mask is true there, joined by blanks (object array)."""
+    bits = np.zeros(count, np.int64)
+    for bit, mask in enumerate(masks.values()):
+        bits |= mask.astype(np.int64) << bit
+    patterns, where = np.unique(bits, return_inverse=True)
+    words = [" ".join(name for bit, name in enumerate(masks) if pattern >> bit & 1) for pattern in patterns]
+    return np.array(words, dtype=object)[where]
 
 
 def reason_level(code: str) -> str:
@@ -263,7 +269,7 @@ def _bending(i: int, j: int) -> Callable[[Results], Array]:
     return lambda r: np.asarray(-r.compliance[:, 3 + j, 3 + i] / r.compliance[:, 3 + i, 3 + i])
 
 
-def _coupling_of_sheet(r: Results) -> Array:
+def _sheet_coupling(r: Results) -> Array:
     size = np.sqrt(np.diagonal(r.stiffness, axis1=-2, axis2=-1))
     return np.asarray((np.abs(r.stiffness[:, :3, 3:]) / (size[:, :3, None] * size[:, None, 3:])).max(axis=(-1, -2)))
 
@@ -289,12 +295,10 @@ _ALL_COLUMNS = (
     Column("nu32", "-e2/e3 under a pull along 3", SPATIAL, lambda r: r.ratio(2, 1)),
     Column("eta1_12", "gamma12/e1 under a pull along 1: stretch that shears", ALL,
            lambda r: r.voigt[:, -1, 0] / r.voigt[:, 0, 0]),
-    *(Column(f"A{i + 1}{j + 1}_N_per_mm".replace("A33", "A66").replace("A13", "A16").replace("A23", "A26"),
-             "membrane stiffness of the sheet", SHEET, _plate(i, j)) for i in range(3) for j in range(i, 3)),
-    *(Column(f"D{i + 1}{j + 1}_N_mm".replace("D33", "D66").replace("D13", "D16").replace("D23", "D26"),
-             "bending stiffness of the sheet", SHEET, _plate(3 + i, 3 + j)) for i in range(3) for j in range(i, 3)),
-    Column("membrane_bending_coupling", "largest |B_ij| / sqrt(A_ii D_jj), z from mid-height", SHEET, _coupling_of_sheet),
-    Column("bending_nu12", "-k2/k1 under a moment along 1: negative is a dome, positive a saddle", SHEET, _bending(0, 1)),
+    *(Column(f"A{n}_N_per_mm", "membrane stiffness of the sheet", SHEET, _plate(i, j)) for n, i, j in VOIGT_PAIRS),
+    *(Column(f"D{n}_N_mm", "bending stiffness", SHEET, _plate(3 + i, 3 + j)) for n, i, j in VOIGT_PAIRS),
+    Column("membrane_bending_coupling", "largest |B_ij| / sqrt(A_ii D_jj), z from mid-height", SHEET, _sheet_coupling),
+    Column("bending_nu12", "-k2/k1 under a moment along 1: negative a dome, positive a saddle", SHEET, _bending(0, 1)),
     Column("bending_nu21", "-k1/k2 under a moment along 2", SHEET, _bending(1, 0)),
     Column("nu_min", "smallest Poisson's ratio of all directions", ALL, _extreme("nu_min")),
     Column("nu_min_deg", "direction of nu_min from axis 1", ALL, _extreme("nu_min_deg")),

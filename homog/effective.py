@@ -160,8 +160,9 @@ def homogenize(cell: UnitCell, *, model: str = DEFAULT_MODEL) -> Effective:
             f"Cell '{cell.family}' has a value that is not finite or walls of no length; check its parameters"
         )
     if not shape and status[0] == Status.MECHANISM:
+        mode = soft_mode(effective.stiffness, cell.kind)
         raise MechanismError(
-            f"Cell '{cell.family}' has no resistance to the uniform strain {soft_mode(effective.stiffness, cell.kind)}; "
+            f"Cell '{cell.family}' has no resistance to the uniform strain {mode}; "
             "brace it, stiffen its joints, or read its stiffness from a batch of one"
         )
     return effective
@@ -241,6 +242,6 @@ def soft_mode(stiffness: Array, kind: Kind) -> str:
 
 def condition(stiffness: Array) -> Array:
     """Return smallest over largest eigenvalue of Mandel stiffness matrices (..., v, v); NaN in, NaN out."""
-    bad = ~np.isfinite(stiffness).all(axis=(-1, -2))
+    bad = np.asarray(~np.isfinite(stiffness).all(axis=(-1, -2)))
     values = np.linalg.eigvalsh(np.where(bad[..., None, None], np.eye(stiffness.shape[-1]), stiffness))
     return np.where(bad, math.nan, values[..., 0] / values[..., -1])

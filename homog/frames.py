@@ -9,6 +9,7 @@ S must be finite and positive definite.
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from functools import cache
 
 import numpy as np
@@ -19,15 +20,6 @@ from homog.tensors import Array
 
 STRETCH, CROSS, SHEAR = range(3)
 """The components S nnnn, S nnmm and S nmnm."""
-GOALS = {
-    "nu_min": (CROSS, 1.0),
-    "nu_max": (CROSS, -1.0),
-    "E_min": (STRETCH, 1.0),
-    "E_max": (STRETCH, -1.0),
-    "G_min": (SHEAR, 1.0),
-    "G_max": (SHEAR, -1.0),
-}
-"""What is sought: the component, and the sign with which it is as large as possible."""
 
 PATCHES, PER_PATCH = 32, 32
 """The grid over the half sphere, in equal patches of near points; a point lies within 0.064 rad of every direction."""
@@ -39,14 +31,21 @@ that it bends by at most 4^2/2 of its range (Bernstein) and loses at most 4 x 0.
 FIRST_RADIUS, LAST_RADIUS = 0.15, 1e-7
 """Longest turn of one step in radians, and the one at which a climb gives up."""
 STEPS = 25
-GAIN_TOLERANCE = 1e-10
+GAIN_TOLERANCE = 1e-8
 """A climb ends with the step that promises less than this (relative); what it still misses is far less."""
 ROUND_TOLERANCE = 1e-9
 """The grid is searched again with the nu that was found until nu moves by less than this (relative to 1 + |nu|)."""
 TIE_TOLERANCE = 1e-10
 """Extremes this close (relative for E and G, relative to 1 + |nu| for nu) are a tie: the smallest angle is reported."""
 
+SHALLOW, DEEP = 1.25, 4.0
+"""Where the least S nnnn is this much less than the grid's least, hollows of S up to so many times the least are tried."""
+
 UPPER = np.triu_indices(6)
+Starts = tuple[NDArray[np.intp], Array]
+"""Members (p,) and frames (p, 3, 3)."""
+Climbs = tuple[NDArray[np.intp], Array, Array]
+"""Members (p,), heights (p,) and frames (p, 3, 3)."""
 
 
 def extremes(S: Array, zero: float) -> Array:
@@ -66,67 +65,89 @@ def extremes(S: Array, zero: float) -> Array:
     """
     _, weights = _grid()
     values = (S[:, *UPPER] @ weights.reshape(len(UPPER[0]), -1)).reshape(len(S), 7, -1).transpose(1, 0, 2)
-    stretch, fields = values[0], (values[:1], values[1:4], values[4:])
-    found = {name: _seek(S, stretch, fields[field], field, sign) for name, (field, sign) in GOALS.items()}
+    none = np.broadcast_to(0.0, values[0].shape)
+    stretch, cross, shear = (values[0], none, none), tuple(values[1:4]), tuple(values[4:])
+
+    E_max, E_max_deg, climbs = _seek(S, values[0], stretch, STRETCH, -1.0)
+    E_min, E_min_deg, _ = _seek(S, values[0], stretch, STRETCH, 1.0)
+    G_max, _, _ = _seek(S, values[0], shear, SHEAR, -1.0)
+    G_min, _, _ = _seek(S, values[0], shear, SHEAR, 1.0)
+    # where S nnnn all but vanishes nu may peak between the points of the grid: start there as well
+    who, height, _ = climbs
+    hollow = (-values[0].min(axis=1) < SHALLOW * E_max)[who] & (height > DEEP * E_max[who])
+    nu_max, nu_max_deg, _ = _seek(S, values[0], cross, CROSS, -1.0, (who[hollow], climbs[2][hollow]))
+    nu_min, nu_min_deg, _ = _seek(S, values[0], cross, CROSS, 1.0, (who[hollow], climbs[2][hollow]))
 
     mean, half, mixed = values[1:4, :, :-1]
     swing = np.sqrt(half**2 + mixed**2)
-    above = mean - zero * stretch.max(axis=1)[:, None]
-    share = np.arccos(np.clip(np.where(swing > 0.0, -above / swing, -np.sign(above)), -1.0, 1.0)).mean(axis=1) / np.pi
+    above = mean - zero * values[0].max(axis=1)[:, None]
+    cosine = np.clip(np.where(swing > 0.0, -above / swing, -np.sign(above)), -1.0, 1.0)
+    share = np.arccos(cosine).mean(axis=1) / np.pi
 
-    (nu_min, nu_min_deg), (nu_max, nu_max_deg) = found["nu_min"], found["nu_max"]
-    (soft, E_min_deg), (stiff, E_max_deg) = found["E_min"], found["E_max"]
-    G_min, G_max = 0.25 / found["G_min"][0], -0.25 / found["G_max"][0]
-    return np.array(
-        [-nu_min, nu_min_deg, nu_max, nu_max_deg, 1.0 / soft, E_min_deg, -1.0 / stiff, E_max_deg, G_min, G_max, share]
-    )
+    nu = (-nu_min, nu_min_deg, nu_max, nu_max_deg)
+    return np.array([*nu, 1.0 / E_min, E_min_deg, -1.0 / E_max, E_max_deg, 0.25 / G_min, -0.25 / G_max, share])
 
 
-def _seek(S: Array, stretch: Array, field: Array, component: int, sign: float) -> tuple[Array, Array]:
-    """Largest sign x component (for nu of sign x S nnmm/S nnnn) of each member and its angle in degrees, (c,) each.
+def _seek(
+    S: Array, stretch: Array, field: Sequence[Array], component: int, sign: float, extra: Starts | None = None
+) -> tuple[Array, Array, Climbs]:
+    """Largest sign x component of each member (for nu of sign x S nnmm/S nnnn), its angle in degrees, and all climbs.
 
-    stretch (c, g) is S nnnn on the grid, field (1 or 3, c, g) the component: mean, half difference and mixed part.
+    stretch (c, g) is S nnnn on the grid, field the mean, half difference and mixed part (c, g) of the component. The
+    search starts from the grid and, if given, from n of the extra frames.
     """
     frames, _ = _grid()
-    centre = sign * field[0]
-    swing = np.sqrt(field[1] ** 2 + field[2] ** 2) if len(field) == 3 else np.zeros((1, 1))
+    mean, half, mixed = field
+    centre, swing = sign * mean, np.sqrt(half**2 + mixed**2)
     score = (centre + swing) / stretch if component == CROSS else centre + swing
-    everyone = np.arange(len(S))
-    reached = [(everyone, score[:, -1], np.zeros(len(S)))]  # axis 1 is always tried, so that it wins a tie
-
     level = score.max(axis=1)
+    everyone = np.arange(len(S))
+    # axis 1 is always tried, so that it wins a tie
+    reached = [(everyone, score[:, -1], np.broadcast_to(np.eye(3), S.shape[:1] + (3, 3)))]
+    if extra is not None:
+        who, R = extra
+        height, R = _climb(S[who], _best_across(S[who], R, sign), component, sign)
+        reached.append((who, height, R))
+        np.maximum.at(level, who, height)
+
     tried = np.zeros(score.shape, bool)
     searched = everyone
     while searched.size:
-        top, bottom = centre[searched] + swing[searched % len(swing)], centre[searched] - swing[searched % len(swing)]
-        if component == CROSS:
-            lift = level[searched, None] * stretch[searched]
-            top, bottom = top - lift, bottom - lift
+        lift = level[searched, None] * stretch[searched] if component == CROSS else 0.0
+        top, bottom = (centre + swing)[searched] - lift, (centre - swing)[searched] - lift
         row, point = _starts(top[:, :-1], bottom[:, :-1].min(axis=1))
-        who = searched[row]
-        fresh = ~tried[who, point]
-        who, point = who[fresh], point[fresh]
-        if not who.size:
-            break
+        fresh = ~tried[searched[row], point]
+        who, point = searched[row[fresh]], point[fresh]
         tried[who, point] = True
-        n, m, k = frames[point].transpose(1, 0, 2)
-        if len(field) == 3:
-            turn = 0.5 * np.arctan2(sign * field[2, who, point], sign * field[1, who, point])[:, None]
-            m, k = np.cos(turn) * m + np.sin(turn) * k, np.cos(turn) * k - np.sin(turn) * m
-        height, cosine = _climb(S[who], np.stack([n, m, k], axis=1), component, sign)
-        reached.append((who, height, np.degrees(np.arccos(np.minimum(np.abs(cosine), 1.0)))))
-        if component != CROSS:
-            break
+        turn = np.arctan2(sign * mixed[who, point], sign * half[who, point])
+        height, R = _climb(S[who], _turned(frames[point], 0.5 * turn), component, sign)
+        reached.append((who, height, R))
         before = level.copy()
         np.maximum.at(level, who, height)
-        searched = np.flatnonzero(level > before + ROUND_TOLERANCE * (1.0 + np.abs(before)))
+        moved = level > before + ROUND_TOLERANCE * (1.0 + np.abs(before))
+        searched = np.flatnonzero(moved) if component == CROSS else everyone[:0]
 
-    who, height, degrees = (np.concatenate(x) for x in zip(*reached, strict=True))
+    who, height, R = (np.concatenate(x) for x in zip(*reached, strict=True))
     best, angle = np.full(len(S), -np.inf), np.full(len(S), np.inf)
     np.maximum.at(best, who, height)
     tie = height >= (best - TIE_TOLERANCE * (np.abs(best) + (component == CROSS)))[who]
-    np.minimum.at(angle, who[tie], degrees[tie])
-    return best, angle
+    np.minimum.at(angle, who[tie], np.degrees(np.arccos(np.minimum(np.abs(R[tie, 0, 0]), 1.0))))
+    return best, angle, (who, height, R)
+
+
+def _turned(frames: Array, angle: Array) -> Array:
+    """Frames (p, 3, 3) turned about their n by angles (p,) in radians."""
+    n, m, k = frames.transpose(1, 0, 2)
+    c, s = np.cos(angle)[:, None], np.sin(angle)[:, None]
+    return np.stack([n, c * m + s * k, c * k - s * m], axis=1)
+
+
+def _best_across(S: Array, frames: Array, sign: float) -> Array:
+    """Frames (p, 3, 3) turned about their n until sign x S nnmm is largest."""
+    n, m, k = frames.transpose(1, 0, 2)
+    row = np.einsum("pij,pj->pi", S, _pair(n, n))
+    mixed, half = (row * _pair(m, k)).sum(axis=1), 0.5 * (row * (_pair(m, m) - _pair(k, k))).sum(axis=1)
+    return _turned(frames, 0.5 * np.arctan2(sign * mixed, sign * half))
 
 
 def _starts(top: Array, bottom: Array) -> tuple[NDArray[np.intp], NDArray[np.intp]]:
@@ -146,7 +167,7 @@ def _starts(top: Array, bottom: Array) -> tuple[NDArray[np.intp], NDArray[np.int
 
 
 def _climb(S: Array, frames: Array, component: int, sign: float) -> tuple[Array, Array]:
-    """Newton's method from frames (p, 3, 3): the height reached (as in `_seek`) and n's component along axis 1."""
+    """Newton's method from frames (p, 3, 3): the height reached (p,), as in `_seek`, and the frames there."""
     R = frames.copy()
     local = _local(S, R)
     radius = np.full(len(S), FIRST_RADIUS)
@@ -158,6 +179,8 @@ def _climb(S: Array, frames: Array, component: int, sign: float) -> tuple[Array,
             f = local[live, STRETCH]
             F = F - (F[:, :1] / f[:, :1]) * f
             size = f[:, 0] + size
+        if component == STRETCH:  # a turn about n changes nothing
+            F[:, 4], F[:, 8:] = -size, 0.0
         step, gain = _step(F, radius[live])
         trial = _cayley(step) @ R[live]
         there = _local(S[live], trial)
@@ -171,22 +194,33 @@ def _climb(S: Array, frames: Array, component: int, sign: float) -> tuple[Array,
         if not live.size:
             break
     height = sign * local[:, component, 0]
-    return (height / local[:, STRETCH, 0] if component == CROSS else height), R[:, 0, 0]
+    return (height / local[:, STRETCH, 0] if component == CROSS else height), R
 
 
 def _step(F: Array, radius: Array) -> tuple[Array, Array]:
     """Turn (p, 3) that raises F (value, gradient, Hessian: (p, 10)) and the gain (p,) it promises.
 
-    Newton's step along each principal axis of the Hessian, uphill also where F is convex, and no longer than the radius:
-    an axis about which F hardly changes must not shorten the step about the others.
+    Newton's step where F is concave and the step stays within the radius. Elsewhere the same along each principal axis
+    of the Hessian, but uphill also where F is convex, and cut off one by one: an axis about which F hardly changes must
+    not shorten the step about the others.
     """
-    H = F[:, np.array([[4, 9, 8], [9, 5, 7], [8, 7, 6]])]
-    curvature, axes = np.linalg.eigh(H)
-    slope = np.einsum("pi,pij->pj", F[:, 1:4], axes)
-    flat = np.finfo(float).eps * np.abs(curvature).max(axis=1, keepdims=True) + np.finfo(float).tiny
-    step = np.clip(slope / (np.abs(curvature) + flat), -radius[:, None], radius[:, None])
-    gain = (slope * step + 0.5 * curvature * step**2).sum(axis=1)
-    return np.einsum("pij,pj->pi", axes, step), gain
+    g = F[:, 1:4]
+    a, b, c, d, e, f = F[:, 4:].T
+    be, ad, cf = d * f - b * e, e * f - a * d, d * e - c * f
+    adjugate = np.array([[b * c - d * d, cf, be], [cf, a * c - e * e, ad], [be, ad, a * b - f * f]])
+    det = a * adjugate[0, 0] + f * cf + e * be
+    step = -np.einsum("ijp,pj->pi", adjugate, g) / np.where(det < 0.0, det, 1.0)[:, None]
+    concave = (a < 0.0) & (adjugate[2, 2] > 0.0) & (det < 0.0)
+    rest = np.flatnonzero(~concave | ((step * step).sum(axis=1) > radius * radius))
+    if rest.size:
+        curvature, axes = np.linalg.eigh(F[rest[:, None, None], np.array([[4, 9, 8], [9, 5, 7], [8, 7, 6]])])
+        slope = np.einsum("pi,pij->pj", g[rest], axes)
+        flat = np.finfo(float).eps * np.abs(curvature).max(axis=1, keepdims=True) + np.finfo(float).tiny
+        along = np.clip(slope / (np.abs(curvature) + flat), -radius[rest, None], radius[rest, None])
+        step[rest] = np.einsum("pij,pj->pi", axes, along)
+    x, y, z = step.T
+    bend = a * x * x + b * y * y + c * z * z + 2.0 * (d * y * z + e * x * z + f * x * y)
+    return step, (g * step).sum(axis=1) + 0.5 * bend
 
 
 def _cayley(turn: Array) -> Array:

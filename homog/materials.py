@@ -214,7 +214,7 @@ def _material_rows() -> tuple[MaterialRow, ...]:
 
 @cache
 def _materials() -> dict[str, Material]:
-    values: dict[str, dict[str, float]] = {}
+    values: dict[str, dict[str, Any]] = {}
     for row in _material_rows():
         values.setdefault(row["name"], {})[row["quantity"]] = row["value"]
     return {name: Material(name, **quantities) for name, quantities in values.items()}

@@ -24,22 +24,24 @@ import numpy as np
 
 from homog.brief import Brief
 from homog.cell import UnitCell
-from homog.columns import reason_text
-from homog.effective import homogenize
+from homog.columns import COLUMNS, evaluate, reason_text
+from homog.effective import Effective, homogenize
 from homog.errors import InputError, MissingExtra
 from homog.families import FAMILIES
 from homog.materials import CONFIRM, Material
-from homog.screening import Screening
+from homog.screening import Screening, records
+from homog.tensors import stiffness_to_voigt
 
 if TYPE_CHECKING:
     import pandas as pd
 
 WHAT_IT_IS = (
-    "Linear elasticity at small strain of an infinite, perfect lattice at room temperature, computed from beam, bar and "
-    "hinge models. Screening only, not design evidence: where failure can hurt someone, local codes and licensed "
+    "Linear elasticity at small strain of an infinite, perfect lattice at room temperature, computed from beam, bar "
+    "and hinge models. Screening only, not design evidence: where failure can hurt someone, local codes and licensed "
     "practice decide."
 )
 TABLE_FORMAT = "%.8g"
+ZERO = 1e-12
 SHOWN = ("density_kg_m3", "E1_MPa", "nu12", "auxetic_reach_deg", "E1_per_hexagon")
 
 
@@ -116,6 +118,38 @@ def provenance(version: str, model: str, material: Material, **more: Any) -> dic
     }
 
 
+def evaluation(effective: Effective) -> dict[str, Any]:
+    """Return everything about the first member of a batch as plain JSON values, no value (NaN) as None.
+
+    Keys: family, parameters, material, model, relative_density, mechanisms, stiffness (Voigt, engineering shear; MPa,
+    or for sheets [A B; B D] in N/mm, N, N mm) and columns (every output quantity by name).
+    """
+    row = {name: values[0] for name, values in evaluate(effective).items()}
+    member = effective.stiffness.reshape((-1,) + effective.stiffness.shape[-2:])[0]
+    stiffness = stiffness_to_voigt(member, sheet=effective.kind == "sheet")
+    cell = effective.cell
+    return {
+        "family": cell.family,
+        "parameters": {name: _plain(values.reshape(-1)[0]) for name, values in cell.parameters.items()},
+        "material": {key: _plain(value) for key, value in dataclasses.asdict(cell.parent).items()},
+        "model": effective.model,
+        "relative_density": _plain(row["relative_density"]),
+        "mechanisms": int(row["mechanisms"]),
+        "stiffness": [[_plain(x) for x in line] for line in stiffness],
+        "columns": {name: _plain(row[name]) for name in COLUMNS if name in row},
+    }
+
+
+def _plain(value: Any) -> Any:
+    if isinstance(value, str):
+        return str(value)
+    if isinstance(value, bool | np.bool_):
+        return bool(value)
+    if isinstance(value, int | np.integer):
+        return int(value)
+    return float(value) if math.isfinite(value) else None
+
+
 def write_table(table: pd.DataFrame, path: Path, meta: Mapping[str, Any], *, overwrite: bool = False) -> None:
     """Write a table as CSV or Parquet by its suffix, whole or not at all, and its provenance to NAME.meta.json.
 
@@ -169,7 +203,7 @@ def write_screening(
         for suffix in (".svg", ".png"):
             plots.save(chart, place / f"chart{suffix}")
     figures = []
-    for row in screening.shortlist.to_dict("records"):
+    for row in records(screening.shortlist):
         rank, family = row["rank"], FAMILIES[row["family"]]
         progress(f"polar plot {rank} of {len(screening.shortlist)}")
         figure = plots.polar_figure(
@@ -200,11 +234,13 @@ def parameter_words(row: Mapping[str, Any]) -> str:
 
 
 def number(value: Any) -> str:
-    """Return a number to four significant digits, plain where that reads well."""
+    """Return a number to four significant digits, plain where that reads well; round-off of a zero reads as 0."""
     x = float(value)
+    if abs(x) < ZERO:
+        return "0"
     if not math.isfinite(x):
         return "-"
-    if x == 0.0 or 1e-3 <= abs(x) < 1e5:
+    if 1e-3 <= abs(x) < 1e5:
         return f"{x:.4g}" if abs(x) < 1e4 else f"{x:.0f}"
     return f"{x:.3e}"
 
@@ -242,7 +278,7 @@ def _shown_columns(brief: Brief, table: pd.DataFrame) -> list[str]:
 def _cells(table: pd.DataFrame, brief: Brief, *, misses: bool) -> str:
     columns = _shown_columns(brief, table)
     lines = []
-    for i, row in enumerate(table.to_dict("records"), 1):
+    for i, row in enumerate(records(table), 1):
         miss = []
         for limit in brief.limits:
             amount = row[f"miss_{limit.column}"]
@@ -261,8 +297,8 @@ def _falls(screening: Screening) -> str:
     lines.append(["verdict not reject", f"{rejected:,}", f"{rejected / len(table):.1%}", ""])
     families = []
     for name, group in table.groupby("family", sort=True):
-        families.append([str(name), f"{len(group):,}", f"{int(group['meets'].sum()):,}",
-                         *(f"{int((group['verdict'] == v).sum()):,}" for v in ("ok", "caution", "reject"))])  # fmt: skip
+        verdicts = [int((group["verdict"] == verdict).sum()) for verdict in ("ok", "caution", "reject")]
+        families.append([str(name), *(f"{count:,}" for count in (len(group), int(group["meets"].sum()), *verdicts))])
     return (
         "## How many fell to what\n\n" + markdown(["limit", "missed", "share", "missed this alone"], lines) + "\n"
         + markdown(["family", "candidates", "meet", "ok", "caution", "reject"], families)
@@ -278,10 +314,12 @@ def _tolerance(screening: Screening) -> str:
     share = tolerance / walls.min()
     low = max(1.0 - share, 0.0) ** 3 - 1.0
     return (
-        f"## What the wall tolerance does\n\nA wall that is {tolerance:g} mm off everywhere, on the thinnest shortlisted "
-        f"wall of {walls.min():g} mm, is {share:.0%}. Where walls bend, stiffness goes with the cube of the wall: "
-        f"{low:+.0%} to {(1.0 + share) ** 3 - 1.0:+.0%}. Density moves by about {share:.0%}, Poisson's ratio little. "
-        "A uniform bias counts; scatter from wall to wall hardly does. Print and measure a coupon first.\n"
+        "## What the wall tolerance does\n\n"
+        f"A wall that is {tolerance:g} mm off everywhere is {share:.0%} of the thinnest shortlisted wall "
+        f"({walls.min():g} mm). "
+        f"Where walls bend, stiffness goes with the cube of the wall: {low:+.0%} to {(1.0 + share) ** 3 - 1.0:+.0%}. "
+        f"Density moves by about {share:.0%}, Poisson's ratio little. A uniform bias counts; scatter from wall to wall "
+        "hardly does. Make and measure a coupon first.\n"
     )
 
 

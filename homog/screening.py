@@ -15,7 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from homog.brief import Brief, Candidates, Goal, Limit
-from homog.columns import COLUMNS, evaluate
+from homog.columns import COLUMNS, evaluate, listed
 from homog.effective import homogenize
 from homog.errors import InputError
 
@@ -103,26 +103,22 @@ def rows(brief: Brief, source: Candidates, given: dict[str, Any]) -> dict[str, A
                                brief.material)  # fmt: skip
     out = evaluate(homogenize(cell, model=brief.model), part=brief.part)
     count = len(out["family"])
-    bits = np.zeros(count, np.int64)
-    for bit, limit in enumerate(brief.limits):
+    missed = {}
+    for limit in brief.limits:
         miss = limit.miss(out.get(limit.column, np.full(count, np.nan)))
         out[f"miss_{limit.column}"] = miss
-        bits |= (~(miss == 0.0)).astype(np.int64) << bit
-    out["meets"] = (bits == 0) & (out["verdict"] != "reject")
-    patterns, where = np.unique(bits, return_inverse=True)
-    names = [limit.column for limit in brief.limits]
-    words = [" ".join(name for i, name in enumerate(names) if pattern >> i & 1) for pattern in patterns]
-    out["misses"] = np.array(words, dtype=object)[where]
+        missed[limit.column] = ~(miss == 0.0)
+    out["misses"] = listed(missed, count)
+    out["meets"] = (out["misses"] == "") & (out["verdict"] != "reject")
     return out
 
 
 def ordered(table: pd.DataFrame) -> pd.DataFrame:
     """Return the table with its columns in reading order: who, verdict, parameters, quantities, misses."""
-    parameters = [
-        name for name in table if name not in COLUMNS and name not in LEADING and not name.startswith("miss_")
-    ]
-    quantities = [name for name in COLUMNS if name in table and name not in LEADING]
-    misses = [name for name in table if name.startswith("miss_")]
+    names = [str(name) for name in table.columns]
+    misses = [name for name in names if name.startswith("miss_")]
+    parameters = [name for name in names if name not in COLUMNS and name not in LEADING and name not in misses]
+    quantities = [name for name in COLUMNS if name in names and name not in LEADING]
     return table[[*LEADING, *parameters, *quantities, *misses]]
 
 
@@ -130,6 +126,11 @@ def _sort_keys(table: pd.DataFrame, goals: Sequence[Goal]) -> NDArray[np.float64
     """Return the goals' values as columns to be minimised, NaN last."""
     values = [table[g.column].to_numpy(float) * (1.0 if g.better == "min" else -1.0) for g in goals]
     return np.nan_to_num(np.stack(values, axis=1), nan=np.inf, posinf=np.inf, neginf=-np.inf)
+
+
+def records(table: pd.DataFrame) -> list[dict[str, Any]]:
+    """Return the rows of a table as dictionaries by column name."""
+    return [{str(name): value for name, value in row.items()} for row in table.to_dict("records")]
 
 
 def shortlist(meeting: pd.DataFrame, brief: Brief) -> pd.DataFrame:

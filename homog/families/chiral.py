@@ -74,7 +74,7 @@ FAMILIES = (
             Parameter("ligament_y", "mm", 0.05, 1000.0, 10.0, "ligament and centre distance along axis 2"),
             Parameter("node_radius", "mm", 0.005, 400.0, 2.5, "radius of the node's centre line"),
             Parameter("thickness", "mm", 0.001, 200.0, 0.8, "thickness of ligaments and ring", made=True),
-            Parameter("node", "", 0.0, 0.0, "rigid", "solid disc (rigid) or ring of the same wall", choices=("rigid", "ring")),
+            Parameter("node", "", 0.0, 0.0, "rigid", "solid disc or ring of the same wall", choices=("rigid", "ring")),
         ),
         "orthotropic", "after Prall & Lakes 1997, Int. J. Mech. Sci. 39, 305; moduli derived", _anti_tetrachiral,
         rules=(

@@ -2,8 +2,9 @@
 
 Panel edges and short diagonals are bars with the areas of Filipov, Liu, Tachi, Schenk & Paulino 2017 (Int. J. Solids
 Struct. 124, 26; from memory), creases have the stiffness D / crease_length per length (length scale of Lechenault,
-Thiria & Adda-Bedia 2014), panels bend with (0.55 - 0.42 sum(alpha)/pi) D (d/t)^(1/3) (same paper, from memory, constants
-not confirmed). Such a model can be far from a full shell in absolute stiffness; what is robust is the kinematics.
+Thiria & Adda-Bedia 2014), panels bend with (0.55 - 0.42 sum(alpha)/pi) D (d/t)^(1/3), alpha the acute corners (same
+paper, from memory, constants not confirmed). In absolute stiffness such a model can be far from a full shell; what is
+robust is the kinematics.
 """
 
 from __future__ import annotations
@@ -91,10 +92,13 @@ def _miura(p: Values, material: Material) -> UnitCell:
     stiffness = np.concatenate([np.asarray(k + zero)[..., None] * four for k in (crease, crease, panel)], -1)
     names = [[vertex(*end) for end in element] for element in bars]
     folded = [[vertex(*end) for end in element] for element in folds]
+    blocks = (
+        Block("bar", *topology(names), {"rigidity": rigidity}),
+        Block("fold", *topology(folded), {"stiffness": stiffness}),
+    )
+    solid, slenderness = 4.0 * a * b * np.sin(g) * t, t / np.minimum(a, b) + zero
     return UnitCell(
-        points, lattice,
-        (Block("bar", *topology(names), {"rigidity": rigidity}), Block("fold", *topology(folded), {"stiffness": stiffness})),
-        parent=material, solid=4.0 * a * b * np.sin(g) * t, slenderness=t / np.minimum(a, b) + zero, height=H + t + zero,
+        points, lattice, blocks, parent=material, solid=solid, slenderness=slenderness, height=H + t + zero
     )  # fmt: skip
 
 
@@ -111,14 +115,14 @@ FAMILIES = (
             Parameter("side_a", "mm", 0.5, 1000.0, 10.0, "panel side a, along axis 2 and up"),
             Parameter("side_b", "mm", 0.5, 1000.0, 10.0, "panel side b, the zigzag crease in the plane"),
             Parameter("sector_angle", "deg", 20.0, 88.0, 60.0, "panel angle gamma between a and b"),
-            Parameter("fold_angle", "deg", 2.0, 88.0, 45.0, "theta, of the panels to the plane of the sheet; 0 is flat"),
+            Parameter("fold_angle", "deg", 2.0, 88.0, 45.0, "theta, panel to the plane of the sheet; 0 is flat"),
             Parameter("sheet_thickness", "mm", 0.01, 20.0, 0.2, "thickness of the sheet", made=True),
-            Parameter("crease_length", "mm", 0.1, 2000.0, 10.0, "crease length scale L*, often 25 to 100 sheet thicknesses"),
+            Parameter("crease_length", "mm", 0.1, 2000.0, 10.0, "crease length scale L*, often 25 to 100 thicknesses"),
         ),
         "orthotropic", "Schenk & Guest 2013, PNAS 110, 3276; Wei, Guo, Dudte, Liang & Mahadevan 2013, PRL 110, 215501",
         _miura,
         rules=(
-            Rule("sheet-thick", "the panels are not thin; sheet_thickness must be under a twentieth of the shorter side",
+            Rule("sheet-thick", "panels are not thin; sheet_thickness must be under a twentieth of the shorter side",
                  lambda p, m: p["sheet_thickness"] > np.minimum(p["side_a"], p["side_b"]) / 20.0),
             Rule("panel-long", "the panel is too long for a truss of bars (a bar's area would be negative); "
                  "bring side_a and side_b sin(sector_angle) nearer to each other", _panel_too_long),

@@ -1,0 +1,247 @@
+"""The page of one cell: dials of nu, E and G, its shape at scale with axes and a scale bar, and what its columns say."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from homog import directional
+from homog.cell import Status
+from homog.columns import Results, column, evaluate
+from homog.directional import Extremes
+from homog.effective import Effective, soft_mode
+from homog.errors import InputError
+from homog.families import FAMILIES
+from homog.plots import paint
+from homog.plots.dial import TURN, Panel, Scale, draw_panel
+from homog.plots.style import (
+    GREY,
+    HEAD,
+    INK,
+    PLAIN,
+    SMALL,
+    TITLE,
+    Limit,
+    axes_at,
+    blank_figure,
+    bounds_of,
+    foot,
+    number,
+    symbol,
+    value_of,
+    wrapped,
+    write,
+)
+
+if TYPE_CHECKING:
+    from matplotlib.figure import Figure
+
+Array = NDArray[np.float64]
+
+WIDTH, HEIGHT = 10.4, 7.4
+"""Of the page in inches: landscape, so that it prints at full size on A4 and letter paper."""
+LINE = 0.15
+"""From one small line to the next, inches."""
+SAME = 1e-3
+"""Two curves that differ less than this share are drawn as one."""
+READINGS = {
+    "planar": ("relative_density", "density_kg_m3", "E1_MPa", "E2_MPa", "G12_MPa", "nu12", "nu21", "eta1_12", "nu_min",
+               "nu_max", "auxetic_share", "auxetic_reach_deg", "anisotropy", "slenderness", "cell_1_mm", "cell_2_mm"),
+    "sheet": ("relative_density", "E1_MPa", "E2_MPa", "G12_MPa", "nu12", "nu21", "bending_nu12", "bending_nu21",
+              "A11_N_per_mm", "A22_N_per_mm", "D11_N_mm", "D22_N_mm", "auxetic_reach_deg", "height_mm", "cell_1_mm",
+              "cell_2_mm"),
+    "spatial": ("relative_density", "density_kg_m3", "E1_MPa", "E2_MPa", "E3_MPa", "G12_MPa", "nu12", "nu13", "nu23",
+                "nu_min", "nu_max", "auxetic_share", "anisotropy", "slenderness", "cell_1_mm", "cell_2_mm"),
+}  # fmt: skip
+"""What stands beside the cell."""
+
+
+def polar_figure(effective: Effective, *, limits: Sequence[Limit] = (), title: str = "", cell_label: str = "") -> Figure:
+    """Return the page of one cell: E, nu and G against direction, its shape at scale, and its main columns.
+
+    Parameters
+    ----------
+    effective : Effective
+        One cell: batch shape () or a batch of one.
+    limits : sequence of Limit
+        Requirements. Those on E, nu, G and the reach are drawn, with hairs on the side that is out; all are listed
+        with what the cell has.
+    title, cell_label : str
+        Heading and the line below it; the family's title and its parameters if not given.
+
+    Returns
+    -------
+    Figure
+        Of a planar or spatial cell: nu, E, G, in the plane 1-2; in space a second curve is of the plane through axis 1
+        at 45 deg between axes 2 and 3, where it differs. Of a sheet: nu, bending nu and E over its slab.
+
+    Raises
+    ------
+    InputError
+        More cells than one; a cell that cannot exist or is a mechanism; a limit on an unknown column.
+    """
+    results = Results(effective)
+    family = effective.cell.family
+    if results.count != 1:
+        raise InputError(f"A polar figure is of one cell and this batch has {results.count}; draw each by itself")
+    if results.status[0] == Status.MECHANISM:
+        raise InputError(
+            f"Cell '{family}' has no polar plot: the uniform strain {soft_mode(results.stiffness[0], effective.kind)} "
+            "costs no energy, so no Poisson's ratio exists; brace the cell or stiffen its joints"
+        )
+    if results.status[0] != Status.OK or not np.isfinite(results.membrane).all():
+        raise InputError(f"Cell '{family}' has no polar plot: it cannot exist or has no compliance; check its parameters")
+    for limit in limits:
+        column(limit.column)
+    panels = {"planar": _plane_panels, "sheet": _sheet_panels, "spatial": _space_panels}[effective.kind](results)
+    names = dict.fromkeys((*READINGS[effective.kind], "verdict", "reasons", *(limit.column for limit in limits)))
+    values = {name: value[0] for name, value in evaluate(effective, list(names)).items()}
+
+    figure = blank_figure(WIDTH, HEIGHT)
+    _head(figure, effective, title, cell_label)
+    places = ((0.15, 1.22, 4.95), (5.2, 1.0, 2.5), (7.78, 1.0, 2.5))  # left, bottom and width of each dial
+    for panel, (x, y, width) in zip(panels, places, strict=True):
+        _place(figure, panel, x, y, width, limits, values)
+    _shape(figure, effective)
+    _readings(figure, effective, values, limits, panels)
+    parent = effective.cell.parent
+    foot(figure, f"{effective.model} model, parent {parent.name} (E {number(parent.modulus_MPa, 'MPa')}, "
+                 f"ν {number(parent.poisson)})")  # fmt: skip
+    return figure
+
+
+# ------------------------------------------------------------------------------------------------ what is drawn
+
+
+def _panels(C: Array, e: Extremes, reach: float, others: Sequence[tuple[Array, Array, Array]] = ()) -> list[Panel]:
+    """nu, E and G over the plane 1-2 of a stiffness whose extremes there are known; `others` are further curves."""
+    nu, E, G = (of(C, angle=TURN) for of in (directional.poisson, directional.young, directional.shear))
+    g_min, g_max = (float(np.degrees(TURN[k])) for k in (G.argmin(), G.argmax()))
+    return [
+        Panel("nu", "Poisson's ratio ν", "", (nu, *(o[0] for o in others)), {"nu12": 0.0, "nu21": 90.0},
+              ("nu_min", "nu_max"), (float(e.nu_min), float(e.nu_min_deg)), (float(e.nu_max), float(e.nu_max_deg)),
+              signed=True, reach=reach, notes=_auxetic_words(e, reach)),
+        Panel("E", "Young's modulus E", "MPa", (E, *(o[1] for o in others)), {"E1_MPa": 0.0, "E2_MPa": 90.0},
+              ("E_min_MPa", "E_max_MPa"), (float(e.E_min), float(e.E_min_deg)), (float(e.E_max), float(e.E_max_deg))),
+        Panel("G", "Shear modulus G", "MPa", (G, *(o[2] for o in others)), {"G12_MPa": 0.0},
+              ("G_min_MPa", "G_max_MPa"), (float(e.G_min), g_min), (float(e.G_max), g_max)),
+    ]  # fmt: skip
+
+
+def _auxetic_words(e: Extremes, reach: float) -> tuple[str, ...]:
+    share = float(e.auxetic_share)
+    if share <= 0.0:
+        return ("auxetic in no direction",)
+    if share >= 1.0:
+        return ("auxetic in every direction",)
+    if reach <= 0.0:
+        return (f"not auxetic along axis 1, but in {number(100.0 * share)} % of the directions",)
+    return (f"auxetic up to ±{number(reach)}° from axis 1 (shaded) and in {number(100.0 * share)} % of the directions",)
+
+
+def _plane_panels(results: Results) -> list[Panel]:
+    e = directional.plane_extremes(results.membrane[0])
+    return _panels(np.linalg.inv(results.membrane[0]), e, float(e.auxetic_reach_deg))
+
+
+def _sheet_panels(results: Results) -> list[Panel]:
+    nu, E, _ = _plane_panels(results)
+    bending = results.compliance[0, 3:, 3:]
+    e = directional.plane_extremes(bending)
+    curve = directional.poisson(np.linalg.inv(bending), angle=TURN)
+    below = Panel("bending_nu", "Bending Poisson's ratio", "", (curve,), {"bending_nu12": 0.0, "bending_nu21": 90.0}, (),
+                  (float(e.nu_min), float(e.nu_min_deg)), (float(e.nu_max), float(e.nu_max_deg)), signed=True,
+                  notes=("inside the bold ring a dome, outside a saddle",))  # fmt: skip
+    return [nu, below, E]
+
+
+def _space_panels(results: Results) -> list[Panel]:
+    S, C = results.compliance[0], results.stiffness[0]
+    keep = [0, 1, 5]
+    e = directional.plane_extremes(S[np.ix_(keep, keep)])
+    q, along = np.array([0.0, 1.0, 1.0]) / math.sqrt(2.0), np.array([1.0, 0.0, 0.0])
+    n = np.cos(TURN)[:, None] * along + np.sin(TURN)[:, None] * q
+    m = np.cos(TURN)[:, None] * q - np.sin(TURN)[:, None] * along
+    slanted = (directional.poisson(C, direction=n, across=m), directional.young(C, direction=n),
+               directional.shear(C, direction=n, across=m))  # fmt: skip
+    reach = float(e.auxetic_reach_deg)
+    panels = _panels(C, e, reach, [slanted])
+    if all(np.abs(np.subtract(*p.curves)).max() <= SAME * np.abs(p.curves).max() for p in panels):
+        return _panels(C, e, reach)
+    return panels
+
+
+# ------------------------------------------------------------------------------------------------ where it stands
+
+
+def _head(figure: Figure, effective: Effective, title: str, cell_label: str) -> None:
+    cell = effective.cell
+    family = FAMILIES.get(cell.family)
+    write(figure, 0.2, HEIGHT - 0.16, title or (family.title if family else cell.family), fontsize=TITLE,
+          fontweight="bold", gid="title")  # fmt: skip
+    if not cell_label:
+        units = {p.name: p.unit for p in family.parameters} if family else {}
+        parts = []
+        for name, value in cell.parameters.items():
+            plain = np.ravel(value)[0]
+            said = str(plain) if isinstance(plain, str) else number(float(plain), units.get(name, "").replace("deg", "°"))
+            parts.append(f"{name.replace('_', ' ')} {said}")
+        cell_label = f"{cell.family}: {', '.join(parts)}" if parts else cell.family
+    lines = wrapped(cell_label, WIDTH - 0.4, PLAIN)
+    write(figure, 0.2, HEIGHT - 0.46, "\n".join(lines[:2]), fontsize=PLAIN, color=GREY, gid="cell-label")
+
+
+def _place(figure: Figure, panel: Panel, x: float, y: float, width: float, limits: Sequence[Limit],
+           values: dict[str, Any]) -> None:  # fmt: skip
+    height = width * 1.13 / 1.22
+    ax = axes_at(figure, x, y, width, height, panel.name)
+    required = next((limit.low for limit in limits if limit.column == "auxetic_reach_deg"), -math.inf)
+    scale = draw_panel(ax, panel, limits, required if panel.name == "nu" and required > 0.0 else math.nan)
+    top = y + height + 0.26
+    write(figure, x + 0.1, top, panel.title + (f", {panel.unit}" if panel.unit else ""), fontsize=HEAD,
+          fontweight="bold")  # fmt: skip
+    lines = [line for text in _caption(panel, scale) for line in wrapped(text, width - 0.1)]
+    write(figure, x + 0.1, y - 0.04, "\n".join(lines), linespacing=1.35, gid=f"caption-{panel.name}")
+
+
+def _caption(panel: Panel, scale: Scale) -> list[str]:
+    places = 2 if panel.signed else None
+
+    def said(at: tuple[float, float]) -> str:
+        return f"{number(at[0], panel.unit, places=places)} at {number(round(at[1], 1))}°"
+
+    lines = ["bold ring: ν = 0; inside it the cell is auxetic"] if panel.name == "nu" else []
+    if panel.level:
+        lines.append(f"the same in all directions, {number(panel.highest[0], panel.unit, places=places)}")
+    else:
+        lines.append(f"▲ highest {said(panel.highest)}   ▽ lowest {said(panel.lowest)}")
+    lines += panel.notes
+    if scale.logarithmic:
+        lines.append("logarithmic radius")
+    return lines
+
+
+def _shape(figure: Figure, effective: Effective) -> None:
+    cell = effective.cell if not effective.cell.shape else effective.cell.at((0,) * len(effective.cell.shape))
+    x, y, width, height = 5.3, 3.85, 2.75, 2.65
+    if cell.kind == "planar":
+        paint.draw_plane(axes_at(figure, x, y, width, height, "cell"), cell, width / height)
+    elif cell.kind == "sheet":
+        paint.draw_sheet(axes_at(figure, x, y + 1.2, width, height - 1.2, "cell"), cell, oblique=False)
+        paint.draw_sheet(axes_at(figure, x, y, width, 1.15, "oblique"), cell, oblique=True)
+    else:
+        paint.draw_space(axes_at(figure, x, y, width, height, "cell"), cell)
+
+
+def _readings(figure: Figure, effective: Effective, values: dict[str, Any], limits: Sequence[Limit],
+              panels: Sequence[Panel]) -> None:  # fmt: skip
+    x, right, y = 8.3, WIDTH - 0.2, HEIGHT - 0.9
+    for name in READINGS[effective.kind]:
+        label, _ = symbol(name)
+        write(figure, x, y, label, color=GREY)
+        write(figure, right, y, value_of(name, float(values[name])), ha="right")
+        y -= LINE + 0.01
