@@ -8,10 +8,13 @@ Candidates are numbered and made from their number alone, so any slice of them c
 
 from __future__ import annotations
 
+import bisect
 import itertools
 import math
+import re
 import tomllib
-from collections.abc import Mapping, Sequence
+from collections.abc import Iterator, Mapping, Sequence
+from contextlib import contextmanager
 from dataclasses import dataclass, field
 from functools import cached_property
 from pathlib import Path
@@ -20,12 +23,13 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from homog.cell import Kind
 from homog.columns import column
 from homog.effective import DEFAULT_MODEL
 from homog.elements import check_model
 from homog.errors import InputError, unknown
 from homog.families import Family, family
-from homog.materials import Material, Process, material, process
+from homog.materials import UNIT, Material, Process, material, process
 
 KEYS = {
     "": ("title", "model", "material", "process", "part", "limits", "rank", "candidates"),
@@ -34,7 +38,11 @@ KEYS = {
     "part": ("size_1_mm", "size_2_mm", "size_3_mm"),
     "rank": ("by", "front", "keep", "per_family"),
 }
-MOST_CANDIDATES = 50_000_000
+CANDIDATE_KEYS = ("family", "samples", "seed")
+MOST_KEPT = 200
+MOST_CANDIDATES = 2_000_000
+"""One candidate with all its columns takes about 1.6 kB while a screen runs."""
+_STATEMENT = re.compile(r"""\s*(\[|[\w"'][^=]*=)""")
 
 
 @dataclass(frozen=True)
@@ -144,11 +152,12 @@ def read_brief(path: str | Path) -> Brief:
         One line: file, line, what is wrong, what is allowed.
     """
     try:
-        text = Path(path).read_text(encoding="utf-8")
+        text = Path(path).read_bytes().decode("utf-8-sig")  # as it stands, so that the copy handed over is the same
     except OSError as error:
         raise InputError(f"Brief '{path}' cannot be read: {error.strerror}; give a TOML file") from None
-    except UnicodeDecodeError:
-        raise InputError(f"Brief '{path}' is not a text file in UTF-8; give a TOML file") from None
+    except UnicodeDecodeError as error:
+        line = error.object.count(b"\n", 0, error.start) + 1
+        raise InputError(f"Brief '{path}', line {line}: not text in UTF-8; save the file as UTF-8") from None
     return parse_brief(text, name=Path(path).name)
 
 
@@ -156,238 +165,296 @@ def parse_brief(text: str, *, name: str = "brief") -> Brief:
     """Return the brief in a TOML text; errors as `read_brief`, with `name` in front."""
     try:
         data = tomllib.loads(text)
-    except tomllib.TOMLDecodeError as error:
-        raise InputError(f"{name}: not valid TOML: {error}") from None
+    except RecursionError:
+        raise InputError(f"{name}: lists or tables are nested too deep; a brief needs four levels") from None
+    except ValueError as error:  # also a number of more digits than Python reads
+        what, _, place = str(error).rstrip(")").partition(" (at ")
+        line = place.split(",")[0].replace("end of document", f"line {len(text.rstrip().splitlines())}")
+        where = f"{name}, {line}" if line else name
+        raise InputError(f"{where}: not valid TOML: {what}; write text in quotes, KEY = VALUE a line") from None
     return _Reader(text, name).brief(data)
+
+
+def line_of(text: str, place: Sequence[str | int]) -> int:
+    """Return the line (from 1) where the statement begins that makes a place in the data of a valid TOML text.
+
+    Whatever stands before a statement is valid TOML too, so the place is looked for in ever better chosen beginnings of
+    the text; 0 if it is nowhere.
+
+    >>> line_of("[limits]\\nnu12 = { max = 0 }", ("limits", "nu12", "max"))
+    2
+    """
+    lines = text.split("\n")
+    starts = [n for n, line in enumerate(lines) if _STATEMENT.match(line)]  # and some lines inside a longer text
+
+    def there(number: int) -> bool:
+        for end in [*starts[number + 1 :], len(lines)]:
+            try:
+                data: Any = tomllib.loads("\n".join(lines[:end]))
+            except ValueError:  # the statement goes on
+                continue
+            for part in place:
+                try:
+                    data = data[part]
+                except (LookupError, TypeError):
+                    return False
+            break
+        return True
+
+    number = bisect.bisect_left(range(len(starts)), True, key=there)
+    return starts[number] + 1 if number < len(starts) else 0
 
 
 class _Reader:
     """Checks a parsed brief and says on which line a fault stands."""
 
     def __init__(self, text: str, name: str) -> None:
-        self.lines, self.name, self.text = text.splitlines(), name, text
+        self.name, self.text = name, text
 
-    def line(self, table: str, key: str, index: int = 0) -> int:
-        """Return the line (from 1) where a key of a table (or of the index-th [[table]]) stands; 0 if not found."""
-        current, seen, header = "", -1, 0
-        for number, raw in enumerate(self.lines, 1):
-            line = raw.strip()
-            if line.startswith("["):
-                heading = line.split("#")[0].strip().strip("[] \t")
-                current = heading
-                if heading == table or heading.startswith(table + "."):
-                    seen += line.startswith("[[")
-                    header = header or number
-                    if not key and (not line.startswith("[[") or seen == index):
-                        return number
-                if heading == f"{table}.{key}":
-                    return number
-                continue
-            here = current == table and (seen == index or seen < 0)
-            if here and line.split("=")[0].strip().strip("\"'") == key:
-                return number
-            if not current and line.split("=")[0].strip() in (table, f"{table}.{key}"):
-                header = header or number
-        return header
+    def fault(self, message: str | InputError, *place: str | int) -> InputError:
+        """Return the error for a place in the data, with the line of the innermost part of it that is written down."""
+        line = next(filter(None, (line_of(self.text, place[:size]) for size in range(len(place), 0, -1))), 0)
+        words = " ".join(str(message).split())  # a quoted name may hold a line break
+        return InputError(f"{self.name}{f', line {line}' if line else ''}: {words}")
 
-    def fault(self, message: str, table: str, key: str = "", index: int = 0) -> InputError:
-        line = self.line(table, key, index)
-        return InputError(f"{self.name}{f', line {line}' if line else ''}: {message}")
+    @contextmanager
+    def at(self, *place: str | int) -> Iterator[None]:
+        """Put the line of a place in front of a fault that the block finds."""
+        try:
+            yield
+        except InputError as error:
+            raise self.fault(error, *place) from None
 
     def brief(self, data: dict[str, Any]) -> Brief:
-        for key in data:
-            if key not in KEYS[""]:
-                raise self.fault(str(unknown("key", key, KEYS[""])), "", key)
+        self._known(data, "key", "")
         tables = {}
         for table in ("material", "process", "part", "rank"):
             given = data.get(table, {})
+            if isinstance(given, str) and table in ("material", "process"):
+                given = {"name": given}
             if not isinstance(given, dict):
-                given = {"name": given} if table in ("material", "process") else given
-            if not isinstance(given, dict):
-                raise self.fault(f"'{table}' must be a table [{table}]", "", table)
-            for key in given:
-                if key not in KEYS[table]:
-                    raise self.fault(str(unknown(f"key of [{table}]", key, KEYS[table])), table, key)
+                raise self.fault(f"'{table}' = {_short(given)} must be a table: [{table}]", table)
+            self._known(given, f"key of [{table}]", table)
             tables[table] = given
-        if not data.get("candidates"):
-            raise self.fault("no [[candidates]]: name at least one family to try", "candidates")
-        if not isinstance(data["candidates"], list):
+        listed = data.get("candidates", [])
+        if not isinstance(listed, list):
             raise self.fault("'candidates' must be a list of tables: write [[candidates]]", "candidates")
-        title = data.get("title", "untitled brief")
-        model = data.get("model", DEFAULT_MODEL)
-        if not isinstance(title, str) or not isinstance(model, str):
-            raise self.fault("title and model must be text in quotes", "", "title")
-        made_by = self._process(tables["process"])
-        limits = _merged([*self._limits(data.get("limits", {})), *_process_limits(made_by)])
-        goals, front, keep, per_family = self._rank(tables["rank"])
-        parts = [self._candidates(given, i) for i, given in enumerate(data["candidates"])]
-        candidates = tuple(itertools.chain.from_iterable(parts))
+        if not listed:
+            raise self.fault("no [[candidates]]: name at least one family to try", "candidates")
+        model = self._text(data.get("model", DEFAULT_MODEL), "model")
+        with self.at("model"):
+            check_model(model)
+        candidates = tuple(itertools.chain.from_iterable(self._candidates(one, i) for i, one in enumerate(listed)))
         total = sum(c.count for c in candidates)
         if total > MOST_CANDIDATES:
             raise self.fault(
                 f"{total:,} candidates; at most {MOST_CANDIDATES:,} in one run: lower a count", "candidates"
             )
-        try:
-            check_model(model)
-        except InputError as error:
-            raise self.fault(str(error), "", "model") from None
+        kinds = {c.family.kind for c in candidates}
+        made_by = self._process(tables["process"])
+        limits = self._merged([*self._limits(data.get("limits", {}), kinds), *_process_limits(made_by)])
+        goals, front, keep, per_family = self._rank(tables["rank"], kinds)
         return Brief(
-            title, self._material(tables["material"]), made_by, limits, goals, front, keep, per_family,
+            " ".join(self._text(data.get("title", "untitled brief"), "title").split()),
+            self._material(tables["material"]), made_by, limits, goals, front, keep, per_family,
             self._part(tables["part"]), model, candidates, self.text,
         )  # fmt: skip
 
-    def _number(self, value: Any, what: str, table: str, key: str, index: int = 0) -> float:
-        if isinstance(value, bool) or not isinstance(value, (int, float)) or not math.isfinite(value):
-            raise self.fault(f"{what} = {value!r} is not a finite number", table, key, index)
-        return float(value)
+    def _known(self, given: Mapping[str, Any], what: str, table: str) -> None:
+        for key in given:
+            if key not in KEYS[table]:
+                raise self.fault(unknown(what, key, KEYS[table]), *((table, key) if table else (key,)))
+
+    def _text(self, value: Any, *place: str | int) -> str:
+        if not isinstance(value, str):
+            raise self.fault(f"{place[-1]} = {_short(value)} must be text in quotes", *place)
+        return value
+
+    def _number(self, value: Any, what: str, *place: str | int) -> float:
+        try:
+            number = math.nan if isinstance(value, bool) or not isinstance(value, (int, float)) else float(value)
+        except OverflowError:
+            number = math.inf
+        if not math.isfinite(number):
+            raise self.fault(f"{what} = {_short(value)} is not a finite number", *place)
+        return number
+
+    def _count(self, value: Any, what: str, low: int, high: int, *place: str | int) -> int:
+        if isinstance(value, bool) or not isinstance(value, int) or not low <= value <= high:
+            raise self.fault(f"{what} = {_short(value)}; allowed: a whole number from {low} to {high:,}", *place)
+        return value
+
+    def _column(self, name: str, kinds: set[Kind], *place: str | int) -> None:
+        """Check that a limit or a rank can be put on a column."""
+        with self.at(*place):
+            found = column(name)
+        if found.text:
+            raise self.fault(f"column '{name}' holds text: limits and ranks are for numbers", *place)
+        if not kinds & set(found.kinds):
+            raise self.fault(
+                f"no candidate family has the column '{name}'; {' and '.join(found.kinds)} cells do", *place
+            )
 
     def _material(self, given: Mapping[str, Any]) -> Material:
         values = dict(given)
-        name = values.pop("name", None)
-        try:
-            if name is not None:
-                return material(str(name)).replaced(**values)
-            missing = [key for key in KEYS["material"][1:4] if key not in values]
-            if missing:
-                raise InputError(f"[material] needs a name or {', '.join(missing)}; 'homog materials' lists the names")
-            return Material("given values", **values)
-        except InputError as error:
-            raise self.fault(str(error), "material", "name" if name is not None else "") from None
+        if not isinstance(values.get("deep", False), bool):
+            raise self.fault(f"deep = {_short(values['deep'])}; allowed: true or false", "material", "deep")
+        named = self._text(values.pop("name"), "material", "name") if "name" in values else None
+        missing = [key for key in KEYS["material"][1:4] if key not in values]
+        if named is None and missing:
+            raise self.fault(
+                f"[material] needs a name or {', '.join(missing)}; 'homog materials' lists the names", "material"
+            )
+        with self.at("material", "name"):
+            found = UNIT.replaced(name="given values") if named is None else material(named)
+        for key, value in values.items():
+            with self.at("material", key):
+                found = found.replaced(**{key: value})
+        return found.replaced(name=f"{found.name}, changed") if named and set(values) - {"deep"} else found
 
     def _process(self, given: Mapping[str, Any]) -> Process:
         values = dict(given)
-        name = values.pop("name", None)
-        try:
-            if name is not None:
-                return process(str(name)).replaced(**values)
-            return Process("given limits" if values else "no process", **values)
-        except InputError as error:
-            raise self.fault(str(error), "process", "name" if name is not None else "") from None
+        named = self._text(values.pop("name"), "process", "name") if "name" in values else None
+        with self.at("process", "name"):
+            found = Process("given limits" if values else "no process") if named is None else process(named)
+        for key, value in values.items():
+            with self.at("process", key):
+                found = found.replaced(**{key: value})
+        return found.replaced(name=f"{found.name}, changed") if named and values else found
 
     def _part(self, given: Mapping[str, Any]) -> tuple[float, ...]:
         sizes = []
-        for key in KEYS["part"]:
+        for key in KEYS["part"][: len(given)]:
             if key not in given:
-                break
+                raise self.fault("[part] gives sizes in order: size_1_mm, then size_2_mm, then size_3_mm", "part")
             size = self._number(given[key], key, "part", key)
             if size <= 0.0:
                 raise self.fault(f"{key} = {size:g} mm; allowed: more than 0", "part", key)
             sizes.append(size)
-        if len(sizes) != len(given):
-            raise self.fault("[part] gives sizes in order: size_1_mm, then size_2_mm, then size_3_mm", "part")
         return tuple(sizes)
 
-    def _limits(self, given: Any) -> list[Limit]:
+    def _limits(self, given: Any, kinds: set[Kind]) -> list[Limit]:
         if not isinstance(given, dict):
-            raise self.fault("'limits' must be a table: COLUMN = { min = ..., max = ... }", "", "limits")
+            raise self.fault("'limits' must be a table: COLUMN = { min = ..., max = ... }", "limits")
         limits = []
         for name, spec in given.items():
-            try:
-                found = column(name)
-            except InputError as error:
-                raise self.fault(str(error), "limits", name) from None
-            if found.text:
-                raise self.fault(f"column '{name}' holds text and takes no limit", "limits", name)
-            if not isinstance(spec, dict) or not spec or set(spec) - {"min", "max"}:
-                raise self.fault(f"limit on '{name}' = {spec!r}; write {{ min = ... }}, {{ max = ... }} or both",
-                                 "limits", name)  # fmt: skip
-            given_bounds = {key: self._number(value, f"{name} {key}", "limits", name) for key, value in spec.items()}
-            low, high = given_bounds.get("min", -math.inf), given_bounds.get("max", math.inf)
-            if low > high:
-                raise self.fault(f"limit on '{name}': min {low:g} is above max {high:g}", "limits", name)
-            limits.append(Limit(name, low, high))
+            place = ("limits", name)
+            self._column(name, kinds, *place)
+            if not isinstance(spec, dict) or not spec:
+                raise self.fault(f"limit on '{name}' = {_short(spec)}; write {{ min = ... }}, {{ max = ... }} or both",
+                                 *place)  # fmt: skip
+            for key in spec:
+                if key not in ("min", "max"):
+                    raise self.fault(unknown(f"key of the limit on '{name}'", key, ("min", "max")), *place, key)
+            bound = {key: self._number(value, f"{name} {key}", *place, key) for key, value in spec.items()}
+            limit = Limit(name, bound.get("min", -math.inf), bound.get("max", math.inf))
+            if limit.low > limit.high:
+                raise self.fault(f"limit on '{name}': min {limit.low:g} is above max {limit.high:g}", *place)
+            limits.append(limit)
         return limits
 
-    def _rank(self, given: Mapping[str, Any]) -> tuple[tuple[Goal, ...], bool, int, int]:
+    def _merged(self, limits: list[Limit]) -> tuple[Limit, ...]:
+        """Return one limit a column, the tighter of each bound."""
+        merged: dict[str, Limit] = {}
+        for limit in limits:
+            other = merged.get(limit.column, limit)
+            origin = other.origin if other.origin == limit.origin else f"{other.origin} and {limit.origin}"
+            both = Limit(limit.column, max(other.low, limit.low), min(other.high, limit.high), origin)
+            if both.low > both.high:
+                raise self.fault(f"{other.words}, but the process asks for {limit.words}", "limits", limit.column)
+            merged[limit.column] = both
+        return tuple(merged.values())
+
+    def _rank(self, given: Mapping[str, Any], kinds: set[Kind]) -> tuple[tuple[Goal, ...], bool, int, int]:
         by = given.get("by", {"density_kg_m3": "min"})
         if not isinstance(by, dict) or not by:
             raise self.fault('by must name columns: by = { density_kg_m3 = "min" }', "rank", "by")
-        goals = []
         for name, better in by.items():
-            try:
-                found = column(name)
-            except InputError as error:
-                raise self.fault(str(error), "rank", "by") from None
-            if found.text or better not in ("min", "max"):
-                raise self.fault(
-                    f'rank by \'{name}\' = {better!r}: allowed are "min" and "max" on numbers', "rank", "by"
-                )
-            goals.append(Goal(name, better))
-        front, keep, per_family = given.get("front", False), given.get("keep", 12), given.get("per_family", 0)
+            self._column(name, kinds, "rank", "by", name)
+            if better not in ("min", "max"):
+                raise self.fault(f"rank by '{name}' = {_short(better)}; allowed: 'min' or 'max'", "rank", "by", name)
+        front = given.get("front", False)
         if not isinstance(front, bool):
-            raise self.fault(f"front = {front!r}; allowed: true or false", "rank", "front")
-        for key, value, least in (("keep", keep, 1), ("per_family", per_family, 0)):
-            if isinstance(value, bool) or not isinstance(value, int) or not least <= value <= 200:
-                raise self.fault(f"{key} = {value!r}; allowed: a whole number from {least} to 200", "rank", key)
-        return tuple(goals), front, keep, per_family or keep
+            raise self.fault(f"front = {_short(front)}; allowed: true or false", "rank", "front")
+        keep = self._count(given.get("keep", 12), "keep", 1, MOST_KEPT, "rank", "keep")
+        per_family = self._count(given.get("per_family", keep), "per_family", 1, MOST_KEPT, "rank", "per_family")
+        return tuple(Goal(name, better) for name, better in by.items()), front, keep, per_family
 
     def _candidates(self, given: Any, index: int) -> list[Candidates]:
-        table = "candidates"
+        here = ("candidates", index)
         if not isinstance(given, dict) or "family" not in given:
-            raise self.fault("[[candidates]] needs a family; 'homog families' lists them", table, "", index)
-        try:
-            found = family(str(given["family"]))
-        except InputError as error:
-            raise self.fault(str(error), table, "family", index) from None
-        samples, seed = given.get("samples", 0), given.get("seed", 0)
-        for key, value in (("samples", samples), ("seed", seed)):
-            if isinstance(value, bool) or not isinstance(value, int) or not 0 <= value <= 10_000_000:
-                raise self.fault(f"{key} = {value!r}; allowed: a whole number up to 10,000,000", table, key, index)
+            raise self.fault("[[candidates]] needs a family; 'homog families' lists them", *here)
+        named = self._text(given["family"], *here, "family")
+        with self.at(*here, "family"):
+            found = family(named)
+        samples = self._count(given.get("samples", 1), "samples", 1, MOST_CANDIDATES, *here, "samples")
+        seed = self._count(given.get("seed", 0), "seed", 0, 2**63 - 1, *here, "seed")
         words: dict[str, list[str]] = {}
         listed: dict[str, tuple[float, ...]] = {}
         sampled: dict[str, tuple[float, float]] = {}
+        known = [p.name for p in found.parameters]
         for name, spec in given.items():
-            if name in ("family", "samples", "seed"):
+            if name in CANDIDATE_KEYS:
                 continue
-            try:
-                parameter = found.parameter(name)
-            except InputError as error:
-                raise self.fault(str(error), table, name, index) from None
-            if parameter.choices:
-                words[name] = [spec] if isinstance(spec, str) else list(spec) if isinstance(spec, list) else [str(spec)]
-                tried: list[Any] = words[name]
-            elif isinstance(spec, dict) and spec.get("sampled"):
-                sampled[name] = self._span(spec, {"from", "to", "sampled"}, name, index)
+            if name not in known:
+                raise self.fault(unknown(f"parameter of '{found.id}'", name, [*known, *CANDIDATE_KEYS]), *here, name)
+            if spec == []:
+                raise self.fault(f"'{name}': empty list; give at least one value", *here, name)
+            tried: list[Any]
+            if found.parameter(name).choices:
+                tried = spec if isinstance(spec, list) else [spec]
+                words[name] = [self._text(word, *here, name) for word in tried]
+            elif isinstance(spec, dict) and spec.get("sampled") is True:
+                sampled[name] = self._span(spec, "sampled", *here, name)
                 tried = [list(sampled[name])]
             else:
-                listed[name] = self._listed(spec, name, index)
+                listed[name] = self._listed(spec, *here, name)
                 tried = [list(listed[name])]
             for value in tried:
-                try:
+                with self.at(*here, name):
                     found.values({name: value})
-                except InputError as error:
-                    raise self.fault(str(error), table, name, index) from None
-        if bool(sampled) != bool(samples):
+        if bool(sampled) != ("samples" in given):
             raise self.fault("sampled ranges and 'samples' (how many points, with a seed) belong together",
-                             table, "samples", index)  # fmt: skip
+                             *here, "samples")  # fmt: skip
         return [
-            Candidates(found, dict(zip(words, choice, strict=True)), listed, sampled, samples or 1, seed)
+            Candidates(found, dict(zip(words, choice, strict=True)), listed, sampled, samples, seed)
             for choice in itertools.product(*words.values())
         ]
 
-    def _span(self, spec: dict[str, Any], keys: set[str], name: str, index: int) -> tuple[float, float]:
-        if set(spec) != keys:
+    def _span(self, spec: dict[str, Any], last: str, *place: str | int) -> tuple[float, float]:
+        name = place[-1]
+        for key in spec:
+            if key not in ("from", "to", "count", "sampled"):
+                raise self.fault(unknown(f"key of '{name}'", key, ("from", "to", "count", "sampled")), *place, key)
+        if set(spec) != {"from", "to", last}:
             raise self.fault(
-                f"'{name}' = {spec!r}; write a number, a list, {{ from, to, count }} or {{ from, to, sampled = true }}",
-                "candidates", name, index,
+                f"'{name}' = {_short(spec)}; write a number, a list, {{ from, to, count }} or "
+                "{ from, to, sampled = true }", *place,
             )  # fmt: skip
-        low, high = (self._number(spec[key], f"'{name}' {key}", "candidates", name, index) for key in ("from", "to"))
+        low, high = (self._number(spec[key], f"'{name}' {key}", *place, key) for key in ("from", "to"))
         if low > high:
-            raise self.fault(f"'{name}': empty range, from {low:g} is above to {high:g}", "candidates", name, index)
+            raise self.fault(f"'{name}': empty range, from {low:g} is above to {high:g}; swap them", *place)
         return low, high
 
-    def _listed(self, spec: Any, name: str, index: int) -> tuple[float, ...]:
+    def _listed(self, spec: Any, *place: str | int) -> tuple[float, ...]:
+        name = place[-1]
         if isinstance(spec, dict):
-            low, high = self._span(spec, {"from", "to", "count"}, name, index)
-            count = spec["count"]
-            if isinstance(count, bool) or not isinstance(count, int) or not 1 <= count <= 1_000_000:
-                raise self.fault(f"'{name}': count = {count!r}; allowed: a whole number from 1 (0 is an empty range)",
-                                 "candidates", name, index)  # fmt: skip
+            low, high = self._span(spec, "count", *place)
+            count = self._count(spec["count"], f"'{name}' count", 1, MOST_CANDIDATES, *place, "count")
             return tuple(np.linspace(low, high, count).tolist())
-        values: Sequence[Any] = spec if isinstance(spec, list) else [spec]
-        if not values:
-            raise self.fault(f"'{name}': empty list; give at least one value", "candidates", name, index)
-        return tuple(self._number(value, f"'{name}'", "candidates", name, index) for value in values)
+        if isinstance(spec, list):
+            return tuple(self._number(value, f"'{name}'", *place, i) for i, value in enumerate(spec))
+        return (self._number(spec, f"'{name}'", *place),)
+
+
+def _short(value: Any) -> str:
+    """Return a value as it is quoted in a message: in TOML's words, and cut if it is long."""
+    if isinstance(value, bool):
+        return str(value).lower()
+    if isinstance(value, int) and abs(value) >= 10**18:
+        return "a whole number of more than 18 digits"
+    words = repr(value)
+    return words if len(words) <= 60 else words[:57] + "..."
 
 
 def _process_limits(made_by: Process) -> list[Limit]:
@@ -398,13 +465,3 @@ def _process_limits(made_by: Process) -> list[Limit]:
     if math.isfinite(made_by.max_cell_mm):
         limits.append(Limit("largest_cell_mm", high=made_by.max_cell_mm, origin="process"))
     return limits
-
-
-def _merged(limits: list[Limit]) -> tuple[Limit, ...]:
-    """Return one limit a column, the tighter of each bound."""
-    merged: dict[str, Limit] = {}
-    for limit in limits:
-        other = merged.get(limit.column, limit)
-        origin = other.origin if other.origin == limit.origin else f"{other.origin} and {limit.origin}"
-        merged[limit.column] = Limit(limit.column, max(other.low, limit.low), min(other.high, limit.high), origin)
-    return tuple(merged.values())

@@ -9,9 +9,12 @@ from __future__ import annotations
 import json
 import math
 import os
+import re
+import signal
 import sys
-from collections.abc import Callable, Iterator, Mapping, Sequence
+from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager
+from itertools import product
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated, Any
 
@@ -25,6 +28,7 @@ if TYPE_CHECKING:
     from rich.table import Table
 
     from homog.effective import Effective
+    from homog.families import Family
     from homog.materials import Material
 
 app = typer.Typer(
@@ -35,22 +39,21 @@ app = typer.Typer(
     rich_markup_mode="rich",
     help="From a requirement to a lattice or folded sheet: stiffness in every direction, screened and ranked.",
     epilog="Start with 'homog families', then 'homog evaluate reentrant-honeycomb', then write a brief and "
-    "'homog screen' it. Screening only, not design evidence: local codes and licensed practice decide.",
+    "'homog screen' it. Exit status: 0 done, 2 bad input, 3 nothing meets the brief. Screening only, not design "
+    "evidence: local codes and licensed practice decide.",
 )
 
 Assignments = Annotated[
     list[str] | None,
-    typer.Argument(metavar="[PARAM=VALUE]...", help="Parameters of the family, mm and degrees; defaults otherwise."),
+    typer.Argument(metavar="PARAM=VALUE", help="Parameters of the family, mm and degrees; defaults otherwise."),
 ]
 FamilyId = Annotated[str, typer.Argument(metavar="ID", help="Family identifier; 'homog families' lists them.")]
 MaterialName = Annotated[
     str | None, typer.Option("--material", metavar="NAME", help="Parent by name ('homog materials').")
 ]
-Modulus = Annotated[float | None, typer.Option("--modulus", metavar="MPA", help="Parent's Young's modulus, MPa.")]
-Poisson = Annotated[float | None, typer.Option("--poisson", metavar="NU", help="Parent's Poisson's ratio.")]
-SolidDensity = Annotated[
-    float | None, typer.Option("--solid-density", metavar="KG_M3", help="Parent's density, kg/m3.")
-]
+Modulus = Annotated[str | None, typer.Option("--modulus", metavar="MPA", help="Parent's Young's modulus, MPa.")]
+Poisson = Annotated[str | None, typer.Option("--poisson", metavar="NU", help="Parent's Poisson's ratio.")]
+SolidDensity = Annotated[str | None, typer.Option("--solid-density", metavar="KG_M3", help="Parent's density, kg/m3.")]
 Deep = Annotated[
     bool, typer.Option("--deep", help="Planar cells deep along axis 3: plane strain instead of plane stress.")
 ]
@@ -58,6 +61,8 @@ Model = Annotated[
     str, typer.Option("--model", metavar="M", help="euler (flexure, stretch) or timoshenko (adds shear).")
 ]
 Overwrite = Annotated[bool, typer.Option("--overwrite", help="Replace a file that is there already.")]
+FIGURES = (".svg", ".png", ".pdf")
+STOPPED = "homog: stopped; nothing was written"
 
 
 def _console() -> Console:
@@ -76,63 +81,62 @@ def _table(*headers: str, numeric: Sequence[str] = ()) -> Table:
     return table
 
 
-def _parent(
-    name: str | None, modulus: float | None, poisson: float | None, density: float | None, deep: bool
-) -> Material:
+def _parent(name: str | None, modulus: str | None, poisson: str | None, density: str | None, deep: bool) -> Material:
     from homog.materials import UNIT, material
 
     values: dict[str, Any] = {}
-    for key, value in (("modulus_MPa", modulus), ("poisson", poisson), ("density_kg_m3", density)):
-        if value is not None:
-            values[key] = value
+    given = (("modulus_MPa", "--modulus", modulus), ("poisson", "--poisson", poisson),
+             ("density_kg_m3", "--solid-density", density))  # fmt: skip
+    for key, option, text in given:
+        if text is not None:
+            values[key] = _number(text, f"Option {option}", "give one number, such as 0.3 or 1600")
     parent = material(name) if name is not None else UNIT
     if values:
-        parent = parent.replaced(name="given values" if name is None else f"{parent.name}, changed", **values)
+        parent = parent.replaced(**values)
+        parent = parent.replaced(name="given values" if name is None else f"{parent.name}, changed")
     return parent.replaced(deep=True) if deep else parent
 
 
-def _assigned(words: Sequence[str] | None) -> dict[str, str]:
-    given: dict[str, str] = {}
-    for word in words or ():
-        name, equals, value = word.partition("=")
-        if not equals or not name or not value:
-            raise InputError(f"'{word}' is not PARAM=VALUE; write for example angle=-30, without blanks")
-        if name in given:
-            raise InputError(f"Parameter '{name}' is given twice; give it once")
-        given[name] = value
-    return given
+def _number(text: str, what: str, remedy: str) -> float:
+    try:
+        return float(text)
+    except ValueError:
+        raise InputError(f"{what} = {text!r} is not a number; {remedy}") from None
 
 
-def _numbers(family_id: str, given: Mapping[str, str]) -> dict[str, Any]:
-    """Return each parameter as a number, a word, or for LOW:HIGH:COUNT and A,B,C an array of numbers."""
+def _assigned(found: Family, words: Sequence[str] | None) -> dict[str, list[Any]]:
+    """Return the numbers or words of each PARAM=VALUE, PARAM=A,B,C or PARAM=LOW:HIGH:COUNT, checked."""
     import numpy as np
 
-    from homog.families import family
+    from homog.brief import MOST_CANDIDATES
 
-    found = family(family_id)
-    out: dict[str, Any] = {}
-    for name, text in given.items():
+    given: dict[str, list[Any]] = {}
+    for word in words or ():
+        name, equals, text = word.partition("=")
+        if not equals or not name or not text:
+            raise InputError(f"'{word}' is not PARAM=VALUE; write for example length=12.5, without blanks")
+        if name in given:
+            raise InputError(f"Parameter '{name}' is given twice; give it once")
+        what, remedy = f"Parameter '{name}'", f"write {name}=VALUE, in a sweep also LOW:HIGH:COUNT or A,B,C"
         if found.parameter(name).choices:
-            out[name] = text
+            given[name] = text.split(",")
+            for choice in given[name]:
+                found.values({name: choice})
             continue
-        try:
-            if ":" in text:
-                low, high, count = text.split(":")
-                if int(count) < 1:
-                    raise InputError(f"Parameter '{name}' = {text}: an empty range; COUNT must be at least 1")
-                out[name] = np.linspace(float(low), float(high), int(count))
-            elif "," in text:
-                out[name] = np.array([float(part) for part in text.split(",")])
-            else:
-                out[name] = float(text)
-        except ValueError as error:
-            if isinstance(error, InputError):
-                raise
-            raise InputError(
-                f"Parameter '{name}' = {text!r} is not a number; write {name}=VALUE, "
-                "in a sweep also LOW:HIGH:COUNT or A,B,C"
-            ) from None
-    return out
+        if ":" in text:
+            parts = text.split(":")
+            if len(parts) != 3 or not re.fullmatch(r"[+-]?\d{1,18}", parts[2]):
+                raise InputError(f"{what} = {text!r} is no range; write {name}=LOW:HIGH:COUNT, COUNT a whole number")
+            low, high, count = _number(parts[0], what, remedy), _number(parts[1], what, remedy), int(parts[2])
+            if not 1 <= count <= MOST_CANDIDATES:
+                raise InputError(f"{what} = {text!r}: COUNT must be 1 (0 is an empty range) to {MOST_CANDIDATES:,}")
+            if low > high:
+                raise InputError(f"{what} = {text!r}: an empty range, {low:g} is above {high:g}; swap them")
+            given[name] = np.linspace(low, high, count).tolist()
+        else:
+            given[name] = [_number(part, what, remedy) for part in text.split(",")]
+        found.values({name: given[name]})
+    return given
 
 
 def _one(family_id: str, words: Sequence[str] | None, parent: Material, model: str) -> Effective:
@@ -140,21 +144,22 @@ def _one(family_id: str, words: Sequence[str] | None, parent: Material, model: s
     import numpy as np
 
     from homog.effective import homogenize
-    from homog.families import build, family
+    from homog.families import family
 
-    given = _numbers(family_id, _assigned(words))
-    for name, value in given.items():
-        if np.ndim(value):
-            raise InputError(f"Parameter '{name}' has {np.size(value)} values; give one, or use 'homog sweep'")
-    cell = build(family_id, material=parent, **given)  # raises where the cell cannot exist
-    first = next(p.name for p in family(family_id).parameters if not p.choices)
-    batch = build(family_id, material=parent, **{**given, first: np.reshape(cell.parameters[first], (1,))})
-    return homogenize(batch, model=model)
+    found = family(family_id)
+    given = {}
+    for name, values in _assigned(found, words).items():
+        if len(values) > 1:
+            raise InputError(f"Parameter '{name}' has {len(values)} values; give one, or use 'homog sweep'")
+        given[name] = values[0]
+    cell = found.build(given, parent)  # raises where the cell cannot exist
+    first = next(p.name for p in found.parameters if not p.choices)
+    return homogenize(found.build({**given, first: np.reshape(cell.parameters[first], (1,))}, parent), model=model)
 
 
 @app.command()
 def families(
-    id: Annotated[str | None, typer.Argument(metavar="[ID]", help="Family to explain; all are listed without.")] = None,
+    id: Annotated[str | None, typer.Argument(metavar="ID", help="Family to explain; all are listed without.")] = None,
 ) -> int:
     """List the families of unit cells, or explain one: parameters, ranges, source, output quantities."""
     from homog.columns import COLUMNS, columns_of
@@ -193,9 +198,7 @@ def families(
 
 @app.command()
 def materials(
-    name: Annotated[
-        str | None, typer.Argument(metavar="[NAME]", help="Parent to show with ranges and sources.")
-    ] = None,
+    name: Annotated[str | None, typer.Argument(metavar="NAME", help="Parent to show with ranges and sources.")] = None,
 ) -> int:
     """List the parent materials, or show one with the range, source and status of every value."""
     from homog.materials import CONFIRM, material, material_values
@@ -228,15 +231,8 @@ def processes() -> int:
     table = _table("name", *numeric, "status", "note", numeric=numeric)
     for p in known().values():
         cell = f"{p.max_cell_mm:g}" if math.isfinite(p.max_cell_mm) else ""
-        table.add_row(
-            p.name,
-            f"{p.min_wall_mm:g}",
-            f"{p.recommended_wall_mm:g}",
-            f"{p.wall_tolerance_mm:g}",
-            cell,
-            p.status,
-            p.note,
-        )
+        lengths = (f"{mm:g}" for mm in (p.min_wall_mm, p.recommended_wall_mm, p.wall_tolerance_mm))
+        table.add_row(p.name, *lengths, cell, p.status, p.note)
     console = _console()
     console.print(table)
     console.print(f"Lengths in mm. {CONFIRM}")
@@ -269,7 +265,7 @@ def evaluate(
     card = evaluation(effective)
     given, quantities, stiffness = card["parameters"], card["columns"], np.array(card["stiffness"], float)
     if as_json:
-        print(json.dumps(card, indent=2))
+        print(json.dumps(card, indent=2, allow_nan=False))
         return 0
     from homog.families import family
 
@@ -323,8 +319,11 @@ def polar(
     Example: homog polar reentrant-honeycomb angle=-30 thickness=1 --material PLA --out bow-tie.png
     """
     from homog.families import family
-    from homog.report import whole_file
+    from homog.report import check_free, whole_file
 
+    if out.suffix not in FIGURES:
+        raise InputError(f"Figure '{out}' has the suffix '{out.suffix}'; allowed are {', '.join(FIGURES)}")
+    check_free(out, overwrite=overwrite)
     parent = _parent(material, modulus, poisson, solid_density, deep)
     effective = _one(id, parameters, parent, model)
     from homog import plots
@@ -343,7 +342,7 @@ def sweep(
     parameters: Annotated[
         list[str] | None,
         typer.Argument(
-            metavar="PARAM=LOW:HIGH:COUNT...", help="Spans; also PARAM=VALUE and PARAM=A,B,C. All combinations."
+            metavar="PARAM=LOW:HIGH:COUNT", help="Spans; also PARAM=VALUE and PARAM=A,B,C. All combinations."
         ),
     ] = None,
     material: MaterialName = None,
@@ -358,35 +357,32 @@ def sweep(
 
     Example: homog sweep arrowhead outer_angle=20:40:21 inner_angle=50:80:31 --material PLA --out sweep.csv
     """
-    import numpy as np
     import pandas as pd
 
+    from homog.brief import MOST_CANDIDATES, Candidates
     from homog.columns import table as tabulate
     from homog.effective import homogenize
-    from homog.families import build
-    from homog.report import provenance, write_table
+    from homog.families import family
+    from homog.report import check_table, provenance, write_table
+    from homog.screening import CHUNK
 
-    if out.suffix not in (".csv", ".parquet"):
-        raise InputError(f"Table '{out}': allowed are .csv and .parquet")
-    if out.exists() and not overwrite:
-        raise InputError(f"File '{out}' is there already; choose another name or add --overwrite")
-    parent = _parent(material, modulus, poisson, solid_density, deep)
-    given = _numbers(id, _assigned(parameters))
-    spans = {name: np.atleast_1d(value) for name, value in given.items() if not isinstance(value, str)}
-    sizes = [len(values) for values in spans.values()]
-    count = math.prod(sizes)
-    if count > 5_000_000:
-        raise InputError(f"{count:,} combinations; at most 5,000,000 in one sweep: lower a COUNT")
-    chunk, parts = 8192, []
+    check_table(out, overwrite=overwrite)
+    found, parent = family(id), _parent(material, modulus, poisson, solid_density, deep)
+    given = _assigned(found, parameters)
+    words = {name: values for name, values in given.items() if found.parameter(name).choices}
+    spans = {name: tuple(values) for name, values in given.items() if name not in words}
+    choices = [dict(zip(words, choice, strict=True)) for choice in product(*words.values())]
+    sources = [Candidates(found, choice, spans, {}) for choice in choices]
+    count = sum(source.count for source in sources)
+    if count > MOST_CANDIDATES:
+        raise InputError(f"{count:,} combinations; at most {MOST_CANDIDATES:,} in one sweep: lower a COUNT")
+    parts = []
     with _progress(count, f"sweeping {id}") as advance:
-        for start in range(0, count, chunk):
-            number = np.arange(start, min(start + chunk, count))
-            where = np.unravel_index(number, sizes) if sizes else ()
-            point = {name: values[index] for (name, values), index in zip(spans.items(), where, strict=True)}
-            words = {name: value for name, value in given.items() if isinstance(value, str)}
-            cell = build(id, material=parent, **point, **words)
-            parts.append(tabulate(homogenize(cell if cell.shape else cell.at(None), model=model)))
-            advance(len(number))
+        for source in sources:
+            for start in range(0, source.count, CHUNK):
+                cell = found.build(source.take(start, start + CHUNK), parent)
+                parts.append(tabulate(homogenize(cell if cell.shape else cell.at(None), model=model)))
+                advance(len(parts[-1]))
     whole = pd.concat(parts, ignore_index=True)
     write_table(whole, out, provenance(__version__, model, parent, family=id, rows=len(whole)), overwrite=overwrite)
     print(f"wrote {out}: {len(whole):,} rows")
@@ -415,8 +411,9 @@ def screen(
         write_screening(found, place, version=__version__, brief_name=brief.name, progress=tell)
         tell("")
     if not found.met:
-        worst = max(found.falls, key=lambda fall: fall.missed)
-        print(f"nothing of {asked.count:,} candidates meets the brief; most miss: {worst.limit.words}.")
+        worst = max(found.falls, key=lambda fall: fall.missed, default=None)
+        why = f"most miss: {worst.limit.words}" if worst and worst.missed else "every one is rejected"
+        print(f"nothing of {asked.count:,} candidates meets the brief; {why}.")
         print(f"Results: {out / 'summary.md'}")
         return 3
     best = found.shortlist.iloc[0]
@@ -452,7 +449,6 @@ def _teller() -> Any:
 
 @app.callback(invoke_without_command=True)
 def _root(
-    context: typer.Context,
     version: Annotated[bool, typer.Option("--version", help="Print the version and stop.")] = False,
 ) -> None:
     if version:
@@ -464,14 +460,15 @@ def main(argv: Sequence[str] | None = None) -> int:
     """Run the command line on `argv` (the process's own arguments if None) and return the exit status."""
     try:
         status = app(args=list(sys.argv[1:] if argv is None else argv), prog_name="homog", standalone_mode=False)
+        if status == 130:  # what the parser makes of an interrupt, or else an Abort
+            print(STOPPED, file=sys.stderr)
         return int(status or 0)
     except HomogError as error:
-        print(f"homog: {error}", file=sys.stderr)
+        print(f"homog: {' '.join(str(error).split())}", file=sys.stderr)
         return 2
-    except KeyboardInterrupt:
-        print("homog: stopped; nothing was written", file=sys.stderr)
-        return 130
-    except BrokenPipeError:
+    except SystemExit as stop:  # the parser's answer to a reader that stopped reading, which is no fault
+        if not isinstance(stop.__context__, BrokenPipeError):
+            raise
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
         return 0
     except Exception as error:
@@ -479,20 +476,21 @@ def main(argv: Sequence[str] | None = None) -> int:
             message = " ".join(str(error.format_message()).split())
             if not message:
                 return 0
-            print(f"homog: {message} Try 'homog --help'.", file=sys.stderr)
+            command = getattr(getattr(error, "ctx", None), "command_path", "homog")
+            print(f"homog: {message.rstrip('.')}; try '{command} --help'", file=sys.stderr)
             return 2
         if type(error).__name__ == "Abort":
+            print(STOPPED, file=sys.stderr)
             return 130
         import traceback
 
         traceback.print_exc()
-        print(
-            f"homog: internal fault: {type(error).__name__}: {error}; please report it with the command",
-            file=sys.stderr,
-        )
+        fault = f"{type(error).__name__}: {error}"
+        print(f"homog: internal fault: {fault}; please report it with the command", file=sys.stderr)
         return 1
 
 
 def entry() -> None:
-    """Run as the installed command."""
+    """Run as the installed command; being told to stop leaves nothing half-written."""
+    signal.signal(signal.SIGTERM, lambda *_: sys.exit(143))
     sys.exit(main())

@@ -18,7 +18,7 @@ from numpy.typing import NDArray
 
 from homog import bounds, directional
 from homog.cell import Kind, Status
-from homog.effective import Effective, condition, soft_mode
+from homog.effective import Effective, soft_mode
 from homog.elements import WALL_SHEAR
 from homog.errors import unknown
 from homog.families import FAMILIES
@@ -57,6 +57,8 @@ REASONS: Mapping[str, tuple[str, str]] = {
     "walls-thick": ("reject", f"a wall or strut is thicker than {SLENDER_REJECT:g} of its length: no beam any more"),
     "beam-model": ("caution", f"a wall or strut is thicker than {SLENDER_CAUTION:g} of its length, with joints "
                    "as points: at 0.1 a re-entrant cell comes out about 20 % too soft, at 0.2 about 43 %"),
+    "hinge-model": ("caution", "the ligaments are pure hinges: their stretch and the give of the units' corners "
+                    "are left out, so stiffness is an upper estimate"),
     "ligament-stubby": ("caution", f"the ligament is over {LIGAMENT_CAUTION:g} of its length thick: no flexure strip"),
     "sheet-model": ("caution", "bar-and-hinge model of a folded sheet: signs and ratios are sound, stiffness "
                     "may be off by a factor of 2.6 against a full shell"),
@@ -193,22 +195,16 @@ class Results:
         found["walls-thick"] = live & beams & (slenderness > SLENDER_REJECT)
         found["beam-model"] = live & beams & (slenderness > SLENDER_CAUTION) & (slenderness <= SLENDER_REJECT)
         found["ligament-stubby"] = live & ("hinge" in kinds) & (slenderness > LIGAMENT_CAUTION)
+        found["hinge-model"] = live & ("hinge" in kinds)
         found["sheet-model"] = live & ("fold" in kinds)
         found["internal-mechanism"] = live & (self.effective.mechanisms.reshape(-1) > 0)
-        found["near-singular"] = live & (condition(self._unitless()) < SINGULAR_CAUTION)
+        found["near-singular"] = live & (self.bounds.stability < SINGULAR_CAUTION)
         S = self.membrane
         shear = np.abs(S[:, :2, -1]) / np.sqrt(np.abs(S[:, [0, 1], [0, 1]] * S[:, -1, -1, None]))
         found["coupled"] = live & (shear.max(axis=-1) > COUPLING_CAUTION)
         found["reach-short"] = live & (self.ratio(0, 1) < 0.0) & (self.extremes.auxetic_reach_deg < REACH_CAUTION_DEG)
         found["few-cells"] = live & (self.cells_across < CELLS_CAUTION)
         return found
-
-    def _unitless(self) -> Array:
-        """The stiffness, of a sheet scaled to unit diagonal since its entries have different units."""
-        if self.kind != "sheet":
-            return self.stiffness
-        size = np.sqrt(np.diagonal(self.stiffness, axis1=-2, axis2=-1))
-        return np.asarray(self.stiffness / (size[:, :, None] * size[:, None, :]))
 
     def worst(self, level: str) -> Mask:
         """Where any reason of a level applies; a family's own rules reject."""

@@ -9,7 +9,6 @@ that cost nothing: there no Poisson's ratio exists, and the mode is named instea
 
 from __future__ import annotations
 
-import math
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
@@ -238,10 +237,3 @@ def soft_mode(stiffness: Array, kind: Kind) -> str:
     mode = mode / mode[np.argmax(np.abs(mode))]
     named = [f"{name} {value:+.2f}" for name, value in zip(STRAINS[kind], mode, strict=True) if abs(value) > 5e-3]
     return " ".join(named)
-
-
-def condition(stiffness: Array) -> Array:
-    """Return smallest over largest eigenvalue of Mandel stiffness matrices (..., v, v); NaN in, NaN out."""
-    bad = np.asarray(~np.isfinite(stiffness).all(axis=(-1, -2)))
-    values = np.linalg.eigvalsh(np.where(bad[..., None, None], np.eye(stiffness.shape[-1]), stiffness))
-    return np.where(bad, math.nan, values[..., 0] / values[..., -1])

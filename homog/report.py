@@ -7,24 +7,28 @@ Results that are already there are never overwritten unless that is asked for.
 from __future__ import annotations
 
 import dataclasses
+import errno
 import hashlib
 import json
 import math
 import os
 import platform
+import re
 import shutil
 import tempfile
-from collections.abc import Callable, Iterator, Mapping, Sequence
-from contextlib import contextmanager
+from collections import Counter
+from collections.abc import Callable, Collection, Iterator, Mapping, Sequence
+from contextlib import contextmanager, suppress
 from datetime import UTC, datetime
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
+import scipy
 
 from homog.brief import Brief
 from homog.cell import UnitCell
-from homog.columns import COLUMNS, evaluate, reason_text
+from homog.columns import COLUMNS, evaluate, reason_level, reason_text
 from homog.effective import Effective, homogenize
 from homog.errors import InputError, MissingExtra
 from homog.families import FAMILIES
@@ -41,8 +45,33 @@ WHAT_IT_IS = (
     "practice decide."
 )
 TABLE_FORMAT = "%.8g"
+TABLES = (".csv", ".parquet")
+FULL = (errno.ENOSPC, errno.EDQUOT, errno.EFBIG)
 ZERO = 1e-12
 SHOWN = ("density_kg_m3", "E1_MPa", "nu12", "auxetic_reach_deg", "E1_per_hexagon")
+
+
+@contextmanager
+def _writing(place: Path, only: Collection[int] = ()) -> Iterator[None]:
+    """Turn the system's word that a place cannot be written to (only these error numbers) into an InputError."""
+    try:
+        yield
+    except OSError as error:
+        if only and error.errno not in only:
+            raise
+        reason = error.strerror or str(error)
+        raise InputError(f"Cannot write '{place}': {reason}; choose another place or make room") from error
+
+
+def check_free(path: Path, *, overwrite: bool = False) -> None:
+    """Raise InputError where a file may not go: it is there (unless `overwrite`), is a folder, or has no folder."""
+    with _writing(path):
+        if path.is_dir():
+            raise InputError(f"'{path}' is a folder; give the name of a file")
+        if path.exists() and not overwrite:
+            raise InputError(f"File '{path}' is there already; choose another name or add --overwrite")
+        if not os.access(path.parent, os.W_OK):
+            raise InputError(f"Cannot write '{path}': no folder '{path.parent}' that may be written to; make it first")
 
 
 @contextmanager
@@ -52,20 +81,19 @@ def whole_file(path: Path, *, overwrite: bool = False) -> Iterator[Path]:
     Raises
     ------
     InputError
-        For a file that is there already (unless `overwrite`), or a folder that cannot be written to.
+        As `check_free`, and for a folder that cannot be written to or is full.
     """
-    if path.exists() and not overwrite:
-        raise InputError(f"File '{path}' is there already; choose another name or add --overwrite")
-    try:
+    check_free(path, overwrite=overwrite)
+    with _writing(path):
         handle, name = tempfile.mkstemp(dir=path.parent, prefix=f".{path.stem}.", suffix=path.suffix)
-    except OSError as error:
-        raise InputError(f"Cannot write '{path}': {error.strerror}; choose another place") from None
-    os.close(handle)
+        os.close(handle)
     temporary = Path(name)
     try:
-        yield temporary
-        temporary.chmod(0o666 & ~_umask())
-        os.replace(temporary, path)
+        with _writing(path, FULL):
+            yield temporary
+        with _writing(path):
+            temporary.chmod(0o666 & ~_umask())
+            os.replace(temporary, path)
     finally:
         temporary.unlink(missing_ok=True)
 
@@ -78,28 +106,41 @@ def _umask() -> int:
 
 @contextmanager
 def whole_folder(folder: Path) -> Iterator[Path]:
-    """Yield a hidden folder beside `folder`, renamed to it if the block succeeds and removed if not.
+    """Yield a hidden folder whose contents become those of `folder` if the block succeeds, and nothing if not.
+
+    A new folder appears by one renaming; into an empty one that is there (it may be a mount) the contents are moved.
 
     Raises
     ------
     InputError
-        For a folder that already holds something, or a place that cannot be written to.
+        For a folder that already holds something, or a place that cannot be written to or is full.
     """
-    if folder.exists() and (not folder.is_dir() or any(folder.iterdir())):
-        raise InputError(f"Folder '{folder}' already holds results; choose another name or remove it first")
-    try:
+    name, folder = str(folder), Path(os.path.abspath(folder))
+    with _writing(folder):
+        there = folder.exists()
+        files = [place for place in (folder, *folder.parents) if place.is_file()]
+        if files:
+            raise InputError(f"Cannot write to '{name}': '{files[0]}' is a file; give the name of a new folder")
+        if there and any(folder.iterdir()):
+            raise InputError(f"Folder '{name}' already holds results; choose another name or remove it first")
+        made = [parent for parent in folder.parents if not parent.exists()]
         folder.parent.mkdir(parents=True, exist_ok=True)
-        temporary = Path(tempfile.mkdtemp(dir=folder.parent, prefix=f".{folder.name}."))
-    except OSError as error:
-        raise InputError(f"Cannot write to '{folder}': {error.strerror}; choose another place") from None
+        temporary = Path(tempfile.mkdtemp(dir=folder if there else folder.parent, prefix=f".{folder.name}."))
     try:
-        yield temporary
-        temporary.chmod(0o777 & ~_umask())
-        if folder.exists():
-            folder.rmdir()
-        os.replace(temporary, folder)
+        with _writing(folder, FULL):
+            yield temporary
+        with _writing(folder):
+            if there:
+                for entry in list(temporary.iterdir()):
+                    os.replace(entry, folder / entry.name)
+            else:
+                temporary.chmod(0o777 & ~_umask())
+                os.replace(temporary, folder)
     finally:
         shutil.rmtree(temporary, ignore_errors=True)
+        for parent in made:  # innermost first; one that holds the results stays
+            with suppress(OSError):
+                parent.rmdir()
 
 
 def provenance(version: str, model: str, material: Material, **more: Any) -> dict[str, Any]:
@@ -110,6 +151,7 @@ def provenance(version: str, model: str, material: Material, **more: Any) -> dic
         "version": version,
         "python": platform.python_version(),
         "numpy": np.__version__,
+        "scipy": scipy.__version__,
         "written": datetime.now(UTC).isoformat(timespec="seconds"),
         "model": model,
         "material": values,
@@ -150,6 +192,16 @@ def _plain(value: Any) -> Any:
     return float(value) if math.isfinite(value) else None
 
 
+def check_table(path: Path, *, overwrite: bool = False) -> Path:
+    """Return where the provenance of a table goes; InputError for another suffix, or a file that is there already."""
+    if path.suffix not in TABLES:
+        raise InputError(f"Table '{path.name}' has the suffix '{path.suffix}'; allowed are {', '.join(TABLES)}")
+    beside = path.with_name(path.stem + ".meta.json")
+    for file in (path, beside):
+        check_free(file, overwrite=overwrite)
+    return beside
+
+
 def write_table(table: pd.DataFrame, path: Path, meta: Mapping[str, Any], *, overwrite: bool = False) -> None:
     """Write a table as CSV or Parquet by its suffix, whole or not at all, and its provenance to NAME.meta.json.
 
@@ -160,8 +212,7 @@ def write_table(table: pd.DataFrame, path: Path, meta: Mapping[str, Any], *, ove
     MissingExtra
         For Parquet without pyarrow.
     """
-    if path.suffix not in (".csv", ".parquet"):
-        raise InputError(f"Table '{path.name}': allowed are .csv and .parquet")
+    beside = check_table(path, overwrite=overwrite)
     with whole_file(path, overwrite=overwrite) as temporary:
         if path.suffix == ".csv":
             table.to_csv(temporary, index=False, float_format=TABLE_FORMAT)
@@ -170,8 +221,8 @@ def write_table(table: pd.DataFrame, path: Path, meta: Mapping[str, Any], *, ove
                 table.to_parquet(temporary, index=False, compression="zstd")
             except ImportError:
                 raise MissingExtra("Writing Parquet", "parquet") from None
-        with whole_file(path.with_name(path.stem + ".meta.json"), overwrite=True) as beside:
-            beside.write_text(json.dumps(meta, indent=2) + "\n", encoding="utf-8")
+        with whole_file(beside, overwrite=overwrite) as meta_file:
+            meta_file.write_text(json.dumps(meta, indent=2, ensure_ascii=False) + "\n", encoding="utf-8")
 
 
 def write_screening(
@@ -193,7 +244,8 @@ def write_screening(
     progress("tables")
     write_table(screening.candidates, place / "candidates.csv", meta)
     write_table(screening.shortlist, place / "shortlist.csv", meta)
-    (place / brief_name).write_text(brief.text, encoding="utf-8")
+    copy = place / (brief_name if brief_name.endswith(".toml") else "brief.toml")
+    copy.write_bytes(brief.text.encode())
     shown = screening.shortlist if screening.met else screening.nearest
     if len(shown):
         progress("property chart")
@@ -248,7 +300,7 @@ def number(value: Any) -> str:
 def markdown(header: Sequence[str], lines: Sequence[Sequence[str]]) -> str:
     """Return a Markdown table."""
     rows = [header, ["---"] * len(header), *lines]
-    return "\n".join("| " + " | ".join(row) + " |" for row in rows) + "\n"
+    return "\n".join("| " + " | ".join(cell.replace("|", "\\|") for cell in row) + " |" for row in rows) + "\n"
 
 
 def _asked(brief: Brief) -> str:
@@ -282,12 +334,13 @@ def _cells(table: pd.DataFrame, brief: Brief, *, misses: bool) -> str:
         miss = []
         for limit in brief.limits:
             amount = row[f"miss_{limit.column}"]
-            if not amount == 0.0:
-                miss.append(f"{limit.column} by {number(amount)}")
+            if amount != 0.0:
+                miss.append(f"{limit.column} by {number(amount)}" if amount > 0.0 else f"{limit.column} has no value")
         lines.append([str(i), str(row["candidate"]), row["family"], parameter_words(row),
                       *(number(row[name]) for name in columns), row["reasons"].replace(" ", ", ") or "none",
                       *(["; ".join(miss)] if misses else [])])  # fmt: skip
-    return markdown(["", "no.", "family", "parameters", *columns, "cautions", *(["misses"] if misses else [])], lines)
+    header = ["rank", "no.", "family", "parameters", *columns, "cautions"]
+    return markdown([*header, "misses"] if misses else header, lines)
 
 
 def _falls(screening: Screening) -> str:
@@ -301,8 +354,20 @@ def _falls(screening: Screening) -> str:
         families.append([str(name), *(f"{count:,}" for count in (len(group), int(group["meets"].sum()), *verdicts))])
     return (
         "## How many fell to what\n\n" + markdown(["limit", "missed", "share", "missed this alone"], lines) + "\n"
-        + markdown(["family", "candidates", "meet", "ok", "caution", "reject"], families)
+        + markdown(["family", "candidates", "meet", "ok", "caution", "reject"], families) + "\n"
+        + markdown(["reason", "verdict", "candidates", "meaning"], [
+            [f"`{code}`", reason_level(code), f"{count:,}", reason_text(code)] for code, count in _reasons(table)
+        ])
     )  # fmt: skip
+
+
+def _reasons(table: pd.DataFrame) -> list[tuple[str, int]]:
+    """Return each reason with the number of candidates it speaks against, rejects first, the most common first."""
+    counts: Counter[str] = Counter()
+    for codes, count in table["reasons"].value_counts().items():
+        for code in str(codes).split():
+            counts[code] += int(count)
+    return sorted(counts.items(), key=lambda item: (reason_level(item[0]) != "reject", -item[1], item[0]))
 
 
 def _tolerance(screening: Screening) -> str:
@@ -311,15 +376,19 @@ def _tolerance(screening: Screening) -> str:
     if not tolerance or not len(table):
         return ""
     walls = table["thinnest_mm"].to_numpy(float)
+    below = (
+        f"Walls under the {brief.process.recommended_wall_mm:g} mm that the process recommends: "
+        f"{int((walls < brief.process.recommended_wall_mm).sum())} of {len(walls)} shortlisted cells."
+    )
     share = tolerance / walls.min()
     low = max(1.0 - share, 0.0) ** 3 - 1.0
     return (
         "## What the wall tolerance does\n\n"
         f"A wall that is {tolerance:g} mm off everywhere is {share:.0%} of the thinnest shortlisted wall "
-        f"({walls.min():g} mm). "
+        f"({number(walls.min())} mm). "
         f"Where walls bend, stiffness goes with the cube of the wall: {low:+.0%} to {(1.0 + share) ** 3 - 1.0:+.0%}. "
         f"Density moves by about {share:.0%}, Poisson's ratio little. A uniform bias counts; scatter from wall to wall "
-        "hardly does. Make and measure a coupon first.\n"
+        f"hardly does. Make and measure a coupon first. {below}\n"
     )
 
 
@@ -329,7 +398,8 @@ def summary(screening: Screening, *, figures: Sequence[str], version: str) -> st
     parts = [f"# {brief.title}\n"]
     if met:
         kept = len(screening.shortlist)
-        parts.append(f"**{met:,} of {brief.count:,} candidates meet the brief**; the {kept} best are listed here.\n")
+        which = f"{kept} of their Pareto front" if brief.front else f"the {kept} best"
+        parts.append(f"**{met:,} of {brief.count:,} candidates meet the brief**; {which} are listed here.\n")
     else:
         parts.append(f"**Nothing meets the brief**: none of {brief.count:,} candidates.\n")
     parts.append(_asked(brief))
@@ -344,16 +414,22 @@ def summary(screening: Screening, *, figures: Sequence[str], version: str) -> st
         parts.append("## What is in the way\n")
         worst = sorted(screening.falls, key=lambda fall: -fall.missed)
         parts += [f"- {f.limit.words}: missed by {f.missed:,}, by {f.alone:,} as the only miss" for f in worst]
+        rejected = (screening.candidates["verdict"] == "reject").sum()
+        counts = [(code, n) for code, n in _reasons(screening.candidates) if reason_level(code) == "reject"]
+        why = f" ({', '.join(f'{code} {n:,}' for code, n in counts)})" if counts else ""
+        parts.append(f"- verdict not reject: missed by {rejected:,}{why}")
         parts.append(
             "\nA limit that many candidates miss alone is the one to relax first, or to widen the ranges for.\n"
         )
-        parts += ["## Nearest candidates\n", _cells(screening.nearest, brief, misses=True)]
+        parts.append("## Nearest candidates\n")
         if len(screening.nearest):
-            parts.append("![property chart](chart.png)\n")
+            parts += [_cells(screening.nearest, brief, misses=True), "![property chart](chart.png)\n"]
+        else:
+            parts.append("None: every candidate is rejected, or has no value for one of the limits.\n")
         reasons = screening.nearest["reasons"]
-    codes = sorted({code for text in reasons for code in text.split()})
-    if codes:
-        parts += ["## What the cautions mean\n", *(f"- `{code}`: {reason_text(code)}." for code in codes), ""]
+    found = sorted({code for text in reasons for code in text.split()})
+    if found:
+        parts += ["## What the cautions mean\n", *(f"- `{code}`: {reason_text(code)}." for code in found), "\n"]
     parts += [_falls(screening), _tolerance(screening)]
     if figures:
         parts += ["## Every direction\n", *(f"![{name}]({name})\n" for name in figures)]
@@ -363,4 +439,4 @@ def summary(screening: Screening, *, figures: Sequence[str], version: str) -> st
         "what speaks against each cell. Columns are explained by `homog families ID`.\n",
         f"homog-cells {version}.\n",
     ]
-    return "\n".join(part for part in parts if part)
+    return re.sub(r"\n{3,}", "\n\n", "\n".join(part for part in parts if part))

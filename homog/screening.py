@@ -2,7 +2,7 @@
 
 A candidate meets the brief if it keeps every limit and nothing rejects it. Those that do are ranked by the brief's
 columns in order, or only the Pareto front of them is kept; if none does, the nearest are those with the smallest sum of
-relative misses.
+misses, each relative to its limit.
 """
 
 from __future__ import annotations
@@ -134,7 +134,11 @@ def records(table: pd.DataFrame) -> list[dict[str, Any]]:
 
 
 def shortlist(meeting: pd.DataFrame, brief: Brief) -> pd.DataFrame:
-    """Return the ranked rows to keep: at most `per_family` of a family, `keep` in all; ties by candidate number."""
+    """Return the ranked rows to keep: at most `per_family` of a family, `keep` in all; ties by candidate number.
+
+    In order of rank, or of a Pareto front spread evenly over it. A candidate without a value to rank by counts as the
+    worst.
+    """
     missing = [g.column for g in brief.goals if g.column not in meeting]
     if missing:
         raise InputError(f"No candidate family has the column '{missing[0]}' to rank by; rank by another column")
@@ -142,32 +146,33 @@ def shortlist(meeting: pd.DataFrame, brief: Brief) -> pd.DataFrame:
     order = np.lexsort((meeting["candidate"].to_numpy(), *keys.T[::-1]))
     if brief.front:
         order = order[pareto(keys[order])]
-    families = meeting["family"].to_numpy()
-    taken: dict[str, int] = {}
-    kept: list[int] = []
-    for row in order:
-        name = families[row]
-        if taken.get(name, 0) < brief.per_family:
-            taken[name] = taken.get(name, 0) + 1
-            kept.append(row)
-        if len(kept) == brief.keep and not brief.front:
-            break
-    if len(kept) > brief.keep:  # a front is thinned evenly, both ends stay
-        kept = [kept[i] for i in np.unique(np.linspace(0, len(kept) - 1, brief.keep).round().astype(int))]
-    found = meeting.iloc[kept].reset_index(drop=True)
+    families = meeting["family"].to_numpy()[order]
+    chosen = np.zeros(len(order), bool)
+    for name in set(families):
+        chosen[_kept(np.flatnonzero(families == name), brief.per_family, evenly=brief.front)] = True
+    order = _kept(order[chosen], brief.keep, evenly=brief.front)
+    found = meeting.iloc[order].reset_index(drop=True)
     found.insert(0, "rank", np.arange(1, len(found) + 1))
     return found
 
 
-def pareto(keys: NDArray[np.float64]) -> NDArray[np.int64]:
-    """Return the rows of keys (m, g), sorted lexicographically, that no other row beats in every column; all minimised.
+def _kept(rows: NDArray[np.int64], most: int, *, evenly: bool) -> NDArray[np.int64]:
+    """Return at most so many of the ranked rows: the first, or spread evenly over them, so that both ends stay."""
+    if len(rows) <= most or not evenly:
+        return rows[:most]
+    return np.asarray(rows[np.linspace(0, len(rows) - 1, most).round().astype(int)])
 
-    In lexicographic order nothing later can beat what came before, so one pass against the front so far is enough.
+
+def pareto(keys: NDArray[np.float64]) -> NDArray[np.int64]:
+    """Return the rows of keys (m, g), sorted lexicographically, that no other row equals or beats in every column.
+
+    All columns are minimised; of equal rows the first stays. In lexicographic order nothing later can beat what came
+    before, so one pass against the front so far is enough.
     """
-    if keys.shape[1] == 2:
+    if keys.shape[1] == 2 and len(keys):
         second = keys[:, 1]
-        before = np.concatenate([[np.inf], np.minimum.accumulate(second)[:-1]])
-        return np.flatnonzero(second < before)
+        better = second[1:] < np.minimum.accumulate(second)[:-1]
+        return np.flatnonzero(np.concatenate([[True], better]))
     front: list[int] = []
     best = np.empty((0, keys.shape[1]))
     for i, row in enumerate(keys):

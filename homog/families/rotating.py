@@ -1,9 +1,12 @@
 """Units that turn: rigid-looking polygons joined at their corners by short flexible ligaments.
 
 A unit is a braced polygon of bars whose areas reproduce a plate (Filipov, Liu, Tachi, Schenk & Paulino 2017, Int. J.
-Solids Struct. 124, 26; from memory, confirmed), per unit depth. Two units meet at a pin and are joined by two hinges of
-half the ligament's stiffness, one on each side, so that the symmetry stays. The ligament is a flexure strip,
-K = E t^3 / (12 l) per unit depth; its stretch and shear are left out, and its solid is part of the units' corners.
+Solids Struct. 124, 26; from memory, confirmed), per unit depth. The rule's shear is right only at nu = 1/3: at 0.4 it
+is a third too stiff and breaks the Voigt bound, at 0 it vanishes. So it is used at nu = 1/3, with the largest modulus
+that makes the unit stiffer than the parent neither in area nor in shear (`plate`). Two units meet at a pin and are
+joined by two hinges of half the ligament's stiffness, one on each side, so that the symmetry stays. The ligament is a
+flexure strip, K = E t^3 / (12 l) per unit depth; its stretch and shear are left out, its solid is part of the units'
+corners.
 """
 
 from __future__ import annotations
@@ -22,6 +25,15 @@ Corner = tuple[int, tuple[int, int]]
 
 def _ligament_hinge(p: Values, material: Material) -> Array:
     return np.asarray(material.wall_modulus_MPa * p["ligament_thickness"] ** 3 / (12.0 * p["ligament_length"]))
+
+
+def plate(material: Material) -> float:
+    """Return the modulus of a plate of nu = 1/3 with neither K nor G above the parent's, MPa.
+
+    K = E/(2 (1 - nu)) and G = E/(2 (1 + nu)) in plane stress; of nu = 1/3 they are 3 E'/4 and 3 E'/8.
+    """
+    E, nu = material.wall_modulus_MPa, material.wall_poisson
+    return min(2.0 * E / (3.0 * (1.0 - nu)), 4.0 * E / (3.0 * (1.0 + nu)))
 
 
 def _units(
@@ -47,9 +59,8 @@ def _squares(p: Values, material: Material) -> UnitCell:
     B: list[Corner] = [(0, (0, 0)), (1, (0, -1)), (2, (1, -1)), (3, (1, 0))]  # left, bottom, right, top corner of B
     bars = [[U[i], U[(i + 1) % 4]] for U in (A, B) for i in range(4)]
     bars += [[U[i], U[i + 2]] for U in (A, B) for i in (0, 1)]
-    nu = material.wall_poisson
-    edge, brace = 1.0 / (2.0 * (1.0 + nu)), np.sqrt(2.0) * nu / (1.0 - nu**2)  # of W = H = side
-    rigidity = np.asarray(material.wall_modulus_MPa * a)[..., None] * np.array([edge] * 8 + [brace] * 4)
+    edge, brace = 0.375, 0.375 * np.sqrt(2.0)  # the rule at W = H = side, nu = 1/3
+    rigidity = np.asarray(plate(material) * a)[..., None] * np.array([edge] * 8 + [brace] * 4)
     hinges = []
     for i in range(4):  # pin i is corner i of A and of B; both neighbours on the same side of the pin face one void
         shift = np.array(A[i][1]) - np.array(B[i][1])
@@ -72,8 +83,7 @@ def _triangles(p: Values, material: Material) -> UnitCell:
     A: list[Corner] = [(0, (0, 0)), (1, (0, 0)), (2, (0, 0))]
     B: list[Corner] = [(0, (0, 0)), (1, (1, 0)), (2, (0, 1))]
     bars = [[U[i], U[(i + 1) % 3]] for U in (A, B) for i in range(3)]
-    # three bars of a triangle: areal stiffness as the plate's, E side / (2 sqrt3 (1 - nu)); shear exact at nu = 1/3
-    each = material.wall_modulus_MPa * a / (2.0 * np.sqrt(3.0) * (1.0 - material.wall_poisson))
+    each = plate(material) * a * np.sqrt(3.0) / 4.0  # three bars of an equilateral plate of nu = 1/3
     hinges = []
     for i in range(3):
         shift = np.array(A[i][1]) - np.array(B[i][1])

@@ -1,7 +1,8 @@
-"""The page of one cell: dials of nu, E and G, its shape at scale with axes and a scale bar, and what its columns say."""
+"""The page of one cell: dials of nu, E and G, its shape at scale with axes and a bar, and what its columns say."""
 
 from __future__ import annotations
 
+import dataclasses
 import math
 from collections.abc import Sequence
 from typing import TYPE_CHECKING, Any
@@ -10,7 +11,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from homog import directional
-from homog.cell import Status
+from homog.cell import Kind, Status
 from homog.columns import Results, column, evaluate
 from homog.directional import Extremes
 from homog.effective import Effective, soft_mode
@@ -21,9 +22,7 @@ from homog.plots.dial import TURN, Panel, Scale, draw_panel
 from homog.plots.style import (
     GREY,
     HEAD,
-    INK,
     PLAIN,
-    SMALL,
     TITLE,
     Limit,
     axes_at,
@@ -42,12 +41,14 @@ if TYPE_CHECKING:
 
 Array = NDArray[np.float64]
 
-WIDTH, HEIGHT = 10.4, 7.4
+WIDTH, HEIGHT = 10.4, 7.55
 """Of the page in inches: landscape, so that it prints at full size on A4 and letter paper."""
 LINE = 0.15
 """From one small line to the next, inches."""
 SAME = 1e-3
 """Two curves that differ less than this share are drawn as one."""
+FIRST = "all in the plane 1-2"
+SECOND = "dashed: the plane of axis 1 and the 45° line between 2 and 3"
 READINGS = {
     "planar": ("relative_density", "density_kg_m3", "E1_MPa", "E2_MPa", "G12_MPa", "nu12", "nu21", "eta1_12", "nu_min",
                "nu_max", "auxetic_share", "auxetic_reach_deg", "anisotropy", "slenderness", "cell_1_mm", "cell_2_mm"),
@@ -60,7 +61,9 @@ READINGS = {
 """What stands beside the cell."""
 
 
-def polar_figure(effective: Effective, *, limits: Sequence[Limit] = (), title: str = "", cell_label: str = "") -> Figure:
+def polar_figure(
+    effective: Effective, *, limits: Sequence[Limit] = (), title: str = "", cell_label: str = ""
+) -> Figure:
     """Return the page of one cell: E, nu and G against direction, its shape at scale, and its main columns.
 
     Parameters
@@ -94,7 +97,7 @@ def polar_figure(effective: Effective, *, limits: Sequence[Limit] = (), title: s
             "costs no energy, so no Poisson's ratio exists; brace the cell or stiffen its joints"
         )
     if results.status[0] != Status.OK or not np.isfinite(results.membrane).all():
-        raise InputError(f"Cell '{family}' has no polar plot: it cannot exist or has no compliance; check its parameters")
+        raise InputError(f"Cell '{family}' has no polar plot: it cannot exist or be inverted; check its parameters")
     for limit in limits:
         column(limit.column)
     panels = {"planar": _plane_panels, "sheet": _sheet_panels, "spatial": _space_panels}[effective.kind](results)
@@ -103,14 +106,14 @@ def polar_figure(effective: Effective, *, limits: Sequence[Limit] = (), title: s
 
     figure = blank_figure(WIDTH, HEIGHT)
     _head(figure, effective, title, cell_label)
-    places = ((0.15, 1.22, 4.95), (5.2, 1.0, 2.5), (7.78, 1.0, 2.5))  # left, bottom and width of each dial
-    for panel, (x, y, width) in zip(panels, places, strict=True):
-        _place(figure, panel, x, y, width, limits, values)
+    places = ((0.15, 1.72, 4.95), (5.2, 1.12, 2.45), (7.78, 1.12, 2.45))  # left, bottom and width of each dial
+    drawn = [panel.limits(limits) for panel in panels]
+    drawn[0] += [limit for limit in limits if all(limit not in found for found in drawn)]  # listed below the first dial
+    for panel, listed, (x, y, width) in zip(panels, drawn, places, strict=True):
+        _place(figure, panel, x, y, width, limits, listed, values)
     _shape(figure, effective)
-    _readings(figure, effective, values, limits, panels)
-    parent = effective.cell.parent
-    foot(figure, f"{effective.model} model, parent {parent.name} (E {number(parent.modulus_MPa, 'MPa')}, "
-                 f"ν {number(parent.poisson)})")  # fmt: skip
+    _readings(figure, effective.kind, values)
+    foot(figure, f"Model: {effective.model}. Parent: {effective.cell.parent.name}")
     return figure
 
 
@@ -120,7 +123,7 @@ def polar_figure(effective: Effective, *, limits: Sequence[Limit] = (), title: s
 def _panels(C: Array, e: Extremes, reach: float, others: Sequence[tuple[Array, Array, Array]] = ()) -> list[Panel]:
     """nu, E and G over the plane 1-2 of a stiffness whose extremes there are known; `others` are further curves."""
     nu, E, G = (of(C, angle=TURN) for of in (directional.poisson, directional.young, directional.shear))
-    g_min, g_max = (float(np.degrees(TURN[k])) for k in (G.argmin(), G.argmax()))
+    g_min, g_max = _first(-G), _first(G)
     return [
         Panel("nu", "Poisson's ratio ν", "", (nu, *(o[0] for o in others)), {"nu12": 0.0, "nu21": 90.0},
               ("nu_min", "nu_max"), (float(e.nu_min), float(e.nu_min_deg)), (float(e.nu_max), float(e.nu_max_deg)),
@@ -130,6 +133,11 @@ def _panels(C: Array, e: Extremes, reach: float, others: Sequence[tuple[Array, A
         Panel("G", "Shear modulus G", "MPa", (G, *(o[2] for o in others)), {"G12_MPa": 0.0},
               ("G_min_MPa", "G_max_MPa"), (float(e.G_min), g_min), (float(e.G_max), g_max)),
     ]  # fmt: skip
+
+
+def _first(curve: Array) -> float:
+    """The smallest direction, degrees, at which a curve over TURN is highest."""
+    return float(np.degrees(TURN[np.argmax(curve >= curve.max() - SAME**2 * np.abs(curve).max())]))
 
 
 def _auxetic_words(e: Extremes, reach: float) -> tuple[str, ...]:
@@ -153,9 +161,11 @@ def _sheet_panels(results: Results) -> list[Panel]:
     bending = results.compliance[0, 3:, 3:]
     e = directional.plane_extremes(bending)
     curve = directional.poisson(np.linalg.inv(bending), angle=TURN)
-    below = Panel("bending_nu", "Bending Poisson's ratio", "", (curve,), {"bending_nu12": 0.0, "bending_nu21": 90.0}, (),
-                  (float(e.nu_min), float(e.nu_min_deg)), (float(e.nu_max), float(e.nu_max_deg)), signed=True,
-                  notes=("inside the bold ring a dome, outside a saddle",))  # fmt: skip
+    below = Panel(
+        "bending_nu", "Bending Poisson's ratio", "", (curve,), {"bending_nu12": 0.0, "bending_nu21": 90.0}, (),
+        (float(e.nu_min), float(e.nu_min_deg)), (float(e.nu_max), float(e.nu_max_deg)), signed=True,
+        notes=("bold ring: a dome inside, a saddle outside",),
+    )  # fmt: skip
     return [nu, below, E]
 
 
@@ -169,9 +179,10 @@ def _space_panels(results: Results) -> list[Panel]:
     slanted = (directional.poisson(C, direction=n, across=m), directional.young(C, direction=n),
                directional.shear(C, direction=n, across=m))  # fmt: skip
     reach = float(e.auxetic_reach_deg)
-    panels = _panels(C, e, reach, [slanted])
+    panels, note = _panels(C, e, reach, [slanted]), f"{FIRST}; {SECOND}"
     if all(np.abs(np.subtract(*p.curves)).max() <= SAME * np.abs(p.curves).max() for p in panels):
-        return _panels(C, e, reach)
+        panels, note = _panels(C, e, reach), FIRST
+    panels[0] = dataclasses.replace(panels[0], notes=(note, *panels[0].notes))
     return panels
 
 
@@ -188,15 +199,23 @@ def _head(figure: Figure, effective: Effective, title: str, cell_label: str) -> 
         parts = []
         for name, value in cell.parameters.items():
             plain = np.ravel(value)[0]
-            said = str(plain) if isinstance(plain, str) else number(float(plain), units.get(name, "").replace("deg", "°"))
+            unit = units.get(name, "").replace("deg", "°")
+            said = str(plain) if isinstance(plain, str) else number(float(plain), unit)
             parts.append(f"{name.replace('_', ' ')} {said}")
         cell_label = f"{cell.family}: {', '.join(parts)}" if parts else cell.family
-    lines = wrapped(cell_label, WIDTH - 0.4, PLAIN)
-    write(figure, 0.2, HEIGHT - 0.46, "\n".join(lines[:2]), fontsize=PLAIN, color=GREY, gid="cell-label")
+    lines = wrapped(cell_label, 7.9, PLAIN)
+    if len(lines) > 2:
+        lines[1] += " …"
+    parent = cell.parent
+    deep = ", plane strain" if parent.deep and cell.kind == "planar" else ""
+    said = f"parent: {parent.name}, E {number(parent.modulus_MPa, 'MPa')}, ν {number(parent.poisson)}{deep}"
+    lines = [*lines[:2], said]
+    write(figure, 0.2, HEIGHT - 0.45, "\n".join(lines), fontsize=PLAIN, color=GREY, gid="cell-label")
 
 
 def _place(figure: Figure, panel: Panel, x: float, y: float, width: float, limits: Sequence[Limit],
-           values: dict[str, Any]) -> None:  # fmt: skip
+           listed: Sequence[Limit], values: dict[str, Any]) -> None:  # fmt: skip
+    """One dial with its heading above and, below it, its extremes and the requirements in `listed`."""
     height = width * 1.13 / 1.22
     ax = axes_at(figure, x, y, width, height, panel.name)
     required = next((limit.low for limit in limits if limit.column == "auxetic_reach_deg"), -math.inf)
@@ -204,11 +223,21 @@ def _place(figure: Figure, panel: Panel, x: float, y: float, width: float, limit
     top = y + height + 0.26
     write(figure, x + 0.1, top, panel.title + (f", {panel.unit}" if panel.unit else ""), fontsize=HEAD,
           fontweight="bold")  # fmt: skip
-    lines = [line for text in _caption(panel, scale) for line in wrapped(text, width - 0.1)]
-    write(figure, x + 0.1, y - 0.04, "\n".join(lines), linespacing=1.35, gid=f"caption-{panel.name}")
+    texts = _caption(panel, scale, wide=width > 4.0) + [_required(limit, values) for limit in listed]
+    lines = [line for text in texts for line in wrapped(text, width - 0.1)]
+    most = int((y - 0.3) / LINE)
+    if len(lines) > most:
+        lines = [*lines[: most - 1], f"and {len(lines) - most + 1} lines more: see the table"]
+    write(figure, x + 0.1, y - 0.06, "\n".join(lines), linespacing=1.3, gid=f"caption-{panel.name}")
 
 
-def _caption(panel: Panel, scale: Scale) -> list[str]:
+def _required(limit: Limit, values: dict[str, Any]) -> str:
+    has = float(values[limit.column])
+    met = "met" if limit.low <= has <= limit.high else "missed"
+    return f"required {bounds_of(limit)}: has {value_of(limit.column, has)}, {met}"
+
+
+def _caption(panel: Panel, scale: Scale, *, wide: bool) -> list[str]:
     places = 2 if panel.signed else None
 
     def said(at: tuple[float, float]) -> str:
@@ -218,7 +247,8 @@ def _caption(panel: Panel, scale: Scale) -> list[str]:
     if panel.level:
         lines.append(f"the same in all directions, {number(panel.highest[0], panel.unit, places=places)}")
     else:
-        lines.append(f"▲ highest {said(panel.highest)}   ▽ lowest {said(panel.lowest)}")
+        found = [f"▲ max {said(panel.highest)}", f"▽ min {said(panel.lowest)}"]
+        lines += ["\u2003".join(found)] if wide else found
     lines += panel.notes
     if scale.logarithmic:
         lines.append("logarithmic radius")
@@ -227,21 +257,23 @@ def _caption(panel: Panel, scale: Scale) -> list[str]:
 
 def _shape(figure: Figure, effective: Effective) -> None:
     cell = effective.cell if not effective.cell.shape else effective.cell.at((0,) * len(effective.cell.shape))
-    x, y, width, height = 5.3, 3.85, 2.75, 2.65
+    x, y, width, height = 5.3, 3.87, 2.8, 2.7
     if cell.kind == "planar":
-        paint.draw_plane(axes_at(figure, x, y, width, height, "cell"), cell, width / height)
+        paint.draw_plane(axes_at(figure, x, y, width, height, "cell"), cell)
     elif cell.kind == "sheet":
-        paint.draw_sheet(axes_at(figure, x, y + 1.2, width, height - 1.2, "cell"), cell, oblique=False)
-        paint.draw_sheet(axes_at(figure, x, y, width, 1.15, "oblique"), cell, oblique=True)
+        part = 0.41 * width
+        paint.draw_sheet(axes_at(figure, x, y, part, height, "cell"), cell, oblique=False)
+        paint.draw_sheet(axes_at(figure, x + part + 0.1, y, width - part - 0.1, height, "oblique"), cell, oblique=True)
     else:
         paint.draw_space(axes_at(figure, x, y, width, height, "cell"), cell)
 
 
-def _readings(figure: Figure, effective: Effective, values: dict[str, Any], limits: Sequence[Limit],
-              panels: Sequence[Panel]) -> None:  # fmt: skip
-    x, right, y = 8.3, WIDTH - 0.2, HEIGHT - 0.9
-    for name in READINGS[effective.kind]:
-        label, _ = symbol(name)
-        write(figure, x, y, label, color=GREY)
+def _readings(figure: Figure, kind: Kind, values: dict[str, Any]) -> None:
+    left, right, y = 8.3, WIDTH - 0.2, HEIGHT - 0.88
+    for name in READINGS[kind]:
+        write(figure, left, y, symbol(name)[0], color=GREY)
         write(figure, right, y, value_of(name, float(values[name])), ha="right")
-        y -= LINE + 0.01
+        y -= LINE + 0.005
+    codes = ", ".join(str(values["reasons"]).split())
+    said = f"verdict: {values['verdict']}" + (f" ({codes})" if codes else "")
+    write(figure, left, y - 0.06, "\n".join(wrapped(said, 0.88 * (right - left))), fontweight="bold", gid="verdict")

@@ -24,10 +24,11 @@ PARALLEL = 1e-9
 """A lattice vector lies along an axis if the rest of it is below this share of its length."""
 COPLANAR_DEG = 0.5
 """Two triangles that make less than this angle are one panel; the edge between them is no crease."""
-ROUND = 12
+ROUND = 9
 """Segments of a half circle."""
 TUBE, ALONG = 16, 6
 """Facets round and along a strut."""
+EDGE_SAMPLES = 61
 LIGHT = np.array([-0.45, 0.55, 0.70])
 """Where the light comes from: left, up, towards the viewer."""
 AMBIENT = 0.30
@@ -55,10 +56,34 @@ def repeat_vectors(cell: UnitCell) -> Array:
 
 
 def repeat_corners(cell: UnitCell) -> Array:
-    """Return the corners (4, 2) of a planar repeat, counter-clockwise, about the middle of the cell's points."""
+    """Return the corners (4, 2) of a planar repeat, counter-clockwise, placed so that its edges cross little material.
+
+    About the middle of the cell's points, or moved off it by quarters of the repeat if the section's edge is then less
+    in the way. Of a sheet, always about the middle.
+    """
     a, b = repeat_vectors(cell)[:, :2]
     start = cell.points[:, :2].mean(axis=0) - (a + b) / 2.0
-    return np.array([start, start + a, start + a + b, start + b])
+    corners = np.array([start, start + a, start + a + b, start + b])
+    if cell.kind != "planar":
+        return corners
+    polygons = section(cell, corners.min(axis=0), (corners + a + b).max(axis=0))
+    along = np.linspace(0.0, 1.0, EDGE_SAMPLES, endpoint=False)[:, None]
+    edge = np.concatenate([start + along * a, start + along * b])  # the other two edges are images of these
+    moves = [i / 4.0 * a + j / 4.0 * b for i, j in itertools.product(range(4), repeat=2)]
+    tried = np.concatenate([edge + move for move in moves])
+    inside = np.any([contains(polygon, tried) for polygon in polygons], axis=0).reshape(len(moves), -1).sum(axis=1)
+    return np.asarray(corners + moves[int(np.argmin(inside))])
+
+
+def contains(polygon: Array, points: Array) -> NDArray[np.bool_]:
+    """Return which points (q, 2) lie in a polygon (k, 2): an odd number of its edges cross the ray to the right."""
+    inside = np.asarray(((points >= polygon.min(axis=0)) & (points <= polygon.max(axis=0))).all(axis=1))
+    x, y = points[inside, :1], points[inside, 1:]
+    (x0, y0), (x1, y1) = polygon.T, np.roll(polygon, -1, axis=0).T
+    with np.errstate(divide="ignore", invalid="ignore"):
+        crossed = ((y0 > y) != (y1 > y)) & (x < x0 + (y - y0) * (x1 - x0) / (y1 - y0))
+    inside[inside] = crossed.sum(axis=1) % 2 == 1
+    return inside
 
 
 def shifts_into(cell: UnitCell, low: Array, high: Array, reach: float) -> Array:

@@ -1,8 +1,8 @@
 """What all figures share: colours, how names and numbers are written, the foot of the page, and saving.
 
 Ink, blue and ochre differ in lightness as well as in hue, and every meaning has a second sign (width, dash, hairs,
-marker), so that nothing is lost in greyscale or to the colour-blind. `save` writes a figure whole or not at all, and the
-same figure gives the same bytes.
+marker), so that nothing is lost in greyscale or to the colour-blind. `save` writes a figure whole or not at all, and
+the same figure gives the same bytes.
 """
 
 from __future__ import annotations
@@ -10,10 +10,13 @@ from __future__ import annotations
 import math
 import os
 import re
-import textwrap
 import threading
+from functools import cache
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, Protocol
+
+import numpy as np
+from numpy.typing import NDArray
 
 from homog.errors import InputError
 
@@ -121,6 +124,13 @@ def axes_at(figure: Figure, x: float, y: float, width: float, height: float, lab
     return figure.add_axes((x / w, y / h, width / w, height / h), label=label)
 
 
+def axes_size(ax: Axes) -> NDArray[np.float64]:
+    """Return width and height of axes in inches."""
+    figure, box = ax.get_figure(root=True), ax.get_position()
+    assert figure is not None, "axes without a figure"
+    return np.asarray(figure.get_size_inches() * np.array([box.width, box.height]))
+
+
 def write(figure: Figure, x: float, y: float, text: str, **style: Any) -> Any:
     """Write text at a place given in inches, small ink letters unless the style says otherwise."""
     w, h = figure.get_size_inches()
@@ -128,15 +138,31 @@ def write(figure: Figure, x: float, y: float, text: str, **style: Any) -> Any:
     return figure.text(x / w, y / h, text, **style)
 
 
+@cache
+def wide(text: str, size: float = SMALL) -> float:
+    """Return the width of a text in inches."""
+    from matplotlib.font_manager import FontProperties
+    from matplotlib.textpath import text_to_path
+
+    return float(text_to_path.get_text_width_height_descent(text, FontProperties(size=size), ismath=False)[0]) / 72.0
+
+
 def wrapped(text: str, inches: float, size: float = SMALL) -> list[str]:
-    """Return the lines of a text that fit a width: letters are 0.56 of their size wide on average."""
-    return textwrap.wrap(text, max(12, int(inches * 72.0 / (0.56 * size)))) or [""]
+    """Return the lines of a text that fit a width; a word that is too long has a line of its own."""
+    lines = [""]
+    for word in text.split(" "):
+        longer = f"{lines[-1]} {word}".strip() if lines[-1] else word
+        if lines[-1] and wide(longer, size) > inches:
+            lines.append(word)
+        else:
+            lines[-1] = longer
+    return lines
 
 
 def foot(figure: Figure, basis: str) -> None:
     """Write at the foot what the numbers rest on (`basis`: model, parent) and what they are."""
     width = float(figure.get_size_inches()[0])
-    lines = wrapped(f"{basis}: {MEANING}" if basis else MEANING.capitalize(), width - 0.4)
+    lines = wrapped(f"{basis}. {MEANING[0].upper()}{MEANING[1:]}.", width - 0.4)
     write(figure, 0.2, 0.1 + 0.14 * len(lines), "\n".join(lines), color=GREY, gid="foot")
 
 
