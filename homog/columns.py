@@ -56,7 +56,7 @@ REASONS: Mapping[str, tuple[str, str]] = {
     "nu-outside-limits": ("reject", "a Poisson's ratio outside what a stable material can have"),
     "walls-thick": ("reject", f"a wall or strut is thicker than {SLENDER_REJECT:g} of its length: no beam any more"),
     "beam-model": ("caution", f"a wall or strut is thicker than {SLENDER_CAUTION:g} of its length, with joints "
-                   "as points: at 0.1 a re-entrant cell comes out about 20 % too soft, at 0.2 about 43 %"),
+                   "as points: at 0.1 a re-entrant cell comes out about 24 % too soft, at 0.2 about 45 %"),
     "hinge-model": ("caution", "the ligaments are pure hinges: their stretch and the give of the units' corners "
                     "are left out, so stiffness is an upper estimate"),
     "ligament-stubby": ("caution", f"the ligament is over {LIGAMENT_CAUTION:g} of its length thick: no flexure strip"),

@@ -19,31 +19,36 @@ Index = NDArray[np.int64]
 AZIMUTHS = 720  # points round a strut for its joints' volume; the integrand is continuous: error below 1e-5 of it
 
 
-def sector_surplus(beta: Array, a: Array, b: Array) -> Array:
-    """Return the area by which the union in a sector differs from two half walls, ndarray of the inputs' shape.
-
-    Two walls of half thickness a and b leave a point at the angle beta (0 to 2 pi). Where the two faces meet in an
-    inner corner the walls overlap by (a^2 + b^2) cot(beta)/2 + a b / sin(beta); elsewhere the round end of the
-    thicker one adds a sector of its disc (elementary geometry).
-    """
+def _inner_corner(beta: Array, a: Array, b: Array, disc: Array) -> tuple[Array, NDArray[np.bool_]]:
+    """Return how far along wall a its inner corner with wall b lies, and where one lies outside the joint's disc."""
     sine, cosine = np.sin(beta), np.cos(beta)
     with np.errstate(divide="ignore", invalid="ignore"):
-        corner = -(a**2 + b**2) * cosine / (2.0 * sine) - a * b / sine
-    large, small = np.maximum(a, b), np.minimum(a, b)
-    psi = np.arcsin(small / large)
-    rounded = large**2 / 2.0 * (beta - np.pi / 2.0 - psi) - small * np.sqrt(large**2 - small**2) / 2.0
-    meets = (beta < np.pi) & (b + a * cosine >= 0.0) & (a + b * cosine >= 0.0)
-    return np.where(meets, corner, rounded)
+        foot, other = (b + a * cosine) / sine, (a + b * cosine) / sine
+    return foot, (beta < np.pi) & (foot >= 0.0) & (other >= 0.0) & (foot**2 + a**2 >= disc**2)
 
 
-def corner_cut(beta: Array, a: Array, b: Array) -> Array:
-    """Return how far along wall a its face is swallowed by the corner with wall b (0 where the corner is outer)."""
+def sector_surplus(beta: Array, a: Array, b: Array, disc: Array) -> Array:
+    """Return the area by which the union in a sector differs from two half walls, ndarray of the inputs' shape.
+
+    Two walls of half thickness a and b leave a point at the angle beta (0 to 2 pi); the thickest wall of the joint has
+    a round end of radius `disc`. Where the two faces meet in an inner corner outside the disc, the walls overlap by
+    (a^2 + b^2) cot(beta)/2 + a b / sin(beta); elsewhere the disc bounds the section (elementary geometry).
+    """
+    meets = _inner_corner(beta, a, b, disc)[1]
     with np.errstate(divide="ignore", invalid="ignore"):
-        cut = (b + a * np.cos(beta)) / np.sin(beta)
-    return np.where(beta < np.pi, np.maximum(cut, 0.0), 0.0)
+        corner = -(a**2 + b**2) * np.cos(beta) / (2.0 * np.sin(beta)) - a * b / np.sin(beta)
+    wedge = beta - np.arcsin(a / disc) - np.arcsin(b / disc)
+    flat = a * np.sqrt(disc**2 - a**2) + b * np.sqrt(disc**2 - b**2)
+    return np.where(meets, corner, (disc**2 * wedge - flat) / 2.0)
 
 
-def _arms(n: int, nodes: Index) -> list[Sequence[tuple[int, int]]]:
+def corner_cut(beta: Array, a: Array, b: Array, disc: Array) -> Array:
+    """Return how far along wall a its face is swallowed by the corner with wall b or by the joint's disc."""
+    foot, meets = _inner_corner(beta, a, b, disc)
+    return np.where(meets, foot, np.sqrt(disc**2 - a**2))
+
+
+def arms_of(n: int, nodes: Index) -> list[Sequence[tuple[int, int]]]:
     """Return for each point the (wall, end) pairs that meet there."""
     arms: list[list[tuple[int, int]]] = [[] for _ in range(n)]
     for wall, ends in enumerate(nodes):
@@ -77,7 +82,7 @@ def wall_section(points: Array, lattice: Array, nodes: Index, shifts: Index, thi
     half = np.broadcast_to(thickness, lengths.shape) / 2.0
     area = (2.0 * half * lengths).sum(axis=-1)
     cuts = np.zeros(lengths.shape + (2, 2))  # wall, end, left or right of its direction
-    for arms in _arms(points.shape[-2], nodes):
+    for arms in arms_of(points.shape[-2], nodes):
         walls = np.array([wall for wall, _ in arms])
         ends = np.array([end for _, end in arms])
         out = vectors[..., walls, :] * np.where(ends == 0, 1.0, -1.0)[:, None]
@@ -87,8 +92,9 @@ def wall_section(points: Array, lattice: Array, nodes: Index, shifts: Index, thi
         beta = np.diff(direction, axis=-1, append=direction[..., :1] + 2.0 * np.pi)
         wide = np.take_along_axis(half[..., walls], order, -1)
         after = np.roll(wide, -1, axis=-1)
-        area = area + sector_surplus(beta, wide, after).sum(axis=-1)
-        here, there = corner_cut(beta, wide, after), corner_cut(beta, after, wide)
+        disc = np.broadcast_to(wide.max(axis=-1, keepdims=True), wide.shape)
+        area = area + sector_surplus(beta, wide, after, disc).sum(axis=-1)
+        here, there = corner_cut(beta, wide, after, disc), corner_cut(beta, after, wide, disc)
         for arm, (wall, end) in enumerate(arms):
             found = order == arm  # where this arm stands in the counter-clockwise order
             left = np.where(found, here, 0.0).sum(axis=-1)
@@ -111,7 +117,7 @@ def strut_volume(points: Array, lattice: Array, nodes: Index, shifts: Index, dia
     r = np.asarray(diameter) / 2.0
     volume = np.pi * r**2 * lengths.sum(axis=-1)
     azimuth = 2.0 * np.pi * np.arange(AZIMUTHS) / AZIMUTHS
-    for arms in _arms(points.shape[-2], nodes):
+    for arms in arms_of(points.shape[-2], nodes):
         walls = np.array([wall for wall, _ in arms])
         sign = np.array([1.0 if end == 0 else -1.0 for _, end in arms])
         out = vectors[..., walls, :] * sign[:, None] / lengths[..., walls, None]

@@ -49,6 +49,7 @@ FIRST_RADIUS, LAST_RADIUS = 0.15, 1e-7
 ROUND_OFF = 1e-12
 """Curvature below this share of the largest is none."""
 ESCAPE = 0.03
+"""Share of the longest step that is taken at least where F is convex, so that no climb ends on a saddle."""
 STEPS = 40
 GAIN_TOLERANCE = 1e-8
 """A climb ends with the step that promises less than this (relative); what it still misses is far less."""
@@ -127,9 +128,9 @@ def _seek(S: Array, stretch: Array, fields: Sequence[_Field]) -> tuple[Array, Ar
         # axis 1 is always tried, so that it wins a tie
         reached.append((np.full(len(S), aim), everyone, score[:, -1], np.ones(len(S))))
 
+    crown = np.empty((*level.shape, 3, 3))  # the best frame so far
     tried = np.zeros((len(GOALS), 2, *shut.shape), bool)
-    searched = np.ones(level.shape, bool)
-    crown = None
+    searched, again = np.ones(level.shape, bool), False
     while searched.any():
         begun: list[tuple[Index, Index, Array]] = []
         for aim, (component, sign) in enumerate(GOALS.values()):
@@ -146,19 +147,21 @@ def _seek(S: Array, stretch: Array, fields: Sequence[_Field]) -> tuple[Array, Ar
             tried[aim, quarter, who, point] = True
             turn = 0.5 * (np.arctan2(sign * mixed[who, point], sign * half[who, point]) + np.pi * quarter)
             begun.append((np.full(who.size, aim), who, _turned(frames[point], turn)))
-            if crown is not None:  # the other m may do better from there, although not on the grid
-                begun.append((np.full(members.size, aim), members, _turned(crown[aim, members], 0.5 * np.pi)))
+            if again:  # where one m did best the other may do better yet, although it did not on the grid
+                other = _turned(crown[aim, members], np.full(members.size, 0.5 * np.pi))
+                begun.append((np.full(members.size, aim), members, other))
         goal, who, R = (np.concatenate(x) for x in zip(*begun, strict=True))
         height, R = _climb(S[who], R, COMPONENT[goal], SIGN[goal])
         reached.append((goal, who, height, R[:, 0, 0]))
-        crown = np.empty((*level.shape, 3, 3)) if crown is None else crown
+
         rising = np.argsort(height)
-        rising = rising[height[rising] >= level[goal[rising], who[rising]]]
-        crown[goal[rising], who[rising]] = R[rising]
+        goal, who, height, R = goal[rising], who[rising], height[rising], R[rising]
+        higher = height >= level[goal, who]
+        crown[goal[higher], who[higher]] = R[higher]
         before = level.copy()
         np.maximum.at(level, (goal, who), height)
         moved = level > before + ROUND_TOLERANCE * (1.0 + np.abs(before))
-        searched = moved & (COMPONENT == CROSS)[:, None]
+        searched, again = moved & (COMPONENT == CROSS)[:, None], True
 
     goal, who, height, along = (np.concatenate(x) for x in zip(*reached, strict=True))
     best, angle = np.full(level.shape, -np.inf), np.full(level.shape, np.inf)
@@ -171,7 +174,7 @@ def _seek(S: Array, stretch: Array, fields: Sequence[_Field]) -> tuple[Array, Ar
 def _turned(frames: Array, angle: Array) -> Array:
     """Frames (p, 3, 3) turned about their n by angles (p,) in radians."""
     n, m, k = frames.transpose(1, 0, 2)
-    c, s = np.cos(angle)[..., None], np.sin(angle)[..., None]
+    c, s = np.cos(angle)[:, None], np.sin(angle)[:, None]
     return np.stack([n, c * m + s * k, c * k - s * m], axis=1)
 
 
@@ -228,7 +231,7 @@ def _step(F: Array, radius: Array) -> tuple[Array, Array]:
 
     Newton's step where F is concave and the step stays within the radius. Elsewhere the same about each principal axis
     of the Hessian, cut off one by one, since an axis about which F hardly changes must not shorten the step about the
-    others; where F is convex, by the radius, which leaves a saddle too.
+    others; where F is convex, uphill and at least by ESCAPE.
     """
     g = F[:, 1:4]
     a, b, c, d, e, f = F[:, 4:].T

@@ -81,7 +81,7 @@ FAMILIES = (
             Rule("nodes-collide", "neighbouring nodes touch; a ligament must exceed 2 node_radius + 2 thickness",
                  _nodes_collide),
             Rule("ring-filled", "the ring has no hole; thickness must be under node_radius",
-                 lambda p, m: p["thickness"] >= p["node_radius"]),
+                 lambda p, m: (p["node"] == "ring") & (p["thickness"] >= p["node_radius"])),
         ),
         notes="A rigid node's disc is taken as rigid: 4 node_radius should well exceed thickness.",
     ),

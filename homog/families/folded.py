@@ -20,7 +20,7 @@ Array = NDArray[np.float64]
 
 
 def panel_bars(W: Array, H: Array, thickness: Array, poisson: float) -> tuple[Array, Array, Array]:
-    """Return bar areas (mm2) along W, along H and along the diagonal that give a W x H panel the plate's stiffness.
+    """Return bar areas (mm2) along W, along H and along each diagonal that give a W x H panel the plate's stiffness.
 
     A_x = t (H^2 - nu W^2) / (2 H (1 - nu^2)), A_y likewise, A_d = t nu (H^2 + W^2)^1.5 / (2 H W (1 - nu^2)); exact in
     stretch, in shear only at nu = 1/3 (Filipov et al. 2017, from memory, confirmed). Negative where the panel is too
@@ -81,9 +81,9 @@ def _miura(p: Values, material: Material) -> UnitCell:
     across = b * np.sin(g)
     area_a, area_b, area_d = panel_bars(a, across, t, nu)
     four = np.ones(4)
-    # a side belongs to two panels
+    # a side belongs to two panels; the one diagonal that is there carries for both
     rigidity = np.concatenate(
-        [np.asarray(E * f * A + zero)[..., None] * four for f, A in ((2.0, area_a), (2.0, area_b), (1.0, area_d))], -1
+        [np.asarray(E * f * A + zero)[..., None] * four for f, A in ((2.0, area_a), (2.0, area_b), (2.0, area_d))], -1
     )
     D = E * t**3 / (12.0 * (1.0 - nu**2))
     d = np.sqrt(a**2 + b**2 - 2.0 * a * b * np.cos(g))

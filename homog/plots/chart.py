@@ -34,6 +34,7 @@ from homog.plots.style import (
     blank_figure,
     bounds_of,
     foot,
+    one_at_a_time,
     symbol,
     wrapped,
     write,
@@ -77,6 +78,7 @@ TAIL = 0.002
 """Share of the candidates at each end of an axis that may lie outside it."""
 
 
+@one_at_a_time
 def property_chart(
     table: pd.DataFrame,
     shortlist: pd.DataFrame,

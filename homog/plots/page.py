@@ -30,6 +30,7 @@ from homog.plots.style import (
     bounds_of,
     foot,
     number,
+    one_at_a_time,
     symbol,
     value_of,
     wrapped,
@@ -61,6 +62,7 @@ READINGS = {
 """What stands beside the cell."""
 
 
+@one_at_a_time
 def polar_figure(
     effective: Effective, *, limits: Sequence[Limit] = (), title: str = "", cell_label: str = ""
 ) -> Figure:

@@ -14,6 +14,7 @@ from homog.plots.style import BODY, FAINT, GREY, INK, PLAIN, SMALL, axes_size, n
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
+    from matplotlib.patches import Patch
 
 Array = NDArray[np.float64]
 
@@ -46,8 +47,7 @@ def draw_plane(ax: Axes, cell: UnitCell) -> None:
     polygons = shapes.section(cell, low, high)
     codes = [code for p in polygons for code in (Path.MOVETO, *[Path.LINETO] * (len(p) - 1), Path.CLOSEPOLY)]
     outline = Path(np.concatenate([np.concatenate([p, p[:1]]) for p in polygons]), codes)
-    window = Polygon([low, (high[0], low[1]), high, (low[0], high[1])], closed=True, transform=ax.transData)
-    repeat = Polygon(corners, closed=True, transform=ax.transData)
+    window, repeat = (_clip(ax, c) for c in (np.array([low, [high[0], low[1]], high, [low[0], high[1]]]), corners))
     for face, edge, clip in ((FAINT, GREY, window), (BODY, INK, repeat)):
         for style in ({"fc": edge, "ec": edge, "lw": 1.0}, {"fc": face, "ec": "none", "lw": 0.0}):
             patch = PathPatch(outline, zorder=2, gid="section", **style)
@@ -55,6 +55,16 @@ def draw_plane(ax: Axes, cell: UnitCell) -> None:
             patch.set_clip_path(clip)
     ax.add_patch(Polygon(corners, closed=True, fill=False, ec=INK, lw=0.9, ls=(0, (3, 2)), zorder=3, gid="repeat"))
     _frame(ax, low, high, np.eye(3))
+
+
+def _clip(ax: Axes, corners: Array) -> Patch:
+    """The region to clip to: a rectangle where it is one, since a clip box costs a file less than a path."""
+    from matplotlib.patches import Polygon, Rectangle
+
+    (x0, y0), (x1, y1) = corners.min(axis=0), corners.max(axis=0)
+    if np.isclose(corners[:, 0], x0).sum() == np.isclose(corners[:, 1], y0).sum() == 2:
+        return Rectangle((x0, y0), x1 - x0, y1 - y0, transform=ax.transData)
+    return Polygon(corners, closed=True, transform=ax.transData)
 
 
 def draw_sheet(ax: Axes, cell: UnitCell, *, oblique: bool) -> None:

@@ -11,9 +11,10 @@ import math
 import os
 import re
 import threading
-from functools import cache
+from collections.abc import Callable
+from functools import cache, wraps
 from pathlib import Path
-from typing import TYPE_CHECKING, Any, Protocol
+from typing import TYPE_CHECKING, Any, ParamSpec, Protocol, TypeVar
 
 import numpy as np
 from numpy.typing import NDArray
@@ -37,7 +38,20 @@ DOTS_PER_INCH = 200
 """Of a PNG, and of the parts of an SVG or PDF that are too many to be drawn one by one."""
 UNITS = {"MPa": "MPa", "kg_m3": "kg/m³", "N_per_mm": "N/mm", "N_mm": "N mm", "deg": "°", "mm": "mm"}
 
-_saving = threading.Lock()
+_drawing = threading.RLock()
+P = ParamSpec("P")
+R = TypeVar("R")
+
+
+def one_at_a_time(function: Callable[P, R]) -> Callable[P, R]:
+    """Return the function behind a lock: measuring text and the salt of SVG names are global in matplotlib."""
+
+    @wraps(function)
+    def locked(*args: P.args, **kwargs: P.kwargs) -> R:
+        with _drawing:
+            return function(*args, **kwargs)
+
+    return locked
 
 
 class Limit(Protocol):
@@ -126,8 +140,10 @@ def axes_at(figure: Figure, x: float, y: float, width: float, height: float, lab
 
 def axes_size(ax: Axes) -> NDArray[np.float64]:
     """Return width and height of axes in inches."""
-    figure, box = ax.get_figure(root=True), ax.get_position()
-    assert figure is not None, "axes without a figure"
+    from matplotlib.figure import Figure
+
+    figure, box = ax.get_figure(), ax.get_position()
+    assert isinstance(figure, Figure), "axes that stand on no page"
     return np.asarray(figure.get_size_inches() * np.array([box.width, box.height]))
 
 
@@ -166,6 +182,7 @@ def foot(figure: Figure, basis: str) -> None:
     write(figure, 0.2, 0.1 + 0.14 * len(lines), "\n".join(lines), color=GREY, gid="foot")
 
 
+@one_at_a_time
 def save(figure: Figure, path: str | os.PathLike[str]) -> None:
     """Write a figure as SVG, PNG or PDF, by its suffix; whole or not at all, the same bytes for the same figure.
 
@@ -183,7 +200,7 @@ def save(figure: Figure, path: str | os.PathLike[str]) -> None:
     metadata: dict[str, Any] = {".pdf": {"CreationDate": None}, ".png": {}, ".svg": {"Date": None}}[suffix]
     part = target.with_name(f".{target.name}.{os.getpid()}-{threading.get_ident()}.part")
     try:
-        with _saving, matplotlib.rc_context({"svg.hashsalt": "homog"}):  # the salt is global, so one at a time
+        with matplotlib.rc_context({"svg.hashsalt": "homog"}):
             figure.savefig(part, format=suffix[1:], dpi=DOTS_PER_INCH, metadata=metadata)
         os.replace(part, target)
     except OSError as error:
