@@ -96,29 +96,19 @@ class Strained:
     affine: Array
 
 
-def strained_blocks(cell: UnitCell, model: str, members: slice | None = None) -> Iterator[Strained]:
-    """Yield every block's rows, weights and affine strains for the `members` of a flat batch.
-
-    The cell has batch shape (b,) or (); the last axis of what is yielded is the batch, of length 1 for a single cell.
-    """
+def strained_blocks(cell: UnitCell, model: str) -> Iterator[Strained]:
+    """Yield every block's rows, weights and affine strains of a flat batch (b,), its last axis the batch."""
     check_model(model)
-    pick = slice(None) if members is None else members
-
-    def last(values: Array, tail: int) -> Array:
-        return values[pick] if values.ndim > tail and values.shape[0] > 1 else values
-
-    def batch_last(values: Array) -> Array:
-        flat = last(values, 2)
-        return np.ascontiguousarray(np.moveaxis(flat.reshape((-1,) + flat.shape[-2:]), 0, -1))
-
-    points, lattice = batch_last(cell.points), batch_last(cell.lattice)  # (n, d, b), (p, d, b)
+    points, lattice = (np.ascontiguousarray(np.moveaxis(x, 0, -1)) for x in (cell.points, cell.lattice))
     middle = (points[:, -1].min(axis=0) + points[:, -1].max(axis=0)) / 2.0
     for block in cell.blocks:
+        if not len(block):
+            continue
         kind = element(block.kind)
         props = {}
         for name, value in block.props.items():
-            flat = last(value, 1)
-            props[name] = flat[:, None] if flat.ndim == 1 else np.ascontiguousarray(flat.T)
+            shared = value[:1] if value.strides[0] == 0 else value  # the same for all members: one is enough
+            props[name] = np.ascontiguousarray(np.moveaxis(shared, (0, 1), (-1, -2)))
         check_block(block.kind, cell.d, block.nodes.shape[1], props)
         x = points[block.nodes] + np.einsum("mkp,pdb->mkdb", block.shifts.astype(float), lattice)
         x = np.ascontiguousarray(np.moveaxis(x, 0, 2))  # (k, d, m, b)
@@ -126,23 +116,18 @@ def strained_blocks(cell: UnitCell, model: str, members: slice | None = None) ->
         yield Strained(block, rows, kind.weights(x, props, model), _affine_strains(cell.kind, rows, x, middle))
 
 
-def dense(cell: UnitCell, model: str, members: slice | None = None) -> Array:
-    """Return M of every member, ndarray of shape (N + v, N + v, b): freedoms, then macroscopic strains.
+def dense(cell: UnitCell, model: str) -> Array:
+    """Return M of every member of a flat batch, ndarray of shape (N + v, N + v, b): freedoms, then macroscopic strains.
 
     Only the lower triangle is filled. Entries accumulate, so an element may join a node to its own image. Structural
     zeros of rows and weights are skipped, so a kernel need not say which of its entries vanish.
     """
     free = freedoms(cell)
     v = strain_count(cell.kind)
-    M: Array | None = None
-    for part in strained_blocks(cell, model, members):
+    M = np.zeros((free.count + v, free.count + v, *cell.shape))
+    for part in strained_blocks(cell, model):
         rows, W, G = part.rows, part.weights, part.affine
         s = len(rows)
-        if M is None:
-            batch = np.broadcast_shapes(rows.shape[-1:], W.shape[-1:])
-            M = np.zeros((free.count + v, free.count + v, *batch))
-        elif M.shape[-1] < max(rows.shape[-1], W.shape[-1]):
-            M = np.ascontiguousarray(np.broadcast_to(M, M.shape[:2] + W.shape[-1:]))
         active = np.abs(rows).max(axis=(-2, -1)) > 0.0  # (s, k, f)
         coupled = np.abs(W).max(axis=(-2, -1)) > 0.0
         for e, nodes in enumerate(part.block.nodes):
@@ -166,8 +151,6 @@ def dense(cell: UnitCell, model: str, members: slice | None = None) -> Array:
                     for b, force in pull.items():
                         if b <= a:
                             M[a, b] += value * force
-    if M is None:
-        M = np.zeros((free.count + v, free.count + v, 1))
     return M
 
 
@@ -179,7 +162,7 @@ def sparse(cell: UnitCell, model: str) -> tuple[sp.csc_matrix, Array, Array]:
     v = strain_count(cell.kind)
     F, D = np.zeros((free.count + 1, v)), np.zeros((v, v))
     entries: list[tuple[Index, Index, Array]] = []
-    for part in strained_blocks(cell, model):
+    for part in strained_blocks(cell.at(None), model):
         rows, W, G = part.rows[..., 0], part.weights[..., 0], part.affine[..., 0]
         s, k, f, m = rows.shape
         numbers = free.numbers[part.block.nodes][:, :, :f].reshape(m, k * f)

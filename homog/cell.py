@@ -263,6 +263,8 @@ class UnitCell:
         turn = np.asarray(R, float)
         if turn.shape != (self.d, self.d) or not np.allclose(turn @ turn.T, np.eye(self.d), atol=1e-12):
             raise InputError(f"Rotation of shape {turn.shape}: give an orthogonal {self.d} x {self.d} matrix")
+        if np.linalg.det(turn) < 0.0:
+            raise InputError("A mirror is no rotation: arms and arcs of walls would stay on their side; give det R = 1")
         if self.kind == "sheet" and not np.isclose(abs(turn[2, 2]), 1.0):
             raise InputError("A sheet lies in the plane of axes 1 and 2: turn it about axis 3 only")
         return dataclasses.replace(self, points=self.points @ turn.T, lattice=self.lattice @ turn.T)

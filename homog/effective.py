@@ -28,6 +28,10 @@ Array = NDArray[np.float64]
 
 RANK_TOLERANCE = 1e-11
 """A pivot below this share of its diagonal entry (dense path) is a null vector: round-off leaves 1e-16 to 1e-13."""
+DOUBTFUL = 1e-5
+"""A pivot below this share leaves round-off above RANK_TOLERANCE behind it: the rank is then found by eigenvalues."""
+SURE_LIMIT = 2500
+"""Largest number of freedoms of a sparse cell whose doubtful rank is settled by eigenvalues (some seconds)."""
 SPARSE_RANK_TOLERANCE = 1e-9
 """The same for the sparse path, where a null vector may be spread over 1e5 freedoms."""
 SPARSE_SHIFT = 1e-15
@@ -129,13 +133,15 @@ def homogenize(cell: UnitCell, *, model: str = DEFAULT_MODEL) -> Effective:
             step = max(8, CHUNK_ENTRIES // (count + v) ** 2)
             for start in range(0, members, step):
                 part = slice(start, min(start + step, members))
-                M = dense(flat, model, part)
-                size = part.stop - part.start
-                if M.shape[-1] != size:
-                    M = np.broadcast_to(M, M.shape[:2] + (size,)).copy()
+                piece = flat.at(part)
+                M = dense(piece, model)
                 upper[part] = np.diagonal(M[count:, count:]).copy()
-                mechanisms[part] = eliminate(M, count)
+                mechanisms[part], least = eliminate(M, count)
                 C[part] = np.moveaxis(M[count:, count:], -1, 0)
+                doubtful = np.flatnonzero(good[part] & (least < DOUBTFUL))
+                if len(doubtful):
+                    again = np.moveaxis(dense(piece.at(doubtful), model), -1, 0)
+                    C[start + doubtful], mechanisms[start + doubtful] = ranked(again, count)
         else:
             for i in range(members):
                 C[i], upper[i], mechanisms[i] = _sparse_member(flat.at(i), model)
@@ -172,23 +178,46 @@ def _flattened(cell: UnitCell) -> UnitCell:
     return cell.at(tuple(np.indices(shape).reshape(len(shape), -1)))
 
 
-def eliminate(M: Array, count: int) -> NDArray[np.int64]:
-    """Eliminate the first `count` freedoms of symmetric matrices (N, N, b) in place; return how many were null.
+def eliminate(M: Array, count: int) -> tuple[NDArray[np.int64], Array]:
+    """Eliminate the first `count` freedoms of symmetric matrices (N, N, b) in place.
 
     Right-looking LDL' on the lower triangle: afterwards M[count:, count:] holds the Schur complement in its lower
-    triangle. Positive semi-definite matrices need no pivoting: a null pivot has a null column.
+    triangle. Positive semi-definite matrices need no pivoting for the result: a null pivot has a null column. The count
+    does where a tiny pivot comes first; so the least pivot is returned too, and `ranked` takes the doubtful ones.
+
+    Returns
+    -------
+    null : ndarray of int of shape (b,), how many pivots were null
+    least : ndarray of shape (b,), smallest pivot over its diagonal entry, 1 if there is none
     """
     size = len(M)
-    dead = np.zeros(M.shape[-1], np.int64)
+    dead, least = np.zeros(M.shape[-1], np.int64), np.ones(M.shape[-1])
     diagonal = np.stack([M[i, i] for i in range(count)]) if count else np.empty((0, M.shape[-1]))
     for j in range(count):
         null = ~(M[j, j] > RANK_TOLERANCE * diagonal[j])
         dead += null
+        np.fmin(least, M[j, j] / diagonal[j], out=least)
         column = M[j + 1 :, j]
         factor = column * np.where(null, 0.0, 1.0 / M[j, j])
         for i in range(size - j - 1):
             M[j + 1 + i, j + 1 : j + 2 + i] -= factor[i] * column[: i + 1]
-    return dead
+    return dead, least
+
+
+def ranked(M: Array, count: int) -> tuple[Array, NDArray[np.int64]]:
+    """Return the Schur complements (b, v, v) and null counts of matrices (b, N, N) by eigenvalues of K at unit diagonal.
+
+    Slower than `eliminate` and sure of the rank, whatever the order of the freedoms.
+    """
+    M = np.tril(M) + np.swapaxes(np.tril(M, -1), -1, -2)
+    K, F, D = M[:, :count, :count], M[:, :count, count:], M[:, count:, count:]
+    diagonal = np.diagonal(K, axis1=-2, axis2=-1)
+    scale = 1.0 / np.sqrt(np.where(diagonal > 0.0, diagonal, 1.0))
+    values, vectors = np.linalg.eigh(K * scale[:, :, None] * scale[:, None, :])
+    null = values <= RANK_TOLERANCE * values[:, -1:]
+    drive = np.swapaxes(vectors, -1, -2) @ (F * scale[:, :, None])
+    drive *= np.where(null, 0.0, 1.0 / np.sqrt(np.where(null, 1.0, values)))[:, :, None]
+    return np.asarray(D - np.swapaxes(drive, -1, -2) @ drive), null.sum(axis=-1)
 
 
 def _null_count(C: Array, upper: Array) -> NDArray[np.int64]:
@@ -216,7 +245,11 @@ def _sparse_member(cell: UnitCell, model: str) -> tuple[Array, Array, int]:
         return np.full_like(D, np.nan), np.diagonal(D), 0
     unit = sp.diags(scale) @ K @ sp.diags(scale) + SPARSE_SHIFT * sp.identity(len(scale))
     factor = splu(unit.tocsc(), permc_spec="MMD_AT_PLUS_A", diag_pivot_thresh=0.0, options={"SymmetricMode": True})
-    null = np.abs(factor.U.diagonal()) < SPARSE_RANK_TOLERANCE
+    pivots = np.abs(factor.U.diagonal())
+    if pivots.min() < DOUBTFUL and len(scale) <= SURE_LIMIT:
+        whole, null_count = ranked(np.block([[K.toarray(), F], [F.T, D]])[None], len(scale))
+        return whole[0], np.diagonal(D), int(null_count[0])
+    null = pivots < SPARSE_RANK_TOLERANCE
     right = F * scale[:, None]
     return D - right.T @ factor.solve(right), np.diagonal(D), int(null.sum())
 

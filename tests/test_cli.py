@@ -444,6 +444,7 @@ def test_screen_finds_nothing(place, capsys):
     assert "nothing of 2 candidates meets the brief; most miss: nu12 at most -50." in out
     text = (place / "empty" / "summary.md").read_text()
     assert "Nothing meets the brief" in text and "Nearest candidates" in text
+    assert "![property chart](chart.png)" in text and (place / "empty" / "chart.png").exists()
     assert len(pd.read_csv(place / "empty" / "shortlist.csv")) == 0
     assert len(pd.read_csv(place / "empty" / "candidates.csv")) == 2
 

@@ -111,7 +111,7 @@ def plane_reference(S):
 FRAMES = Rotation.random(20_000, np.random.default_rng(877296)).as_matrix()
 
 
-def space_reference(S, polished=2):
+def space_reference(S, polished=2, names=VALUES):
     """Extremes of one spatial compliance by 20,000 frames, the best polished; share by counting."""
 
     def at(R):
@@ -123,7 +123,7 @@ def space_reference(S, polished=2):
         return {"nu": -(row * mm).sum(-1) / f, "E": 1.0 / f, "G": 0.25 / ((nm @ S) * nm).sum(-1)}
 
     values, found = at(FRAMES), {}
-    for name in VALUES:
+    for name in names:
         key, sign = name[: name.index("_")], 1.0 if name.endswith("min") else -1.0
         best = np.inf
         for R in FRAMES[np.argsort(sign * values[key])[: polished * 4 : 4]]:
@@ -242,7 +242,7 @@ def test_shapes():
         (lambda: young(np.eye(6), direction=[1.0, 0.0]), "end in 3"),
         (lambda: young(np.eye(4), angle=0.0), r"shape \(4, 4\)"),
         (lambda: young(np.eye(3), angle=[0.0, np.inf]), "not finite"),
-        (lambda: poisson(np.eye(6), direction=[1.0, 0.0, 0.0]), "across"),
+        (lambda: poisson(np.eye(6), direction=[1.0, 0.0, 0.0]), "leaves open"),
         (lambda: poisson(np.eye(6), angle=0.0, across=[1.0, 0.0, 0.0]), "across"),
         (lambda: shear(np.eye(6), direction=[1.0, 0.0, 0.0], across=[0.6, 0.8, 0.0]), "perpendicular"),
         (lambda: plane_extremes(np.eye(6)), r"\(3, 3\)"),
@@ -346,6 +346,16 @@ def test_isotropic_sheet_has_its_directions_at_zero(nu):
         assert getattr(found, f"{name}_deg") == 0.0
         assert getattr(found, name) == pytest.approx(nu if name[0] == "n" else 2.0, rel=ROUND_OFF, abs=ROUND_OFF)
     assert (found.auxetic_share, found.auxetic_reach_deg) == ((1.0, 90.0) if nu < 0.0 else (0.0, 0.0))
+
+
+@pytest.mark.parametrize(("more", "degrees"), [(1e-13, 0.0), (1e-8, 90.0)])
+def test_a_tie_goes_to_the_smaller_angle(more, degrees):
+    """Stiffer along 2 than along 1 by round-off, and by a little that is none."""
+    found = plane_extremes(ply(1.0, 1.0 + more, 0.3, 0.1))
+    assert found.E_max_deg == degrees
+    solid = cubic(1.0, 0.3, 0.1)
+    solid[1, 1] = 1.0 / (1.0 + more)
+    assert space_extremes(solid).E_max_deg == degrees
 
 
 PLANE_SETS = {
@@ -501,6 +511,35 @@ def test_space_extremes_of_a_turned_body_are_the_same():
     np.testing.assert_allclose(two.auxetic_share, one.auxetic_share, atol=2e-3)
 
 
+def test_space_extremes_reach_those_of_every_plane():
+    """The planes of the axes have closed forms. Most of the tensors have those planes as mirrors, where a search that
+    starts in one may rest on a saddle: the last one is least along 8 deg off axis 1, and level along it.
+    """
+    rng = np.random.default_rng(877296)
+    saddle = np.diag([7.87688, 208.54298, 108.69124, 912.17332, 8.13408, 0.81867])
+    for i, j, value in ((0, 1, 6.22961), (0, 2, 0.19989), (1, 2, -105.73509)):
+        saddle[i, j] = saddle[j, i] = value
+    S = np.concatenate([drawn(rng, 40, 6), uncoupled(drawn(rng, 120, 6, -4.0)), saddle[None]])
+    found = space_extremes(S)
+    for keep in ([0, 1, 5], [0, 2, 4], [1, 2, 3]):
+        plane = plane_extremes(S[:, keep][:, :, keep])
+        for name in VALUES:
+            in_space, in_plane = getattr(found, name), getattr(plane, name)
+            slack = EXACT * (np.abs(in_plane) + name.startswith("nu"))
+            assert (in_space <= in_plane + slack if name.endswith("min") else in_space >= in_plane - slack).all(), name
+    assert plane.E_max[-1] < found.E_max[-1]
+    assert found.E_max[-1] > 1.0002 / saddle[0, 0]
+
+
+@pytest.mark.parametrize(("seed", "name"), [(102914, "nu_min"), (104366, "nu_max"), (104720, "nu_max")])
+def test_space_extremes_with_two_peaks_side_by_side(seed, name):
+    """Each of two m has its own peak of nu within a few degrees of n, and on the grid the lower looks the higher. The
+    seeds are the ones of 6000 at which a search that forgets the other m misses by 1e-2 to 2.
+    """
+    S = drawn(np.random.default_rng(seed), 1, 6, -4.0)
+    assert getattr(space_extremes(S), name)[0] == pytest.approx(space_reference(S[0], 8, [name])[name], rel=EXACT)
+
+
 def test_space_angles_are_where_the_extremes_are():
     """Stretch every direction at the reported angle from axis 1: the best of them has the reported modulus."""
     S = uncoupled(drawn(np.random.default_rng(635305), 4, 6, -2.0))
@@ -554,22 +593,23 @@ def test_the_grid_covers_as_it_says():
 # ------------------------------------------------------------------------------------------------ batches
 
 
-BAD = {"nan": np.nan, "infinite": np.inf, "no stiffness": 0.0, "negative": -1.0}
+BAD = {"nan": np.nan, "infinite": np.inf, "nothing": 0.0, "negative": -1.0}
 
 
 @pytest.mark.parametrize(("size", "extremes"), [(3, plane_extremes), (6, space_extremes)])
 @pytest.mark.parametrize("fault", BAD)
 def test_a_bad_member_is_alone(size, extremes, fault):
     S = drawn(np.random.default_rng(931969), 3, size, -1.0)
-    S[1] = np.diag(np.full(size, BAD[fault]))
+    S[1] = np.diag([*np.ones(size - 1), BAD[fault]])  # in shear only: the axes look sound
     found, fine = extremes(S), extremes(S[[0, 2]])
     for name in Extremes.__dataclass_fields__:
         values = getattr(found, name)
         assert np.isnan(values[1])
         np.testing.assert_allclose(values[[0, 2]], getattr(fine, name), rtol=1e-12, atol=1e-12)
-    nu = poisson(S, angle=[0.0, 0.3])
-    assert np.isnan(nu[1]).all()
-    np.testing.assert_allclose(nu[[0, 2]], poisson(S[[0, 2]], angle=[0.0, 0.3]), rtol=1e-12)
+    for of in (young, poisson, shear, coupling):
+        values = of(S, angle=[0.0, 0.3])
+        assert np.isnan(values[1]).all()
+        np.testing.assert_allclose(values[[0, 2]], of(S[[0, 2]], angle=[0.0, 0.3]), rtol=1e-12)
 
 
 @pytest.mark.parametrize(("size", "extremes", "count"), [(3, plane_extremes, 5000), (6, space_extremes, 150)])
