@@ -128,8 +128,8 @@ def dense(cell: UnitCell, model: str) -> Array:
     for part in strained_blocks(cell, model):
         rows, W, G = part.rows, part.weights, part.affine
         s = len(rows)
-        active = np.abs(rows).max(axis=(-2, -1)) > 0.0  # (s, k, f)
-        coupled = np.abs(W).max(axis=(-2, -1)) > 0.0
+        active = ~(np.abs(rows).max(axis=(-2, -1)) == 0.0)  # (s, k, f); what is NaN in one member counts in the others
+        coupled = ~(np.abs(W).max(axis=(-2, -1)) == 0.0)
         for e, nodes in enumerate(part.block.nodes):
             strain: list[dict[int, Array]] = []
             for i in range(s):

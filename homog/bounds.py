@@ -262,8 +262,8 @@ def _young(K: Array, G: Array, d: int) -> Array:
 
 
 def _ratio(value: Array, bound: Array) -> Array:
-    """value/bound without a warning where the bound is zero or either is NaN."""
-    with np.errstate(divide="ignore", invalid="ignore"):
+    """value/bound without a warning where the bound is zero or next to it, or either is NaN."""
+    with np.errstate(divide="ignore", over="ignore", invalid="ignore"):
         return np.asarray(value / bound)
 
 

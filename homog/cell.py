@@ -41,6 +41,15 @@ LENGTH_POWER: Mapping[str, int] = {
 }  # fmt: skip
 
 
+MATRICES = frozenset({"weight"})
+"""Properties that are a matrix for each element, (..., m, s, s); of a joint's, every third strain is a rotation."""
+
+
+def tail(name: str) -> int:
+    """Number of axes of a property that are not the batch's."""
+    return 3 if name in MATRICES else 1
+
+
 class Status(IntEnum):
     """What became of one member of a batch."""
 
@@ -72,7 +81,7 @@ class Block:
         Points that each element joins.
     shifts : ndarray of int, shape (m, k, p)
         Which periodic image of each point.
-    props : mapping of name to ndarray broadcastable to (..., m)
+    props : mapping of name to ndarray broadcastable to (..., m), or (..., m, s, s) for MATRICES
         What the kind's weights need (mm, N, MPa, rad).
     """
 
@@ -174,7 +183,7 @@ class UnitCell:
         """Shape of the batch, () for a single cell."""
         parts = [self.points.shape[:-2], self.lattice.shape[:-2], self.status.shape, self.solid.shape]
         for block in self.blocks:
-            parts += [value.shape[:-1] for value in block.props.values()]
+            parts += [value.shape[: value.ndim - tail(name)] for name, value in block.props.items()]
         return np.broadcast_shapes(*parts)
 
     @property
@@ -218,14 +227,15 @@ class UnitCell:
         def pick(values: NDArray[Any], tail: int) -> NDArray[Any]:
             return np.asarray(np.broadcast_to(values, shape + values.shape[values.ndim - tail :])[index])
 
-        blocks = tuple(
-            dataclasses.replace(b, props={name: pick(value, 1) for name, value in b.props.items()}) for b in self.blocks
-        )
+        blocks = []
+        for b in self.blocks:
+            props = {name: pick(value, tail(name)) for name, value in b.props.items()}
+            blocks.append(dataclasses.replace(b, props=props))
         return dataclasses.replace(
             self,
             points=pick(self.points, 2),
             lattice=pick(self.lattice, 2),
-            blocks=blocks,
+            blocks=tuple(blocks),
             solid=pick(self.solid, 0),
             slenderness=pick(self.slenderness, 0),
             height=pick(self.height, 0),
@@ -249,8 +259,9 @@ class UnitCell:
             nodes = np.ravel_multi_index(tuple(np.moveaxis(home, -1, 0)), counts) * self.n + b.nodes
             props = {}
             for name, value in b.props.items():
-                whole = np.broadcast_to(value, value.shape[:-1] + (len(b),))
-                props[name] = np.tile(whole, (1,) * (whole.ndim - 1) + (len(corners),))
+                axis = value.ndim - tail(name)
+                whole = np.broadcast_to(value, value.shape[:axis] + (len(b),) + value.shape[axis + 1 :])
+                props[name] = np.concatenate([whole] * len(corners), axis=axis)
             k = b.nodes.shape[1]
             blocks.append(Block(b.kind, nodes.reshape(-1, k), shifts.reshape(-1, k, self.p), props))
         lattice = self.lattice * np.asarray(counts, float)[:, None]
@@ -280,6 +291,9 @@ class UnitCell:
                 else:
                     power = LENGTH_POWER.get(f"{b.kind}.{name}", LENGTH_POWER.get(name, 0))
                 props[name] = value * factor**power
+                if name in MATRICES:  # moments and rotations: a length more each
+                    size = np.tile([1.0, 1.0, factor], value.shape[-1] // 3)
+                    props[name] = value * size[:, None] * size
             blocks.append(dataclasses.replace(b, props=props))
         sheet = self.kind == "sheet"
         return dataclasses.replace(

@@ -58,7 +58,7 @@ Deep = Annotated[
     bool, typer.Option("--deep", help="Planar cells deep along axis 3: plane strain instead of plane stress.")
 ]
 Model = Annotated[
-    str, typer.Option("--model", metavar="M", help="euler (flexure, stretch) or timoshenko (adds shear).")
+    str, typer.Option("--model", metavar="M", help="joint (condensed joints), timoshenko or euler (walls to a point).")
 ]
 Overwrite = Annotated[bool, typer.Option("--overwrite", help="Replace a file that is there already.")]
 FIGURES = (".svg", ".png", ".pdf")
@@ -248,7 +248,7 @@ def evaluate(
     poisson: Poisson = None,
     solid_density: SolidDensity = None,
     deep: Deep = False,
-    model: Model = "timoshenko",
+    model: Model = "joint",
     as_json: Annotated[bool, typer.Option("--json", help="Print one JSON object instead of tables.")] = False,
 ) -> int:
     """Evaluate one unit cell: every output quantity, the whole stiffness, the verdict and its reasons.
@@ -311,7 +311,7 @@ def polar(
     poisson: Poisson = None,
     solid_density: SolidDensity = None,
     deep: Deep = False,
-    model: Model = "timoshenko",
+    model: Model = "joint",
     overwrite: Overwrite = False,
 ) -> int:
     """Draw E, nu and G of one cell against direction, with the cell beside them.
@@ -350,7 +350,7 @@ def sweep(
     poisson: Poisson = None,
     solid_density: SolidDensity = None,
     deep: Deep = False,
-    model: Model = "timoshenko",
+    model: Model = "joint",
     overwrite: Overwrite = False,
 ) -> int:
     """Evaluate all combinations of some parameters and write one row each, every output quantity a column.

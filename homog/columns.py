@@ -7,6 +7,8 @@ for. Registration in COLUMNS brings tables, `--json`, limits in a brief and the 
 
 from __future__ import annotations
 
+import dataclasses
+import functools
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
 from functools import cached_property
@@ -18,10 +20,10 @@ from numpy.typing import NDArray
 
 from homog import bounds, directional
 from homog.cell import Kind, Status
-from homog.effective import Effective, soft_mode
-from homog.elements import WALL_SHEAR
+from homog.effective import Effective, Flag, homogenize, soft_mode
 from homog.errors import unknown
 from homog.families import FAMILIES
+from homog.materials import Material
 from homog.tensors import compliance_to_voigt, stiffness_to_voigt
 
 if TYPE_CHECKING:
@@ -41,6 +43,7 @@ COUPLING_CAUTION = 0.1
 REACH_CAUTION_DEG = 5.0
 SINGULAR_CAUTION = 1e-6
 CELLS_CAUTION = 4.0
+HEXAGON_POINTS = 32
 
 VOIGT_PAIRS = (("11", 0, 0), ("12", 0, 1), ("16", 0, 2), ("22", 1, 1), ("26", 1, 2), ("66", 2, 2))
 
@@ -57,6 +60,8 @@ REASONS: Mapping[str, tuple[str, str]] = {
     "walls-thick": ("reject", f"a wall or strut is thicker than {SLENDER_REJECT:g} of its length: no beam any more"),
     "beam-model": ("caution", f"a wall or strut is thicker than {SLENDER_CAUTION:g} of its length, with joints "
                    "as points: at 0.1 a re-entrant cell comes out about 24 % too soft, at 0.2 about 45 %"),
+    "joint-outside": ("caution", "a joint's angle or thickness ratio lies outside its table: taken as a point"),
+    "joints-near": ("caution", "hardly any plain wall is left between two joints: stiffness may be a few percent off"),
     "hinge-model": ("caution", "the ligaments are pure hinges: their stretch and the give of the units' corners "
                     "are left out, so stiffness is an upper estimate"),
     "ligament-stubby": ("caution", f"the ligament is over {LIGAMENT_CAUTION:g} of its length thick: no flexure strip"),
@@ -68,6 +73,20 @@ REASONS: Mapping[str, tuple[str, str]] = {
     "reach-short": ("caution", f"auxetic only within {REACH_CAUTION_DEG:g} deg of axis 1: alignment decides"),
     "few-cells": ("caution", f"fewer than {CELLS_CAUTION:g} cells across the part: edges decide"),
 }  # fmt: skip
+
+
+@functools.cache
+def _hexagon_curve(poisson: float, model: str) -> Array:
+    """Return Chebyshev coefficients over tau = t/l from 0 to 1 of E/(E_s tau^3) of the regular hexagonal honeycomb."""
+    x = np.cos(np.pi * (np.arange(HEXAGON_POINTS) + 0.5) / HEXAGON_POINTS)
+    tau = (x + 1.0) / 2.0
+    parent = Material("hexagon", 1.0, 0.3, 1000.0)
+    cell = FAMILIES["hexagonal-honeycomb"].build({"inclined": 1.0, "vertical": 1.0, "thickness": tau}, parent)
+    walls = cell.blocks[0]
+    given = {**walls.props, "poisson": np.array([poisson])}  # deep walls may have more than a solid's 0.5
+    cell = dataclasses.replace(cell, blocks=(dataclasses.replace(walls, props=given),))
+    S = np.linalg.inv(homogenize(cell, model="joint" if model == "solid" else model).stiffness)
+    return np.asarray(np.polynomial.chebyshev.chebfit(x, 1.0 / (S[:, 0, 0] * tau**3), HEXAGON_POINTS - 1))
 
 
 class Results:
@@ -149,12 +168,12 @@ class Results:
     def hexagon(self) -> Array:
         """Young's modulus of the regular hexagonal honeycomb of equal density, parent and model, MPa.
 
-        rho = 2 tau/sqrt3 - tau^2/3 (joints counted once) and E = (4/sqrt3) E_s tau^3 / (1 + (3 + B) tau^2) with
-        B = 2 (1 + nu_s)/kappa, 0 for `euler` (Gibson & Ashby 1997, ch. 4; from memory, confirmed).
+        rho = 2 tau/sqrt3 - tau^2/3, joints counted once; NaN above a density of 0.82, where walls end (tau > 1).
         """
         tau = np.sqrt(3.0) * (1.0 - np.sqrt(np.clip(1.0 - self.density, 0.0, None)))
-        B = 0.0 if self.effective.model == "euler" else 2.0 * (1.0 + self.parent.wall_poisson) / WALL_SHEAR
-        return np.asarray(4.0 / np.sqrt(3.0) * self.parent.wall_modulus_MPa * tau**3 / (1.0 + (3.0 + B) * tau**2))
+        curve = _hexagon_curve(self.parent.wall_poisson, self.effective.model)
+        share = np.polynomial.chebyshev.chebval(2.0 * tau - 1.0, curve)
+        return np.where(tau <= 1.0, self.parent.wall_modulus_MPa * tau**3 * share, np.nan)
 
     @cached_property
     def cells_across(self) -> Array:
@@ -192,8 +211,12 @@ class Results:
         found["above-voigt"] = live & self.bounds.above_voigt
         found["above-hashin-shtrikman"] = live & self.bounds.above_hashin_shtrikman
         found["nu-outside-limits"] = live & self.bounds.nu_outside
-        found["walls-thick"] = live & beams & (slenderness > SLENDER_REJECT)
-        found["beam-model"] = live & beams & (slenderness > SLENDER_CAUTION) & (slenderness <= SLENDER_REJECT)
+        plain = beams and self.effective.model in ("euler", "timoshenko")
+        flags = self.flat(self.effective.flags)
+        found["walls-thick"] = live & plain & (slenderness > SLENDER_REJECT)
+        found["beam-model"] = live & plain & (slenderness > SLENDER_CAUTION) & (slenderness <= SLENDER_REJECT)
+        found["joint-outside"] = live & ((flags & Flag.JOINT_OUTSIDE) > 0)
+        found["joints-near"] = live & ((flags & Flag.JOINTS_NEAR) > 0)
         found["ligament-stubby"] = live & ("hinge" in kinds) & (slenderness > LIGAMENT_CAUTION)
         found["hinge-model"] = live & ("hinge" in kinds)
         found["sheet-model"] = live & ("fold" in kinds)

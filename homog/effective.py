@@ -9,7 +9,9 @@ that cost nothing: there no Poisson's ratio exists, and the mode is named instea
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+from enum import IntFlag
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -19,6 +21,8 @@ from homog.assembly import dense, freedoms, sparse, strain_count
 from homog.cell import STRAINS, Kind, Status, UnitCell
 from homog.elements import check_model
 from homog.errors import GeometryError, InputError, MechanismError
+from homog.joints import applies, with_joints
+from homog.solid import homogenize_solid
 from homog.tensors import voigt_factors
 
 if TYPE_CHECKING:
@@ -40,7 +44,15 @@ DENSE_LIMIT = 240
 """Largest number of freedoms that goes through the dense batched path."""
 CHUNK_ENTRIES = 2**18
 """Entries of M in one chunk of the batch: keeps the elimination in cache."""
-DEFAULT_MODEL = "timoshenko"
+DEFAULT_MODEL = "joint"
+
+
+class Flag(IntFlag):
+    """What the model has to say about a member."""
+
+    JOINT_OUTSIDE = 1  # a joint that no table covers was taken as a point
+    JOINTS_NEAR = 2  # too little plain wall between two joints
+    SOLID_COARSE = 4  # the solid's two meshes differ by more than half a percent
 
 
 @dataclass(frozen=True, eq=False)
@@ -60,7 +72,11 @@ class Effective:
     cell : UnitCell
         Where it came from.
     model : str
-        The wall model.
+        The model that was used: `joint` falls back to `timoshenko` where a cell has no condensed joints.
+    flags : ndarray of int of shape (...)
+        `Flag`s of the model.
+    spread : mapping of str to ndarray of shape (...)
+        Of a solid, its own error estimate: relative for `E1`, `E2`, `G12`, absolute for `nu12`, `nu21`.
     """
 
     stiffness: Array
@@ -69,6 +85,8 @@ class Effective:
     status: NDArray[np.int8]
     cell: UnitCell
     model: str
+    flags: NDArray[np.int8] = field(default_factory=lambda: np.array(0, np.int8))
+    spread: Mapping[str, Array] = field(default_factory=dict)
 
     @property
     def kind(self) -> Kind:
@@ -90,7 +108,8 @@ def homogenize(cell: UnitCell, *, model: str = DEFAULT_MODEL) -> Effective:
     cell : UnitCell
         With batch shape (...).
     model : str
-        `euler` or `timoshenko`.
+        `euler`, `timoshenko`, `joint` or `solid` (see `homog.elements.MODELS`). `solid` needs the extra of that name
+        and takes half a second a member.
 
     Returns
     -------
@@ -102,7 +121,7 @@ def homogenize(cell: UnitCell, *, model: str = DEFAULT_MODEL) -> Effective:
     GeometryError, MechanismError
         For a single cell (batch shape ()) that is impossible, or that a uniform strain deforms at no energy.
     InputError
-        For a cell whose blocks do not fit its points or their kinds.
+        For a cell whose blocks do not fit its points or their kinds, or that has no section for `solid`.
 
     Examples
     --------
@@ -113,18 +132,26 @@ def homogenize(cell: UnitCell, *, model: str = DEFAULT_MODEL) -> Effective:
     """
     check_model(model)
     cell.check()
+    if model == "solid":
+        return _solid(cell)
     shape = cell.shape
     flat = cell if len(shape) == 1 else cell.at(None) if not shape else _flattened(cell)
     members = flat.shape[0]
+    with np.errstate(all="ignore"):
+        volume, density = flat.volume, np.broadcast_to(flat.relative_density, (members,))
     good = (
         (flat.status == Status.OK)
         & np.isfinite(flat.points).all(axis=(-1, -2))
         & np.isfinite(flat.lattice).all(axis=(-1, -2))
-        & (flat.volume > 0.0)
+        & (volume > 0.0)
     )
     good = np.asarray(np.broadcast_to(good, (members,)))
     v = strain_count(cell.kind)
-    count = freedoms(flat).count
+    condensed = model == "joint" and applies(cell)
+    if model == "joint" and not condensed:
+        model = "timoshenko"
+    count = 3 * len(cell.blocks[0]) - 2 if condensed else freedoms(flat).count
+    flags = np.zeros(members, np.int8)
     C = np.empty((members, v, v))
     upper = np.empty((members, v))
     mechanisms = np.zeros(members, np.int64)
@@ -134,6 +161,8 @@ def homogenize(cell: UnitCell, *, model: str = DEFAULT_MODEL) -> Effective:
             for start in range(0, members, step):
                 part = slice(start, min(start + step, members))
                 piece = flat.at(part)
+                if condensed:
+                    piece, flags[part] = _joined(piece)
                 M = dense(piece, model)
                 upper[part] = np.diagonal(M[count:, count:]).copy()
                 mechanisms[part], least = eliminate(M, count)
@@ -144,14 +173,17 @@ def homogenize(cell: UnitCell, *, model: str = DEFAULT_MODEL) -> Effective:
                     C[start + doubtful], mechanisms[start + doubtful] = ranked(again, count)
         else:
             for i in range(members):
-                C[i], upper[i], mechanisms[i] = _sparse_member(flat.at(i), model)
+                piece = flat.at([i])
+                if condensed:
+                    piece, flags[i : i + 1] = _joined(piece)
+                C[i], upper[i], mechanisms[i] = _sparse_member(piece.at(0), model)
         C = np.tril(C) + np.swapaxes(np.tril(C, -1), -1, -2)
         finite = good & np.isfinite(C).all(axis=(-1, -2))
-        C = np.where(finite[:, None, None], C / flat.volume[..., None, None], np.nan)
-        soft = _null_count(C, upper / flat.volume[..., None])
+        C = np.where(finite[:, None, None], C / volume[..., None, None], np.nan)
+        soft = _null_count(C, upper / volume[..., None])
     mechanisms = np.where(finite, mechanisms + soft, 0)
     status = np.where(finite, np.where(soft > 0, Status.MECHANISM, Status.OK), Status.IMPOSSIBLE).astype(np.int8)
-    density = np.where(finite, np.broadcast_to(flat.relative_density, (members,)), np.nan)
+    density = np.where(finite, density, np.nan)
     effective = Effective(
         stiffness=C.reshape(shape + (v, v)),
         relative_density=density.reshape(shape),
@@ -159,6 +191,7 @@ def homogenize(cell: UnitCell, *, model: str = DEFAULT_MODEL) -> Effective:
         status=status.reshape(shape),
         cell=cell,
         model=model,
+        flags=flags.reshape(shape),
     )
     if not shape and status[0] == Status.IMPOSSIBLE:
         raise GeometryError(
@@ -171,6 +204,42 @@ def homogenize(cell: UnitCell, *, model: str = DEFAULT_MODEL) -> Effective:
             "brace it, stiffen its joints, or read its stiffness from a batch of one"
         )
     return effective
+
+
+def _solid(cell: UnitCell) -> Effective:
+    """Return what the solid model finds, member by member; its errors are a single cell's, statuses in a batch."""
+    shape = cell.shape
+    members = int(np.prod(shape))
+    C, density = np.full((members, 3, 3), np.nan), np.full(members, np.nan)
+    status, flags = np.full(members, Status.IMPOSSIBLE, np.int8), np.zeros(members, np.int8)
+    spread = {name: np.full(members, np.nan) for name in ("E1", "E2", "G12", "nu12", "nu21")}
+    flat = _flattened(cell) if shape else cell.at(None)
+    for i in range(members):
+        try:
+            found = homogenize_solid(flat.at(i))
+        except GeometryError:
+            if not shape:
+                raise
+            continue
+        C[i], density[i], status[i] = found.stiffness, found.relative_density, Status.OK
+        flags[i] = 0 if found.converged else Flag.SOLID_COARSE
+        for name, values in spread.items():
+            values[i] = found.error[name]
+    return Effective(
+        stiffness=C.reshape(*shape, 3, 3),
+        relative_density=density.reshape(shape),
+        mechanisms=np.zeros(shape, np.int64),
+        status=status.reshape(shape),
+        cell=cell,
+        model="solid",
+        flags=flags.reshape(shape),
+        spread={name: values.reshape(shape) for name, values in spread.items()},
+    )
+
+
+def _joined(cell: UnitCell) -> tuple[UnitCell, NDArray[np.int8]]:
+    joined, outside, near = with_joints(cell)
+    return joined, (outside * Flag.JOINT_OUTSIDE + near * Flag.JOINTS_NEAR).astype(np.int8)
 
 
 def _flattened(cell: UnitCell) -> UnitCell:
@@ -205,7 +274,7 @@ def eliminate(M: Array, count: int) -> tuple[NDArray[np.int64], Array]:
 
 
 def ranked(M: Array, count: int) -> tuple[Array, NDArray[np.int64]]:
-    """Return the Schur complements (b, v, v) and null counts of matrices (b, N, N) by eigenvalues of K at unit diagonal.
+    """Return Schur complements (b, v, v) and null counts of matrices (b, N, N) by eigenvalues of K at unit diagonal.
 
     Slower than `eliminate` and sure of the rank, whatever the order of the freedoms.
     """

@@ -26,8 +26,10 @@ from homog.errors import InputError, unknown
 Array = NDArray[np.float64]
 Props = Mapping[str, Array]
 
-MODELS = ("euler", "timoshenko")
-"""`euler`: flexure and stretch; `timoshenko`: adds shear with kappa = 5/6 (walls), 6 (1 + nu) / (7 + 6 nu) (struts)."""
+MODELS = ("euler", "timoshenko", "joint", "solid")
+"""`euler`: flexure and stretch; `timoshenko`: adds shear with kappa = 5/6 (walls), 6 (1 + nu) / (7 + 6 nu) (struts);
+`joint`: the same walls between condensed joints where a cell has them, else `timoshenko`; `solid`: the true section as
+a continuum, planar wall cells only. Weights know the first two; `effective.homogenize` the others."""
 
 WALL_SHEAR = 5.0 / 6.0
 ARC_POINTS = 12  # Gauss points of a curved wall's flexibility: exact to round-off for arcs up to half a turn
@@ -37,8 +39,9 @@ ARC_POINTS = 12  # Gauss points of a curved wall's flexibility: exact to round-o
 class Element:
     """One kind of element.
 
-    `nodes` is the number of nodes, `dimensions` the spaces it lives in, `turns` whether its nodes carry rotations,
-    `required` and `optional` the property names (optional ones are zero when absent).
+    `nodes` is the number of nodes (the least if `more` are allowed: `strains` then repeat for each node but the first),
+    `dimensions` the spaces it lives in, `turns` whether its nodes carry rotations, `required` and `optional` the
+    property names (optional ones are zero when absent).
     """
 
     kind: str
@@ -51,6 +54,7 @@ class Element:
     rows: Callable[[Array, Props], Array]
     measure: Callable[[Array, Array, Array, Props], Array]
     weights: Callable[[Array, Props, str], Array]
+    more: bool = False
 
 
 def element(kind: str) -> Element:
@@ -332,6 +336,40 @@ def _strut_weights(x: Array, props: Props, model: str) -> Array:
     return W
 
 
+# joint: motion of tips 1 to n - 1 relative to the rigid motion of tip 0, in the frame of the line from tip 0 to 1 ----
+
+
+def _joint_frame(x: Array) -> tuple[Array, Array]:
+    e = (x[1] - x[0]) / _norm(x[1] - x[0])
+    return e, np.stack([-e[1], e[0]])
+
+
+def _joint_rows(x: Array, props: Props) -> Array:
+    e, n = _joint_frame(x)
+    rows = np.zeros((3 * len(x) - 3, len(x), 3) + x.shape[2:])
+    for i in range(1, len(x)):
+        k, arm = 3 * i - 3, x[i] - x[0]
+        carried = np.stack([-arm[1], arm[0]])  # motion of tip i per unit rotation of tip 0
+        for row, axis in ((k, e), (k + 1, n)):
+            rows[row, i, :2], rows[row, 0, :2] = axis, -axis
+            rows[row, 0, 2] = -_dot(axis, carried)
+        rows[k + 2, i, 2], rows[k + 2, 0, 2] = 1.0, -1.0
+    return rows
+
+
+def _joint_measure(x: Array, u: Array, turn: Array, props: Props) -> Array:
+    e, n = _joint_frame(x)
+    strains = []
+    for i in range(1, len(x)):
+        moved = _turned(x[i] + u[i] - x[0] - u[0], -turn[0, 0]) - (x[i] - x[0])
+        strains += [_dot(e, moved), _dot(n, moved), turn[i, 0] - turn[0, 0]]
+    return np.stack(strains)
+
+
+def _joint_weights(x: Array, props: Props, model: str) -> Array:
+    return np.asarray(props["weight"])
+
+
 def _entry(*args: Any) -> tuple[str, Element]:
     return args[0], Element(*args)
 
@@ -347,6 +385,8 @@ ELEMENTS: Mapping[str, Element] = dict(
         _entry("fold", 4, (3,), False, ("dihedral",), ("stiffness",), (), _fold_rows, _fold_measure, _fold_weights),
         _entry("wall", 2, (2,), True, ("stretch", *BENDING), ("thickness", "modulus", "poisson"),
                ("arc", *ENDS, *ARMS), _wall_rows, _wall_measure, _wall_weights),
+        _entry("joint", 2, (2,), True, ("along", "across", "rotation"), ("weight",), (), _joint_rows, _joint_measure,
+               _joint_weights, True),
         _entry("strut", 2, (3,), True, ("stretch", "twist", *(f"{b}_{i}" for i in (3, 2) for b in BENDING)),
                ("diameter", "modulus", "poisson"), ENDS, _strut_rows, _strut_measure, _strut_weights),
     ]
@@ -360,8 +400,9 @@ def check_block(kind: str, d: int, k: int, props: Props) -> None:
         raise InputError(
             f"Element '{kind}' lives in {' or '.join(map(str, e.dimensions))} dimensions, the cell has {d}"
         )
-    if k != e.nodes:
-        raise InputError(f"Element '{kind}' joins {e.nodes} nodes, the block gives {k}")
+    if k != e.nodes and not (e.more and k > e.nodes):
+        more = " or more" if e.more else ""
+        raise InputError(f"Element '{kind}' joins {e.nodes}{more} nodes, the block gives {k}")
     for name in e.required:
         if name not in props:
             raise InputError(f"Element '{kind}' needs the property '{name}'; given: {', '.join(props) or 'none'}")

@@ -65,7 +65,7 @@ def strain_matrix(cell: UnitCell, model: str) -> tuple[Array, Array]:
         check_block(block.kind, d, block.nodes.shape[1], block.props)
         for e, (nodes, shifts) in enumerate(zip(block.nodes, block.shifts, strict=True)):
             x = cell.points[nodes] + shifts @ cell.lattice
-            props = {name: np.broadcast_to(value, (len(block),))[e : e + 1] for name, value in block.props.items()}
+            props = {name: np.moveaxis(value[e % len(value)][None], 0, -1) for name, value in block.props.items()}
             local = kind.rows(x[:, :, None], props)[..., 0]  # (s, k, f)
             size = local.shape[2]
             energy, axes = np.linalg.eigh(kind.weights(x[:, :, None], props, model)[..., 0])

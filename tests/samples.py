@@ -8,7 +8,7 @@ import dataclasses
 
 import numpy as np
 
-from homog.cell import Block, Status, UnitCell
+from homog.cell import MATRICES, Block, Status, UnitCell, tail
 from homog.elements import ELEMENTS
 from homog.families import FAMILIES, family
 from homog.materials import UNIT
@@ -66,13 +66,32 @@ PROPS = {  # ranges of the elements' properties for random cells; any other lies
     "start_along": (-0.1, 0.1), "start_across": (-0.1, 0.1), "end_along": (-0.1, 0.1), "end_across": (-0.1, 0.1),
     "start_compliance": (0.0, 1e4), "end_compliance": (0.0, 1e4),
 }  # fmt: skip
-STIFFENERS = ("modulus", "rigidity", "stiffness")
+STIFFENERS = ("modulus", "rigidity", "stiffness", "weight")
+
+
+def nodes_of(kind):
+    """Return how many nodes a kind joins here: one more than the least, where it may have more."""
+    return ELEMENTS[kind].nodes + ELEMENTS[kind].more
+
+
+def strains_of(kind):
+    """Return the names of the strains of an element of `nodes_of(kind)` nodes."""
+    e = ELEMENTS[kind]
+    return e.strains * (nodes_of(kind) - 1) if e.more else e.strains
 
 
 def random_props(kind, shape, rng, *, optional=True):
-    """Return every property of an element kind at random, arrays of `shape`."""
+    """Return every property of an element kind at random, arrays of `shape`, (*shape, s, s) for matrices."""
     e = ELEMENTS[kind]
-    return {name: rng.uniform(*PROPS.get(name, (0.1, 1.0)), shape) for name in e.required + e.optional * optional}
+    props = {}
+    for name in e.required + e.optional * optional:
+        if name in MATRICES:
+            s = len(strains_of(kind))
+            root = rng.uniform(-0.5, 0.5, (*np.atleast_1d(shape), s, s)) + np.eye(s)
+            props[name] = root @ np.swapaxes(root, -1, -2) + 0.1 * np.eye(s)
+        else:
+            props[name] = rng.uniform(*PROPS.get(name, (0.1, 1.0)), shape)
+    return props
 
 
 def random_cell(d, p, kinds, rng, *, points=3, members=(), optional=True):
@@ -92,14 +111,15 @@ def random_cell(d, p, kinds, rng, *, points=3, members=(), optional=True):
         e = ELEMENTS[kind]
         reach = n - 1 if turns and not all(turning) else n
         m = 6 * n
-        nodes, shifts = np.zeros((m, e.nodes), int), np.zeros((m, e.nodes, p), int)
+        k = nodes_of(kind)
+        nodes, shifts = np.zeros((m, k), int), np.zeros((m, k, p), int)
         for i in range(m):
             while True:
-                nodes[i] = rng.integers(0, reach, e.nodes)
+                nodes[i] = rng.integers(0, reach, k)
                 nodes[i, 0] = i % reach
-                shifts[i] = rng.integers(-1, 2, (e.nodes, p))
+                shifts[i] = rng.integers(-1, 2, (k, p))
                 places = len(np.unique(np.column_stack([nodes[i], shifts[i]]), axis=0))
-                if places == e.nodes and np.bincount(nodes[i]).max() < 3:  # three images of a point may lie in line
+                if places == k and np.bincount(nodes[i]).max() < 3:  # three images of a point may lie in line
                     break
         blocks.append(Block(kind, nodes, shifts, random_props(kind, (*members, m), rng, optional=optional)))
     return UnitCell(x, lattice, tuple(blocks))
@@ -148,7 +168,10 @@ def reordered(cell, rng):
     blocks = []
     for b in cell.blocks:
         pick = rng.permutation(len(b))
-        props = {name: np.broadcast_to(v, (*v.shape[:-1], len(b)))[..., pick] for name, v in b.props.items()}
+        props = {}
+        for name, v in b.props.items():
+            axis = v.ndim - tail(name)
+            props[name] = np.take(np.broadcast_to(v, (*v.shape[:axis], len(b), *v.shape[axis + 1 :])), pick, axis)
         blocks.append(Block(b.kind, place[b.nodes[pick]], b.shifts[pick], props))
     return dataclasses.replace(cell, points=cell.points[..., order, :], blocks=tuple(blocks[::-1]))
 

@@ -20,6 +20,7 @@ from homog import cli, plots, report, screening
 from homog.cell import STRAINS
 from homog.cli import main
 from homog.columns import COLUMNS, columns_of, reason_text
+from homog.elements import MODELS
 from homog.families import FAMILIES
 from homog.materials import materials, processes
 
@@ -87,7 +88,7 @@ BAD = {
     "sweep octet lenth=1:2:3 --out x.csv": "Unknown parameter 'lenth'; nearest known: length",
     "evaluate octet --material PLAA": "Unknown material 'PLAA'; nearest known: PLA",
     "materials plaa": "Unknown material 'plaa'",
-    "evaluate octet --model beam": "Unknown model 'beam'; known: euler, timoshenko",
+    "evaluate octet --model beam": f"Unknown model 'beam'; known: {', '.join(sorted(MODELS))}",
     # assignments
     "evaluate octet length": "'length' is not PARAM=VALUE",
     "evaluate octet length=": "'length=' is not PARAM=VALUE",
@@ -165,6 +166,15 @@ def test_bad_input_is_one_line_status_2_and_leaves_nothing(line, place, capsys):
     assert contents(place) == before
 
 
+def test_a_place_is_looked_at_before_anything_is_computed(place, capsys, monkeypatch):
+    def computing(*args, **options):
+        raise AssertionError("computed first")
+
+    monkeypatch.setattr("homog.effective.homogenize", computing)
+    for line in ("sweep octet --out there.csv", "sweep octet --out no/x.csv", "polar octet --out no/x.png"):
+        assert run(line, capsys)[0] == 2
+
+
 def test_overwrite_replaces_a_file_but_no_folder(place, capsys):
     (place / "d.csv").mkdir()
     assert run("sweep octet --out there.csv --overwrite", capsys)[0] == 0
@@ -191,7 +201,7 @@ def strict(text):
 def test_json_has_its_keys_shapes_and_units(case, capsys):
     name, words = case
     given = " ".join(f"{key}={value}" for key, value in words.items())
-    status, out, err = run(f"evaluate {name} {given} --material PLA --json", capsys)
+    status, out, err = run(f"evaluate {name} {given} --material PLA --model timoshenko --json", capsys)
     assert (status, err) == (0, "")
     card = strict(out)
     assert list(card) == KEYS
@@ -249,9 +259,10 @@ def test_a_parent_without_poisson_leaves_a_sound_cell_or_a_named_reject(capsys):
 
 
 def test_the_table_says_it_all_to_a_reader(capsys):
-    status, out, err = run("evaluate reentrant-honeycomb angle=-20 --material PLA", capsys)
+    line = "evaluate reentrant-honeycomb angle=-20 --material PLA --model timoshenko"
+    status, out, err = run(line, capsys)
     assert (status, err) == (0, "")
-    card = strict(run("evaluate reentrant-honeycomb angle=-20 --material PLA --json", capsys)[1])
+    card = strict(run(f"{line} --json", capsys)[1])
     assert out.startswith("Re-entrant honeycomb  (reentrant-honeycomb):  caution")
     assert "angle -20 deg" in out and "E 3000 MPa, nu 0.345, 1240 kg/m3; model timoshenko" in out
     lines = {line.split()[0]: line.split()[1] for line in out.splitlines() if len(line.split()) > 1}
@@ -265,6 +276,7 @@ def test_the_table_says_it_all_to_a_reader(capsys):
     for i, axis in enumerate(("11", "22", "12")):
         assert lines[axis] == report.number(card["stiffness"][i][0])
     assert "Screening only, not design evidence" in " ".join(out.split())
+    assert "plane strain" not in out and "plane strain" in run("evaluate square-grid --deep", capsys)[1]
 
 
 @pytest.mark.parametrize(("name", "axes"), [("miura-fold", "N11 N22 N12 M11 M22 M12"), ("octet", "11 22 33 23 13 12")])
@@ -361,27 +373,22 @@ def test_materials_and_processes_list_everything(capsys):
 
 
 def test_a_sweep_is_all_combinations(place, capsys):
-    status, out, err = run(
-        "sweep arrowhead outer_angle=20:40:3 inner_angle=50,60 thickness=0.8 --material PLA --out s.csv", capsys
-    )
+    before = set(contents(place))
+    given = "outer_angle=20:40:3 inner_angle=50,60 thickness=0.8 --material PLA --model euler"
+    status, out, err = run(f"sweep arrowhead {given} --out s.csv", capsys)
     assert (status, out, err) == (0, "wrote s.csv: 6 rows\n", "")
     table = pd.read_csv("s.csv")
     assert list(table["outer_angle_deg"]) == [20, 20, 30, 30, 40, 40] and list(table["inner_angle_deg"]) == [50, 60] * 3
     assert (table["thickness_mm"] == 0.8).all() and (table["half_width_mm"] == 10.0).all()
     library = homog.homogenize(
         homog.build("arrowhead", outer_angle=table["outer_angle_deg"], inner_angle=table["inner_angle_deg"],
-                    thickness=0.8, material="PLA")).table()  # fmt: skip
+                    thickness=0.8, material="PLA"), model="euler").table()  # fmt: skip
     assert list(table.columns) == list(library.columns)
     for name in ("E1_MPa", "nu12", "density_kg_m3", "auxetic_share"):
         np.testing.assert_allclose(table[name], library[name], rtol=1e-7)
     meta = strict((place / "s.meta.json").read_text())
-    assert (meta["family"], meta["rows"], meta["model"], meta["material"]["name"]) == (
-        "arrowhead",
-        6,
-        "timoshenko",
-        "PLA",
-    )
-    assert sorted(set(contents(place))) == sorted({*contents(place)} | {"s.csv", "s.meta.json"})
+    assert (meta["family"], meta["rows"], meta["model"], meta["material"]["name"]) == ("arrowhead", 6, "euler", "PLA")
+    assert set(contents(place)) - before == {"s.csv", "s.meta.json"}
 
 
 def test_a_sweep_of_words_and_of_nothing(place, capsys):

@@ -20,7 +20,7 @@ from homog.columns import (
     reason_text,
     table,
 )
-from homog.effective import Effective, homogenize
+from homog.effective import Effective
 from homog.errors import InputError
 from homog.families import FAMILIES, build, family
 from homog.materials import UNIT, Material, material
@@ -28,6 +28,11 @@ from homog.tensors import isotropic, orthotropic, stiffness_to_voigt
 
 PLA = material("PLA")
 PART = (200.0, 150.0, 120.0)
+
+
+def homogenize(cell, *, model="timoshenko"):
+    """Return the properties of walls between points, whatever the default model is."""
+    return homog.homogenize(cell, model=model)
 
 
 def one(name, *, part=PART, model="timoshenko", parent=PLA, **given):
@@ -98,6 +103,16 @@ def test_the_regular_hexagon_is_the_yardstick_of_the_hexagon(model, deep):
         out = evaluate(homogenize(cell, model=model))
         np.testing.assert_allclose(out["E1_per_hexagon"], 1.0, rtol=1e-9)
         np.testing.assert_allclose(out[f"E{axis}_MPa"], out[f"E{other}_MPa"], rtol=1e-9)  # isotropic in the plane
+
+
+def test_the_bounds_of_deep_walls_are_those_of_plane_strain():
+    # in the plane E <= rho E_s/(3 - 2 rho), whatever nu_s: in plane strain both sides grow by 1/(1 - nu_s^2)
+    flat, deep = (
+        one("triangular-grid", thickness=0.4, model="euler", parent=PLA.replaced(deep=deep)) for deep in (False, True)
+    )
+    np.testing.assert_allclose(deep["E1_MPa"], flat["E1_MPa"] / (1.0 - PLA.poisson**2))
+    np.testing.assert_allclose(deep["E1_per_hashin_shtrikman"], flat["E1_per_hashin_shtrikman"])
+    assert 0.9 < flat["E1_per_hashin_shtrikman"] < 1.0  # the triangular grid is nearly as stiff as can be
 
 
 def test_planar_columns_are_those_of_the_compliance():
@@ -347,7 +362,7 @@ RULES = {
     "tips-collide": ("reentrant-honeycomb", {"vertical": 10.0}),
     "struts-cross": ("arrowhead", {"outer_angle": 60.0, "inner_angle": 50.0}),
     "nodes-collide": ("anti-tetrachiral", {"node_radius": 4.9}),
-    "ring-filled": ("anti-tetrachiral", {"node_radius": 0.5, "thickness": 0.6}),
+    "ring-filled": ("anti-tetrachiral", {"node": "ring", "node_radius": 0.5, "thickness": 0.6}),
     "void-closed": ("rotating-squares", {"opening": 1.0}),
     "ligament-long": ("rotating-triangles", {"ligament_length": 5.0}),
     "sheet-thick": ("miura-fold", {"sheet_thickness": 2.0}),

@@ -5,7 +5,8 @@ fourth-order tensor (the definition), Verchery's polar parameters (Verchery 1979
 forms of grids and turning squares (derived from beam and hinge energy). Extremes are compared with dense sampling of
 directions, polished by a general-purpose optimiser that knows nothing of the tensor.
 
-Seeds were drawn, not chosen: 459907, 634693, 157505, 877296, 851764, 26061.
+Seeds were drawn, not chosen: 459907, 634693, 157505, 877296, 851764, 26061, 93208, 635305, 71852, 931969, 7321; where
+a test picked its seeds, it says so.
 """
 
 import numpy as np
@@ -405,8 +406,9 @@ def test_plane_extremes_of_a_turned_body_are_the_same(S, turn):
     for name in VALUES:
         a, b = getattr(one, name), getattr(two, name)
         assert b == pytest.approx(a, rel=EXACT, abs=EXACT * name.startswith("nu")), name
-    # the share is an arccos: near 0 and 1 it has the square root of round-off
-    assert two.auxetic_share == pytest.approx(one.auxetic_share, abs=1e-5)
+    if one.nu_max - one.nu_min > 1e-6:  # otherwise nu is one number, and if that is zero its sign is round-off
+        # the share is an arccos: near 0 and 1 it has the square root of round-off
+        assert two.auxetic_share == pytest.approx(one.auxetic_share, abs=1e-4)
     there = np.radians(one.nu_min_deg + turn)
     assert poisson(np.linalg.inv(turned), angle=there) == pytest.approx(one.nu_min, rel=EXACT, abs=EXACT)
 
@@ -476,6 +478,17 @@ def test_cubic(nu, G):
     axis, slope = (found.E_min_deg, found.E_max_deg) if diagonal > 1.0 else (found.E_max_deg, found.E_min_deg)
     assert axis == 0.0  # of the three axes, which tie, the one at the smallest angle
     assert slope == pytest.approx(steep, abs=1e-3)
+
+
+@pytest.mark.parametrize(("E3", "G13", "low", "high"), [(0.2, 1 / 3, 90.0, 0.0), (5.0, 1.0, 0.0, 90.0)])
+def test_of_a_whole_plane_that_ties_axis_1_is_reported(E3, G13, low, high):
+    """Isotropic in the plane 1-2, and G13 such that E only rises or only falls from there to axis 3."""
+    S = np.diag([1.0, 1.0, 1.0 / E3, 0.5 / G13, 0.5 / G13, 1.3])
+    S[0, 1] = S[1, 0] = -0.3
+    found = space_extremes(S)
+    assert sorted([found.E_min, found.E_max]) == pytest.approx(sorted([1.0, E3]), rel=ROUND_OFF)
+    assert (found.E_min_deg, found.E_max_deg) == pytest.approx((low, high), abs=1e-4)
+    assert min(found.E_min_deg, found.E_max_deg) == 0.0
 
 
 SPACE_SETS = {

@@ -13,9 +13,10 @@ PACKAGE = Path(__file__).resolve().parent.parent / "homog"
 
 ORDER = [
     *("errors", "tensors"),
-    *("materials", "section"),
+    *("materials", "section", "mesh"),
     *("cell", "elements"),
-    *("families", "assembly"),
+    *("stars", "joint_solid", "joints", "solid"),
+    *("families", "assembly", "reference"),
     "effective",
     *("directional", "bounds"),
     "columns",

@@ -30,7 +30,7 @@ from samples import (
 )
 
 from homog import effective
-from homog.cell import Status
+from homog.cell import MATRICES, Status, tail
 from homog.effective import homogenize
 from homog.families import build, family
 from homog.materials import UNIT
@@ -254,6 +254,8 @@ def test_stiffening_an_element_never_softens(name):
         for prop in STIFFENERS:
             if prop in block.props:
                 factor = 1.0 + np.diag(rng.uniform(0.2, 3.0, len(block)))  # member i: element i alone is stiffened
+                if prop in MATRICES:
+                    factor = factor[..., None, None]
                 stiffer = with_props(stiffer, b, **{prop: block.props[prop] * factor})
         values = np.linalg.eigvalsh((stiffness(stiffer) - C[0]) / np.outer(size, size))
         assert values.min() > -CLOSE
@@ -297,7 +299,8 @@ def spoiled(cell, bad):
             yield f"{what} {value}", dataclasses.replace(cell, **{what: array})
     for b, block in enumerate(cell.blocks):
         for prop in block.props:
-            array = np.broadcast_to(block.props[prop], (MEMBERS, len(block))).copy()
+            value = block.props[prop]
+            array = np.broadcast_to(value, (MEMBERS, len(block), *value.shape[value.ndim + 1 - tail(prop) :])).copy()
             array[bad, 0] = np.nan
             yield f"{block.kind} {prop}", with_props(cell, b, **{prop: array})
     flat = np.broadcast_to(cell.lattice, (MEMBERS, *cell.lattice.shape[-2:])).copy()

@@ -345,6 +345,7 @@ def test_evaluation_of_a_mechanism_has_none_for_what_does_not_exist():
 
 BRIEF = """
 title = "Insole $5 | test"
+model = "timoshenko"
 material = "PLA"
 [process]
 name = "filament"
@@ -464,7 +465,9 @@ def test_the_summary_when_nothing_meets():
 
 
 def test_the_summary_when_all_are_rejected():
-    found = run_screen(parse_brief('material = "PLA"\n[[candidates]]\nfamily = "octet"\ndiameter = [3.0, 6.0]'))
+    found = run_screen(
+        parse_brief('model = "euler"\nmaterial = "PLA"\n[[candidates]]\nfamily = "octet"\ndiameter = [3.0, 6.0]')
+    )
     text = summary(found, figures=[], version="9.9")
     assert "- verdict not reject: missed by 2 (struts-merge 1, walls-thick 1)" in text
     assert "None: every candidate is rejected" in text and "chart.png" not in text and "No limits." in text

@@ -3,6 +3,7 @@
 import dataclasses
 import functools
 import math
+import re
 
 import numpy as np
 import pandas as pd
@@ -33,6 +34,7 @@ def grid(thickness, more=""):
 
 MIXED = """
 title = "all kinds"
+model = "timoshenko"
 material = "PLA"
 [part]
 size_1_mm = 120.0
@@ -140,8 +142,13 @@ def test_the_size_of_a_chunk_changes_nothing(size, monkeypatch):
     found = run_screen(brief, progress=counts.append)
     assert sum(counts) == 78 and max(counts) <= size
     for name in ("candidates", "shortlist", "nearest"):
-        # a batch of another length may sum in another order: a few units in the last place of a near-cancelled value
-        pd.testing.assert_frame_equal(getattr(found, name), getattr(expected, name), rtol=1e-9, atol=1e-10)
+        # a batch of another length may sum in another order: a few units in the last place of a near-cancelled value,
+        # and the square root of that, 1e-8 rad, in where a flat extreme lies
+        one, other = getattr(found, name), getattr(expected, name)
+        flat = [column for column in one if re.match("(nu|E)_(min|max)_deg", column)]
+        assert len(flat) == 4
+        pd.testing.assert_frame_equal(one[flat], other[flat], rtol=0.0, atol=1e-5)
+        pd.testing.assert_frame_equal(one.drop(columns=flat), other.drop(columns=flat), rtol=1e-9, atol=1e-10)
     assert [dataclasses.astuple(f) for f in found.falls] == [dataclasses.astuple(f) for f in expected.falls]
 
 
@@ -165,9 +172,9 @@ def test_a_row_makes_its_cell_again():
 
 def test_the_brief_decides_model_and_parent():
     thick = "[[candidates]]\nfamily = 'reentrant-honeycomb'\nthickness = 2.0\n[material]\nname = 'PLA'\n"
-    soft = run_screen(parse_brief(thick)).candidates["E1_MPa"][0]
+    soft = run_screen(parse_brief("model = 'timoshenko'\n" + thick)).candidates["E1_MPa"][0]
     stiff = run_screen(parse_brief("model = 'euler'\n" + thick)).candidates["E1_MPa"][0]
-    deep = run_screen(parse_brief(thick + "deep = true")).candidates["E1_MPa"][0]
+    deep = run_screen(parse_brief("model = 'timoshenko'\n" + thick + "deep = true")).candidates["E1_MPa"][0]
     assert soft < 0.98 * stiff  # shear makes a thick wall softer
     np.testing.assert_allclose(deep / soft, 1.0 / (1.0 - 0.345**2), rtol=0.02)  # plane strain, but for its shear
 

@@ -229,7 +229,7 @@ def _by_chunks(rows: Callable[[Array], Array], compliance: ArrayLike, size: int,
         raise InputError(f"compliance has shape {S.shape}; it must end in ({size}, {size}), Mandel")
     flat = S.reshape(-1, size, size)
     out = np.empty((len(fields(Extremes)), len(flat)))
-    with np.errstate(divide="ignore", invalid="ignore"):
+    with np.errstate(divide="ignore", over="ignore", invalid="ignore"):
         for start in range(0, len(flat), chunk):
             part = flat[start : start + chunk]
             bad = ~np.isfinite(part).all(axis=(1, 2))
