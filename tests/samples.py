@@ -108,7 +108,6 @@ def random_cell(d, p, kinds, rng, *, points=3, members=(), optional=True):
     blocks = []
     turning = [ELEMENTS[kind].turns for kind in kinds]
     for kind, turns in zip(kinds, turning, strict=True):
-        e = ELEMENTS[kind]
         reach = n - 1 if turns and not all(turning) else n
         m = 6 * n
         k = nodes_of(kind)
