@@ -374,11 +374,15 @@ def strain_rows(points: Array, triangles: Index) -> Array:
     return rows
 
 
+def plane_stress(E: float, nu: float) -> Array:
+    """Return the Voigt stiffness (3, 3) of an isotropic solid in plane stress."""
+    return E / (1.0 - nu**2) * np.array([[1.0, nu, 0.0], [nu, 1.0, 0.0], [0.0, 0.0, (1.0 - nu) / 2.0]])
+
+
 def element_stiffness(points: Array, triangles: Index, E: float, nu: float) -> Array:
     """Return the stiffness of each triangle, (m, 12, 12), freedoms x0 y0 x1 ..., per unit depth in plane stress."""
     rows = strain_rows(points, triangles)
-    C = E / (1.0 - nu**2) * np.array([[1.0, nu, 0.0], [nu, 1.0, 0.0], [0.0, 0.0, (1.0 - nu) / 2.0]])
-    weights = areas(points, triangles)[:, None, None] / 3.0 * C
+    weights = areas(points, triangles)[:, None, None] / 3.0 * plane_stress(E, nu)
     B = rows.reshape(-1, 3, 3, 12)
     stress = weights[:, None] @ B
     return np.asarray(B.reshape(-1, 9, 12).swapaxes(1, 2) @ stress.reshape(-1, 9, 12))

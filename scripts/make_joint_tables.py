@@ -2,7 +2,7 @@
 
     python scripts/make_joint_tables.py [SHAPE ...]        needs the extra `solid`; about twenty minutes on two cores
 
-Each point is two solids (nu 0 and 0.5; the correction is linear in nu). Afterwards the table is compared with solids at
+Each point is one solid (the correction is linear in nu). Afterwards the table is compared with solids at
 random coordinates between the points, and the largest error is printed, relative to the largest entry of Delta.
 """
 
@@ -17,7 +17,7 @@ from pathlib import Path
 import numpy as np
 
 from homog import joints
-from homog.joint_solid import linear_correction
+from homog.joint_solid import correction
 
 SEED = 6173
 CHECKS = 24
@@ -27,7 +27,7 @@ PATH = Path(joints.__file__).with_name(joints.TABLES)
 def at(shape_name: str, coordinates: tuple[float, ...]) -> np.ndarray:
     shape = next(s for s in joints.SHAPES if s.name == shape_name)
     u = np.array(coordinates)
-    return linear_correction(np.array(shape.gaps(u), float), np.array(shape.thickness(u), float))
+    return correction(np.array(shape.gaps(u), float), np.array(shape.thickness(u), float))
 
 
 def main() -> None:
