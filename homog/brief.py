@@ -40,8 +40,9 @@ KEYS = {
 }
 CANDIDATE_KEYS = ("family", "samples", "seed")
 MOST_KEPT = 200
-MOST_CANDIDATES = 2_000_000
-"""One candidate with all its columns takes about 1.6 kB while a screen runs."""
+MOST_CANDIDATES = 1_000_000_000
+"""Sobol' points are numbered with SOBOL_BITS digits; a screen of so many takes days and some 300 GB."""
+SOBOL_BITS = 30
 _STATEMENT = re.compile(r"""\s*(\[|[\w"'][^=]*=)""")
 
 
@@ -84,12 +85,29 @@ class Goal:
 
 
 @dataclass(frozen=True)
+class Span:
+    """Evenly spread values from low to high, made from their number alone."""
+
+    low: float
+    high: float
+    count: int
+
+    def __len__(self) -> int:
+        return self.count
+
+    def __getitem__(self, number: NDArray[np.int64]) -> NDArray[np.float64]:
+        step = (self.high - self.low) / max(self.count - 1, 1)
+        inner = (number < self.count - 1) | (number == 0)
+        return np.asarray(np.where(inner, self.low + number * step, self.high))
+
+
+@dataclass(frozen=True)
 class Candidates:
     """Numbered candidates of one family: the product of listed values, times the Sobol samples of sampled ranges."""
 
     family: Family
     words: Mapping[str, str]
-    listed: Mapping[str, tuple[float, ...]]
+    listed: Mapping[str, tuple[float, ...] | Span]
     sampled: Mapping[str, tuple[float, float]]
     samples: int = 1
     seed: int = 0
@@ -100,11 +118,28 @@ class Candidates:
         return math.prod(len(values) for values in self.listed.values()) * self.samples
 
     @cached_property
-    def _points(self) -> NDArray[np.float64]:
+    def _net(self) -> NDArray[np.int64]:
+        """Scrambled Sobol' points 0, 1, 2, 4, 8, ... as whole numbers of SOBOL_BITS digits, (1 + k, axes)."""
         from scipy.stats import qmc
 
-        sobol = qmc.Sobol(len(self.sampled), scramble=True, rng=np.random.default_rng(self.seed))
-        return np.asarray(sobol.random_base2(math.ceil(math.log2(max(self.samples, 1))))[: self.samples])
+        sobol = qmc.Sobol(len(self.sampled), scramble=True, bits=SOBOL_BITS, rng=np.random.default_rng(self.seed))
+        points = [sobol.random(1)]
+        for digit in range((self.samples - 1).bit_length()):
+            if digit:
+                sobol.fast_forward(2 ** (digit - 1) - 1)
+            points.append(sobol.random(1))
+        return np.rint(np.concatenate(points) * 2.0**SOBOL_BITS).astype(np.int64)
+
+    def _points(self, number: NDArray[np.int64]) -> NDArray[np.float64]:
+        """Return the Sobol' points of those numbers, (m, axes), in [0, 1).
+
+        A digitally scrambled sequence is affine over the binary digits of its number (Niederreiter 1992; Matousek
+        1998): point n is point 0, changed for every digit k of n by what changes point 0 into point 2^k.
+        """
+        found = np.repeat(self._net[:1], len(number), axis=0)
+        for digit, point in enumerate(self._net[1:]):
+            found ^= np.where((number >> digit & 1)[:, None], point ^ self._net[0], 0)
+        return np.asarray(found / 2.0**SOBOL_BITS)
 
     def take(self, start: int, stop: int) -> dict[str, Any]:
         """Return the parameters of candidates start to stop - 1, arrays by name."""
@@ -114,9 +149,10 @@ class Candidates:
         sizes = [len(values) for values in self.listed.values()]
         where = np.unravel_index(grid, sizes) if sizes else ()
         for (name, values), index in zip(self.listed.items(), where, strict=True):
-            given[name] = np.asarray(values)[index]
+            given[name] = values[index] if isinstance(values, Span) else np.asarray(values)[index]
+        points = self._points(sample) if self.sampled else sample
         for axis, (name, (low, high)) in enumerate(self.sampled.items()):
-            given[name] = low + (high - low) * self._points[sample, axis]
+            given[name] = low + (high - low) * points[:, axis]
         return given
 
 
@@ -390,7 +426,7 @@ class _Reader:
         samples = self._count(given.get("samples", 1), "samples", 1, MOST_CANDIDATES, *here, "samples")
         seed = self._count(given.get("seed", 0), "seed", 0, 2**63 - 1, *here, "seed")
         words: dict[str, list[str]] = {}
-        listed: dict[str, tuple[float, ...]] = {}
+        listed: dict[str, tuple[float, ...] | Span] = {}
         sampled: dict[str, tuple[float, float]] = {}
         known = [p.name for p in found.parameters]
         for name, spec in given.items():
@@ -408,8 +444,8 @@ class _Reader:
                 sampled[name] = self._span(spec, "sampled", *here, name)
                 tried = [list(sampled[name])]
             else:
-                listed[name] = self._listed(spec, *here, name)
-                tried = [list(listed[name])]
+                values = listed[name] = self._listed(spec, *here, name)
+                tried = [[values.low, values.high] if isinstance(values, Span) else list(values)]
             for value in tried:
                 with self.at(*here, name):
                     found.values({name: value})
@@ -436,12 +472,12 @@ class _Reader:
             raise self.fault(f"'{name}': empty range, from {low:g} is above to {high:g}; swap them", *place)
         return low, high
 
-    def _listed(self, spec: Any, *place: str | int) -> tuple[float, ...]:
+    def _listed(self, spec: Any, *place: str | int) -> tuple[float, ...] | Span:
         name = place[-1]
         if isinstance(spec, dict):
             low, high = self._span(spec, "count", *place)
             count = self._count(spec["count"], f"'{name}' count", 1, MOST_CANDIDATES, *place, "count")
-            return tuple(np.linspace(low, high, count).tolist())
+            return Span(low, high, count)
         if isinstance(spec, list):
             return tuple(self._number(value, f"'{name}'", *place, i) for i, value in enumerate(spec))
         return (self._number(spec, f"'{name}'", *place),)

@@ -184,11 +184,12 @@ class Results:
         return np.asarray((np.asarray(self.part[:axes]) / self.size[:, :axes]).min(axis=-1))
 
     @cached_property
-    def soft_modes(self) -> list[str]:
-        modes = [""] * self.count
+    def soft_modes(self) -> Words:
+        """The soft mode of each member that has one."""
+        codes, words = np.zeros(self.count, np.int64), {"": 0}
         for i in np.flatnonzero(self.status == Status.MECHANISM):
-            modes[i] = soft_mode(self.stiffness[i], self.kind)
-        return modes
+            codes[i] = words.setdefault(soft_mode(self.stiffness[i], self.kind), len(words))
+        return Words(codes, tuple(words))
 
     @cached_property
     def reasons(self) -> dict[str, Mask]:
@@ -234,19 +235,27 @@ class Results:
         masks = [mask for code, mask in self.reasons.items() if reason_level(code) == level]
         return np.logical_or.reduce(masks) if masks else np.zeros(self.count, bool)
 
-    def reason_words(self) -> NDArray[Any]:
-        """Reason codes of each member, joined by blanks."""
-        return listed(self.reasons, self.count)
+
+@dataclass(frozen=True, eq=False)
+class Words:
+    """Text of m members, of few different words: `words[codes]`."""
+
+    codes: NDArray[np.int64]
+    words: tuple[str, ...]
+
+    def spelled(self) -> NDArray[Any]:
+        """Return the text of each member (object array)."""
+        return np.array(self.words, dtype=object)[self.codes]
 
 
-def listed(masks: Mapping[str, Mask], count: int) -> NDArray[Any]:
-    """Return for each of `count` members the names whose mask is true there, joined by blanks (object array)."""
+def listed(masks: Mapping[str, Mask], count: int) -> Words:
+    """Return for each of `count` members the names whose mask is true there, joined by blanks."""
     bits = np.zeros(count, np.int64)
     for bit, mask in enumerate(masks.values()):
         bits |= mask.astype(np.int64) << bit
     patterns, where = np.unique(bits, return_inverse=True)
-    words = [" ".join(name for bit, name in enumerate(masks) if pattern >> bit & 1) for pattern in patterns]
-    return np.array(words, dtype=object)[where]
+    words = (" ".join(name for bit, name in enumerate(masks) if pattern >> bit & 1) for pattern in patterns)
+    return Words(where, tuple(words))
 
 
 def reason_level(code: str) -> str:
@@ -272,8 +281,9 @@ class Column:
     name: str
     meaning: str
     kinds: tuple[Kind, ...]
-    of: Callable[[Results], NDArray[Any]]
+    of: Callable[[Results], NDArray[Any] | Words]
     text: bool = False
+    whole: bool = False
 
 
 def _extreme(name: str) -> Callable[[Results], Array]:
@@ -293,8 +303,8 @@ def _sheet_coupling(r: Results) -> Array:
     return np.asarray((np.abs(r.stiffness[:, :3, 3:]) / (size[:, :3, None] * size[:, None, 3:])).max(axis=(-1, -2)))
 
 
-def _verdict(r: Results) -> NDArray[Any]:
-    return np.where(r.worst("reject"), "reject", np.where(r.worst("caution"), "caution", "ok")).astype(object)
+def _verdict(r: Results) -> Words:
+    return Words(np.where(r.worst("reject"), 2, r.worst("caution").astype(np.int64)), ("ok", "caution", "reject"))
 
 
 _ALL_COLUMNS = (
@@ -350,11 +360,12 @@ _ALL_COLUMNS = (
     Column("largest_cell_mm", "largest repeat", ALL, lambda r: r.size[:, : r.cell.p].max(axis=-1)),
     Column("height_mm", "thickness of the slab that holds the sheet", SHEET, lambda r: r.flat(r.cell.height)),
     Column("cells_across", "fewest repeats across the part, if its size is given", ALL, lambda r: r.cells_across),
-    Column("mechanisms", "motions that cost no energy", ALL, lambda r: r.effective.mechanisms.reshape(-1)),
-    Column("soft_mode", "the uniform strain that costs no energy", ALL,
-           lambda r: np.array(r.soft_modes, dtype=object), text=True),
+    Column("mechanisms", "motions that cost no energy", ALL, lambda r: r.effective.mechanisms.reshape(-1),
+           whole=True),
+    Column("soft_mode", "the uniform strain that costs no energy", ALL, lambda r: r.soft_modes, text=True),
     Column("verdict", "ok, caution or reject", ALL, _verdict, text=True),
-    Column("reasons", "codes of what speaks against the cell or its model", ALL, Results.reason_words, text=True),
+    Column("reasons", "codes of what speaks against the cell or its model", ALL,
+           lambda r: listed(r.reasons, r.count), text=True),
 )  # fmt: skip
 
 COLUMNS: Mapping[str, Column] = MappingProxyType({column.name: column for column in _ALL_COLUMNS})
@@ -383,8 +394,10 @@ def parameter_columns(effective: Effective) -> dict[str, NDArray[Any]]:
     }
 
 
-def evaluate(effective: Effective, names: Sequence[str] | None = None, *, part: Sequence[float] = ()) -> dict[str, Any]:
-    """Return family, parameters and output quantities as flat arrays by column name.
+def quantities(
+    effective: Effective, names: Sequence[str] | None = None, *, part: Sequence[float] = ()
+) -> dict[str, NDArray[Any] | Words]:
+    """Return family, parameters and output quantities by column name: flat arrays of numbers, text as `Words`.
 
     Parameters
     ----------
@@ -394,14 +407,12 @@ def evaluate(effective: Effective, names: Sequence[str] | None = None, *, part: 
         Columns wanted, all of the cell's kind if not given; a column that the kind does not have is NaN.
     part : sequence of float
         Size of the part along the axes, mm, for `cells_across`.
-
-    Returns
-    -------
-    dict of str to ndarray of shape (m,)
     """
     results = Results(effective, part)
     wanted = columns_of(effective.kind) if names is None else list(names)
-    out: dict[str, Any] = {"family": np.full(results.count, effective.cell.family, dtype=object)}
+    out: dict[str, NDArray[Any] | Words] = {
+        "family": Words(np.zeros(results.count, np.int64), (effective.cell.family,))
+    }
     out.update(parameter_columns(effective))
     with np.errstate(all="ignore"):
         for name in wanted:
@@ -409,6 +420,12 @@ def evaluate(effective: Effective, names: Sequence[str] | None = None, *, part: 
             has = effective.kind in found.kinds
             out[name] = found.of(results) if has else np.full(results.count, np.nan)
     return out
+
+
+def evaluate(effective: Effective, names: Sequence[str] | None = None, *, part: Sequence[float] = ()) -> dict[str, Any]:
+    """Return `quantities` with text spelled out, ndarrays of shape (m,) by column name."""
+    found = quantities(effective, names, part=part)
+    return {name: values.spelled() if isinstance(values, Words) else values for name, values in found.items()}
 
 
 def table(effective: Effective, names: Sequence[str] | None = None, *, part: Sequence[float] = ()) -> pd.DataFrame:

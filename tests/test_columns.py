@@ -393,8 +393,8 @@ def test_an_unknown_reason_is_an_error():
 
 def test_words_of_masks():
     masks = {"a": np.array([True, False, True]), "b": np.array([True, False, False])}
-    assert list(listed(masks, 3)) == ["a b", "", "a"]
-    assert list(listed({}, 2)) == ["", ""]
+    assert list(listed(masks, 3).spelled()) == ["a b", "", "a"]
+    assert list(listed({}, 2).spelled()) == ["", ""]
 
 
 # ------------------------------------------------------------------------------------- bad members, batches
