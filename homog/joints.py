@@ -96,7 +96,11 @@ RATIO = float(np.log(2.6))
 TURN = 2.0 * np.pi
 
 SHAPES = (
-    # a stem (wall 0) between two equal arms: honeycombs
+    # a stem (wall 0) between two arms, all equal: honeycombs
+    Shape("even-fork", 3, ((FORK[0], 0.0, FORK[1]),), ((20, 24),),
+          lambda u: [_gap(u[0]), TURN - 2.0 * _gap(u[0]), _gap(u[0])],
+          lambda u: [1.0 + 0.0 * u[0]] * 3, lambda g, t: [_open(g[0])]),
+    # a stem (wall 0) of another thickness between two equal arms
     Shape("fork", 3, ((FORK[0], 0.0, FORK[1]), (-RATIO, 0.0, RATIO)), ((14, 16), (8, 8)),
           lambda u: [_gap(u[0]), TURN - 2.0 * _gap(u[0]), _gap(u[0])],
           lambda u: [1.0 + 0.0 * u[1], np.exp(u[1]), np.exp(u[1])],
