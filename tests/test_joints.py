@@ -192,7 +192,7 @@ def test_a_shape_is_found_from_any_wall_and_its_mirror(name):
         return float(f @ delta[..., 0] @ f)
 
     values = [energy((k + np.arange(n) * m) % n, m) for k in range(n) for m in (1, -1)]
-    np.testing.assert_allclose(values, values[0], rtol=5e-3)  # meshes and tables of joints, 0.2 % each
+    np.testing.assert_allclose(values, values[0], rtol=1e-3)  # symmetric where it was solved, interpolated between
     assert values[0] != 0.0
 
 
