@@ -1,39 +1,35 @@
 """What is handed over: tables, figures, a summary in an engineer's words, and the provenance beside them.
 
-Files appear whole or not at all: a screening is written into a hidden folder beside its place and renamed at the end.
-Results that are already there are never overwritten unless that is asked for.
+Every number a reader sees in words is made here; the candidates themselves are written by `store`, as they come.
 """
 
 from __future__ import annotations
 
 import dataclasses
-import errno
-import hashlib
 import json
 import math
-import os
 import platform
 import re
-import shutil
-import tempfile
-from collections import Counter
-from collections.abc import Callable, Collection, Iterator, Mapping, Sequence
-from contextlib import contextmanager, suppress
+from collections.abc import Callable, Iterable, Mapping, Sequence
 from datetime import UTC, datetime
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
+import pyarrow as pa
 import scipy
 
 from homog.brief import Brief
 from homog.cell import UnitCell
 from homog.columns import COLUMNS, evaluate, reason_level, reason_text
 from homog.effective import Effective, homogenize
-from homog.errors import InputError, MissingExtra
+from homog.engine import Plan
+from homog.errors import InputError
 from homog.families import FAMILIES
+from homog.files import check_free, whole_file
 from homog.materials import CONFIRM, Material
 from homog.screening import Screening, records
+from homog.store import sha256, write_tables
 from homog.tensors import stiffness_to_voigt
 
 if TYPE_CHECKING:
@@ -44,9 +40,9 @@ WHAT_IT_IS = (
     "and hinge models. Screening only, not design evidence: where failure can hurt someone, local codes and licensed "
     "practice decide."
 )
-TABLE_FORMAT = "%.8g"
 TABLES = (".csv", ".parquet")
-FULL = (errno.ENOSPC, errno.EDQUOT, errno.EFBIG)
+MOST_CSV = 100_000
+"""Candidates up to which a screen writes candidates.csv unasked, some 60 MB."""
 ZERO = 1e-12
 SHOWN = ("density_kg_m3", "E1_MPa", "nu12", "auxetic_reach_deg", "E1_per_hexagon")
 
@@ -110,56 +106,57 @@ def check_table(path: Path, *, overwrite: bool = False) -> Path:
     return beside
 
 
-def write_table(table: pd.DataFrame, path: Path, meta: Mapping[str, Any], *, overwrite: bool = False) -> None:
-    """Write a table as CSV or Parquet by its suffix, whole or not at all, and its provenance to NAME.meta.json.
+def write_table(
+    tables: Iterable[pa.Table], whole: pa.Schema, path: Path, meta: Mapping[str, Any], *, overwrite: bool = False
+) -> int:
+    """Write tables of one schema into one file, CSV or Parquet by its suffix, and their provenance to NAME.meta.json.
+
+    All of it or nothing; `rows` is added to the provenance, and returned.
 
     Raises
     ------
     InputError
         For another suffix, or a file that is there already.
-    MissingExtra
-        For Parquet without pyarrow.
     """
     beside = check_table(path, overwrite=overwrite)
-    with whole_file(path, overwrite=overwrite) as temporary:
-        if path.suffix == ".csv":
-            table.to_csv(temporary, index=False, float_format=TABLE_FORMAT)
-        else:
-            try:
-                table.to_parquet(temporary, index=False, compression="zstd")
-            except ImportError:
-                raise MissingExtra("Writing Parquet", "parquet") from None
-        with whole_file(beside, overwrite=overwrite) as meta_file:
-            meta_file.write_text(json.dumps(meta, indent=2, ensure_ascii=False) + "\n", encoding="utf-8")
+    with whole_file(beside, overwrite=overwrite) as meta_file:
+        rows = write_tables(tables, whole, path, overwrite=overwrite)
+        meta_file.write_text(json.dumps({**meta, "rows": rows}, indent=2, ensure_ascii=False) + "\n", encoding="utf-8")
+    return rows
 
 
 def write_screening(
-    screening: Screening, place: Path, *, version: str, brief_name: str = "brief.toml",
+    screening: Screening, place: Path, *, version: str, brief_name: str = "brief.toml", csv: bool = False,
     progress: Callable[[str], None] = lambda step: None,
 ) -> None:  # fmt: skip
-    """Write candidates, shortlist, a polar plot per shortlisted cell, the property chart, the summary and the brief.
+    """Write tables, a polar plot per shortlisted cell, the property chart, the summary and the brief.
 
-    `place` is a folder that exists, usually that of `whole_folder`; `progress` is told what is being written.
+    `place` is a folder that exists, usually that of `whole_folder`; what a stopped run left there is replaced. The
+    candidates are in its parts; up to MOST_CSV of them, or with `csv`, also in candidates.csv. `progress` is told what
+    is being written.
     """
     from homog import plots
 
-    brief = screening.brief
+    brief, whole = screening.brief, Plan(screening.brief).schema
     meta = provenance(
-        version, brief.model, brief.material, title=brief.title,
-        brief_sha256=hashlib.sha256(brief.text.encode()).hexdigest(), candidates=brief.count, meeting=screening.met,
-        seeds=sorted({c.seed for c in brief.candidates if c.sampled}),
+        version, brief.model, brief.material, title=brief.title, brief_sha256=sha256(brief.text),
+        candidates=brief.count, meeting=screening.met, seeds=sorted({c.seed for c in brief.candidates if c.sampled}),
     )  # fmt: skip
-    progress("tables")
-    write_table(screening.candidates, place / "candidates.csv", meta)
-    write_table(screening.shortlist, place / "shortlist.csv", meta)
+    if csv or brief.count <= MOST_CSV:
+        progress("candidates.csv")
+        write_table(screening.tables(), whole, place / "candidates.csv", meta, overwrite=True)
+    progress("shortlist.csv")
+    short = pa.Table.from_pandas(screening.shortlist, preserve_index=False)
+    write_table([short], short.schema, place / "shortlist.csv", meta, overwrite=True)
     copy = place / (brief_name if brief_name.endswith(".toml") else "brief.toml")
     copy.write_bytes(brief.text.encode())
     shown = screening.shortlist if screening.met else screening.nearest
     if len(shown):
         progress("property chart")
         chart = plots.property_chart(
-            screening.candidates, shown, material=brief.material, limits=brief.limits, title=brief.title
-        )
+            screening.sample, shown, material=brief.material, limits=brief.limits, title=brief.title,
+            counts=screening.counts,
+        )  # fmt: skip
         for suffix in (".svg", ".png"):
             plots.save(chart, place / f"chart{suffix}")
     figures = []
@@ -252,29 +249,26 @@ def _cells(table: pd.DataFrame, brief: Brief, *, misses: bool) -> str:
 
 
 def _falls(screening: Screening) -> str:
-    table = screening.candidates
-    lines = [[f.limit.words, f"{f.missed:,}", f"{f.missed / len(table):.1%}", f"{f.alone:,}"] for f in screening.falls]
-    rejected = int((table["verdict"] == "reject").sum())
-    lines.append(["verdict not reject", f"{rejected:,}", f"{rejected / len(table):.1%}", ""])
-    families = []
-    for name, group in table.groupby("family", sort=True):
-        verdicts = [int((group["verdict"] == verdict).sum()) for verdict in ("ok", "caution", "reject")]
-        families.append([str(name), *(f"{count:,}" for count in (len(group), int(group["meets"].sum()), *verdicts))])
+    count, tally = screening.brief.count, screening.tally
+    lines = [[f.limit.words, f"{f.missed:,}", f"{f.missed / count:.1%}", f"{f.alone:,}"] for f in screening.falls]
+    rejected = tally.total("reject")
+    lines.append(["verdict not reject", f"{rejected:,}", f"{rejected / count:.1%}", ""])
+    families = [
+        [name, *(f"{tally.families[name, what]:,}" for what in ("candidates", "meets", "ok", "caution", "reject"))]
+        for name in sorted(screening.counts)
+    ]
     return (
         "## How many fell to what\n\n" + markdown(["limit", "missed", "share", "missed this alone"], lines) + "\n"
         + markdown(["family", "candidates", "meet", "ok", "caution", "reject"], families) + "\n"
         + markdown(["reason", "verdict", "candidates", "meaning"], [
-            [f"`{code}`", reason_level(code), f"{count:,}", reason_text(code)] for code, count in _reasons(table)
+            [f"`{code}`", reason_level(code), f"{count:,}", reason_text(code)] for code, count in _reasons(screening)
         ])
     )  # fmt: skip
 
 
-def _reasons(table: pd.DataFrame) -> list[tuple[str, int]]:
+def _reasons(screening: Screening) -> list[tuple[str, int]]:
     """Return each reason with the number of candidates it speaks against, rejects first, the most common first."""
-    counts: Counter[str] = Counter()
-    for codes, count in table["reasons"].value_counts().items():
-        for code in str(codes).split():
-            counts[code] += int(count)
+    counts = screening.tally.reasons
     return sorted(counts.items(), key=lambda item: (reason_level(item[0]) != "reject", -item[1], item[0]))
 
 
@@ -322,8 +316,8 @@ def summary(screening: Screening, *, figures: Sequence[str], version: str) -> st
         parts.append("## What is in the way\n")
         worst = sorted(screening.falls, key=lambda fall: -fall.missed)
         parts += [f"- {f.limit.words}: missed by {f.missed:,}, by {f.alone:,} as the only miss" for f in worst]
-        rejected = (screening.candidates["verdict"] == "reject").sum()
-        counts = [(code, n) for code, n in _reasons(screening.candidates) if reason_level(code) == "reject"]
+        rejected = screening.tally.total("reject")
+        counts = [(code, n) for code, n in _reasons(screening) if reason_level(code) == "reject"]
         why = f" ({', '.join(f'{code} {n:,}' for code, n in counts)})" if counts else ""
         parts.append(f"- verdict not reject: missed by {rejected:,}{why}")
         parts.append(

@@ -12,7 +12,7 @@ import pytest
 PACKAGE = Path(__file__).resolve().parent.parent / "homog"
 
 ORDER = [
-    *("errors", "tensors"),
+    *("version", "errors", "tensors", "files"),
     *("materials", "section", "mesh"),
     *("cell", "elements"),
     *("stars", "joint_solid", "joints", "solid"),
@@ -20,11 +20,12 @@ ORDER = [
     "effective",
     *("directional", "bounds"),
     "columns",
-    *("brief", "recheck", "screening"),
+    *("candidates", "brief", "recheck"),
+    *("store", "ranking", "engine", "screening"),
     *("geometry", "plots"),
     "report",
     "__init__",
-    "cli",
+    *("terminal", "cli"),
     "__main__",
 ]
 
@@ -42,7 +43,7 @@ ALLOWED = {
     ("effective", "columns"): "Effective.table is the data model's door to the columns",
 }
 
-MAY_PRINT = {"cli", "__main__"}
+MAY_PRINT = {"cli", "terminal", "__main__"}
 MAY_DRAW = {"plots"}
 PRINTING = {"rich", "typer", "click", "argparse"}
 MOST_LINES = 500
