@@ -319,7 +319,8 @@ def with_joints(cell: UnitCell) -> tuple[UnitCell, Mask, Mask]:
         first = np.argsort(np.mod(angles[:, sound], TURN), kind="stable")  # the order round a joint is the topology's
         walls, ends, angles = walls[first], ends[first], angles[first]
         gaps = np.mod(np.roll(angles, -1, axis=0) - angles, TURN)
-        gaps = np.where(np.abs(gaps.sum(axis=0) - TURN) < 1e-6, gaps, np.nan)  # another order: no such joint
+        there = (np.abs(gaps.sum(axis=0) - TURN) < 1e-6) & (cell.status == Status.OK)
+        gaps = np.where(there, gaps, np.nan)  # another order, or no cell at all: no such joint
         _swallow(plain, walls, gaps, t[walls])
         order, delta, missed = corrections(gaps, t[walls], nu[walls[0]])
         outside |= missed
