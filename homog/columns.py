@@ -366,6 +366,8 @@ _ALL_COLUMNS = (
     Column("cells_across", "fewest repeats across the part, if its size is given", ALL, lambda r: r.cells_across),
     Column("mechanisms", "motions that cost no energy", ALL, lambda r: r.effective.mechanisms.reshape(-1),
            whole=True),
+    Column("model", "what the numbers come from: euler, timoshenko, joint or solid", ALL,
+           lambda r: Words(np.zeros(r.count, np.int64), (r.effective.model,)), text=True),
     Column("soft_mode", "the uniform strain that costs no energy", ALL, lambda r: r.soft_modes, text=True),
     Column("verdict", "ok, caution or reject", ALL, _verdict, text=True),
     Column("reasons", "codes of what speaks against the cell or its model", ALL,

@@ -253,7 +253,7 @@ def workers(count: int = 0, cluster: str = "", *, parts: int) -> Iterator[Worker
 def _in_processes(count: int) -> Iterator[Workers]:
     before = set(multiprocessing.active_children())
     # fresh processes: a fork of one that has threads may hang
-    pool = ProcessPoolExecutor(count, multiprocessing.get_context("spawn"), initializer=_start_worker)
+    pool = ProcessPoolExecutor(count, multiprocessing.get_context("spawn"), initializer=start_worker)
     try:
         with _held_interrupts():
             for _ in range(count):
@@ -271,7 +271,7 @@ def _ready() -> None:
     """Do nothing: a task that makes the pool start a worker."""
 
 
-def _start_worker() -> None:
+def start_worker() -> None:
     """Leave interrupts to the main process, and end with it, however it ends."""
     signal.signal(signal.SIGINT, signal.SIG_IGN)
     parent = multiprocessing.parent_process()
