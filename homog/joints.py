@@ -51,21 +51,30 @@ class Shape:
     """Joints of one pattern: n walls whose gaps and thicknesses follow from a few coordinates.
 
     `gaps(coordinates (k, ...))` and `thickness` (over that of wall 0) give the joint, `coordinates(gaps, thickness)` is
-    the way back, exact if the joint has the pattern; each coordinate has a range and a number of Chebyshev points.
+    the way back, exact if the joint has the pattern. The range of each coordinate is cut at `edges` into pieces with so
+    many Chebyshev `points` each: where two walls come to lie in line, or another wall becomes the thickest, an inner
+    corner turns into an outer one and the correction has a kink.
     """
 
     name: str
     walls: int
-    low: tuple[float, ...]
-    high: tuple[float, ...]
-    points: tuple[int, ...]
+    edges: tuple[tuple[float, ...], ...]
+    points: tuple[tuple[int, ...], ...]
     gaps: Callable[[Array], list[Any]]
     thickness: Callable[[Array], list[Any]]
     coordinates: Callable[[Array, Array], list[Any]]
 
+    def pieces(self) -> list[tuple[int, ...]]:
+        """Return the number of the piece along each coordinate, of every piece of the table."""
+        return list(itertools.product(*(range(len(points)) for points in self.points)))
+
+    def span(self, piece: tuple[int, ...]) -> list[tuple[float, float, int]]:
+        """Return low and high end and number of points along each coordinate of a piece."""
+        return [(e[i], e[i + 1], p[i]) for e, p, i in zip(self.edges, self.points, piece, strict=True)]
+
     def outside(self, u: Array) -> Mask:
         """Return where coordinates (k, b) are outside the table's range, (b,)."""
-        low, high = (np.array(x)[:, None] for x in (self.low, self.high))
+        low, high = (np.array([edges[i] for edges in self.edges])[:, None] for i in (0, -1))
         return np.asarray(~((u >= low - MATCH_TOLERANCE) & (u <= high + MATCH_TOLERANCE)).all(axis=0))
 
 
@@ -84,36 +93,45 @@ def _span(low_deg: float, high_deg: float) -> tuple[float, float]:
 
 FORK, CROSS, ELBOW = _span(9.0, 176.0), _span(14.0, 90.0), _span(9.0, 178.0)
 NARROW, WIDE = _span(7.0, 80.0), _span(9.0, 162.0)
-RATIO = (float(np.log(1.0 / 2.6)), float(np.log(2.6)))
+RATIO = float(np.log(2.6))
 TURN = 2.0 * np.pi
 
 SHAPES = (
-    # a stem (wall 0) between two equal arms: honeycombs
-    Shape("fork", 3, (FORK[0], RATIO[0]), (FORK[1], RATIO[1]), (26, 12),
+    # a stem (wall 0) between two arms, all equal: honeycombs
+    Shape("even-fork", 3, ((FORK[0], 0.0, FORK[1]),), ((20, 24),),
+          lambda u: [_gap(u[0]), TURN - 2.0 * _gap(u[0]), _gap(u[0])],
+          lambda u: [1.0 + 0.0 * u[0]] * 3, lambda g, t: [_open(g[0])]),
+    # a stem (wall 0) of another thickness between two equal arms
+    Shape("fork", 3, ((FORK[0], 0.0, FORK[1]), (-RATIO, 0.0, RATIO)), ((14, 16), (8, 8)),
           lambda u: [_gap(u[0]), TURN - 2.0 * _gap(u[0]), _gap(u[0])],
           lambda u: [1.0 + 0.0 * u[1], np.exp(u[1]), np.exp(u[1])],
           lambda g, t: [_open(g[0]), np.log(t[1] / t[0])]),
     # two straight walls that cross: square, kagome
-    Shape("cross", 4, CROSS[:1], CROSS[1:], (18,),
+    Shape("cross", 4, (CROSS,), ((18,),),
           lambda u: [_gap(u[0]), np.pi - _gap(u[0])] * 2, lambda u: [1.0 + 0.0 * u[0]] * 4,
           lambda g, t: [_open(g[0])]),
     # six equal walls: triangular
-    Shape("hexad", 6, (), (), (), lambda u: [np.pi / 3.0] * 6, lambda u: [1.0] * 6, lambda g, t: []),
+    Shape("hexad", 6, (), (), lambda u: [np.pi / 3.0] * 6, lambda u: [1.0] * 6, lambda g, t: []),
     # two pairs on one axis: arrowhead
-    Shape("pairs", 4, (NARROW[0], WIDE[0]), (NARROW[1], WIDE[1]), (18, 20),
+    Shape("pairs", 4, (NARROW, WIDE), ((18,), (20,)),
           lambda u: [_gap(u[0]), _gap(u[1]), _gap(u[0]), TURN - 2.0 * _gap(u[0]) - _gap(u[1])],
           lambda u: [1.0 + 0.0 * u[0]] * 4, lambda g, t: [_open(g[0]), _open(g[1])]),
     # two walls at an angle
-    Shape("elbow", 2, ELBOW[:1], ELBOW[1:], (40,), lambda u: [_gap(u[0]), TURN - _gap(u[0])],
+    Shape("elbow", 2, (ELBOW,), ((40,),), lambda u: [_gap(u[0]), TURN - _gap(u[0])],
           lambda u: [1.0 + 0.0 * u[0]] * 2, lambda g, t: [_open(np.minimum(g[0], g[1]))]),
 )  # fmt: skip
 
 
 @functools.cache
-def _table(name: str) -> Array:
-    """Return the Chebyshev coefficients of a shape, (2, s, s, points...): Delta = A + nu B."""
+def _tables() -> dict[str, Array]:
+    """Return the Chebyshev coefficients of every piece, (2, s, s, points...): Delta = A + nu B."""
     with resources.files("homog").joinpath(TABLES).open("rb") as file, np.load(file) as tables:
-        return np.asarray(tables[name])
+        return dict(tables)
+
+
+def table_name(shape: Shape, piece: tuple[int, ...]) -> str:
+    """Return the name of a piece in the file of tables."""
+    return "-".join([shape.name, *map(str, piece)])
 
 
 def chebyshev(u: Array, low: float, high: float, points: int) -> Array:
@@ -129,16 +147,33 @@ def chebyshev(u: Array, low: float, high: float, points: int) -> Array:
 
 def interpolated(shape: Shape, coordinates: Array, poisson: Array) -> Array:
     """Return Delta (s, s, b) of unit thickness of wall 0 at coordinates (k, b) of a shape's table."""
-    C = _table(shape.name)
-    nu = np.asarray(poisson)
-    even = bool((nu == nu.flat[0]).all())
-    parts = [C[0] + nu.flat[0] * C[1]] if even else [C[0], C[1]]
+    members = coordinates.shape[1]
+    nu = np.broadcast_to(poisson, (members,))
+    where = np.zeros((len(shape.edges), members), np.int64)
+    for k, edges in enumerate(shape.edges):
+        where[k] = np.searchsorted(edges[1:-1], coordinates[k])
+    s = 3 * shape.walls - 3
+    out = np.empty((s, s, members))
+    for piece in shape.pieces():
+        here = (where == np.array(piece, np.int64).reshape(-1, 1)).all(axis=0)
+        if here.all():
+            return _polynomial(_tables()[table_name(shape, piece)], shape.span(piece), coordinates, nu)
+        if here.any():
+            part = _tables()[table_name(shape, piece)]
+            out[..., here] = _polynomial(part, shape.span(piece), coordinates[:, here], nu[here])
+    return out
+
+
+def _polynomial(C: Array, spans: list[tuple[float, float, int]], coordinates: Array, nu: Array) -> Array:
+    """Return the sum (s, s, b) of a piece's polynomials with coefficients C (2, s, s, points...)."""
+    even = bool((nu == nu[0]).all())
+    parts = [C[0] + nu[0] * C[1]] if even else [C[0], C[1]]
+    T = [chebyshev(x, *span) for x, span in zip(coordinates, spans, strict=True)]
     values = []
     for part in parts:
-        T = [chebyshev(coordinates[k], shape.low[k], shape.high[k], n) for k, n in enumerate(shape.points)]
         s = len(part)
         if not T:
-            values.append(np.broadcast_to(part[..., None], (s, s, coordinates.shape[1])))
+            values.append(np.repeat(part[..., None], coordinates.shape[1], axis=2))
         elif len(T) == 1:
             values.append((part.reshape(s * s, -1) @ T[0]).reshape(s, s, -1))
         else:
