@@ -1,7 +1,8 @@
 """Measure each model against solids of the true section, over families, shapes and slenderness; make the bands.
 
     python scripts/model_errors.py             needs the extra `solid`; two to four minutes on two cores
-    python scripts/model_errors.py --redraw    table, bands and figure from data/model_errors.csv, no solids
+    python scripts/model_errors.py --again     the models again, with the solids that data/model_errors.csv holds:
+                                               seconds; after a change of a model, a joint table or the figure
 
 It writes data/model_errors.csv (every row), data/model_errors.svg and .png (the figure) and homog/bands.csv (the
 envelope that the package reads), and prints the largest errors and how many fresh cells lie inside their band.
@@ -23,6 +24,7 @@ import platform
 import sys
 from collections.abc import Iterator
 from concurrent.futures import ProcessPoolExecutor
+from multiprocessing import get_context
 from pathlib import Path
 from typing import Any
 
@@ -195,12 +197,12 @@ def constants(effective: Effective) -> dict[str, float]:
 
 
 def measured(case: Case) -> list[dict[str, Any]]:
-    """Return one row for each model, or one that says why there is none."""
+    """Return the rows of a case, or one that says why there is none."""
     sample, family, shape, given, slenderness, nu, deep = case
     row: dict[str, Any] = {
         "sample": sample, "group": bands.group(family, given), "family": family, "shape": shape,
         "parameters": " ".join(f"{k}={v}" if isinstance(v, str) else f"{k}={v:.12g}" for k, v in given.items()),
-        "poisson": nu, "deep": deep, "slenderness": slenderness,
+        "poisson": nu, "deep": deep, "slenderness": slenderness, "note": "",
     }  # fmt: skip
     cell = batch_of_one(family, given, nu, deep)
     if int(cell.status[0]) != Status.OK:
@@ -209,10 +211,17 @@ def measured(case: Case) -> list[dict[str, Any]]:
         solid = homog.homogenize(cell.at(0), model="solid")
     except GeometryError as fault:
         return [{**row, "note": f"no solid: {fault}"}]
-    true = constants(solid)
-    row |= {f"solid_{k}": v for k, v in true.items()}
+    row |= {f"solid_{k}": v for k, v in constants(solid).items()}
     row |= {f"solid_{k}_spread_percent": 100.0 * float(solid.spread[k]) for k in MODULI}
     row |= {f"solid_{k}_spread": float(solid.spread[k]) for k in RATIOS}
+    return compared(row)
+
+
+def compared(row: dict[str, Any]) -> list[dict[str, Any]]:
+    """Return a row for each model from one that holds a cell and what its solid is."""
+    if row["note"]:
+        return [row]
+    cell = batch_of_one(row["family"], parameters(row["parameters"]), row["poisson"], row["deep"])
     rows = []
     for model in MODELS:
         found = homog.homogenize(cell, model=model)
@@ -220,10 +229,20 @@ def measured(case: Case) -> list[dict[str, Any]]:
         rows.append({
             **row, "model": model, "used": found.model, "outside": Flag.JOINT_OUTSIDE in flags,
             "near": Flag.JOINTS_NEAR in flags, "overlap": Flag.JOINTS_OVERLAP in flags,
-            **{f"{k}_error_percent": 100.0 * (values[k] / true[k] - 1.0) for k in MODULI},
-            **{f"{k}_error": values[k] - true[k] for k in RATIOS}, "note": "",
+            **{f"{k}_error_percent": 100.0 * (values[k] / row[f"solid_{k}"] - 1.0) for k in MODULI},
+            **{f"{k}_error": values[k] - row[f"solid_{k}"] for k in RATIOS},
         })  # fmt: skip
     return rows
+
+
+def parameters(words: str) -> dict[str, Any]:
+    """Return a row's parameters by name.
+
+    >>> parameters("node=ring thickness=0.5")
+    {'node': 'ring', 'thickness': 0.5}
+    """
+    pairs = (pair.split("=") for pair in words.split())
+    return {name: value if name == "node" else float(value) for name, value in pairs}
 
 
 # the envelope ----------------------------------------------------------------------------------------------------
@@ -391,12 +410,12 @@ def markdown(rows: pd.DataFrame) -> str:
 
 
 def joint_rows(rows: pd.DataFrame) -> pd.DataFrame:
-    """Return the table's rows of cells that have condensed joints, by the joint model."""
-    return rows[(rows["sample"] == "table") & (rows.note == "") & (rows.model == "joint") & (rows.used == "joint")]
+    """Return the rows of cells that have condensed joints, by the joint model."""
+    return rows[(rows.note == "") & (rows.model == "joint") & (rows.used == "joint")]
 
 
 def misses(rows: pd.DataFrame) -> pd.DataFrame:
-    """Return the table's rows of the joint model that miss its target: 1 % of a modulus, 0.01 of a Poisson's ratio."""
+    """Return the rows of the joint model that miss its target: 1 % of a modulus, 0.01 of a Poisson's ratio."""
     found = joint_rows(rows)
     moduli = found[[f"{k}_error_percent" for k in MODULI]].abs().max(axis=1)
     ratios = found[[f"{k}_error" for k in RATIOS]].abs().max(axis=1)
@@ -410,7 +429,7 @@ def shown(console: Console, rows: pd.DataFrame, covered: dict[str, Any]) -> None
     for line in short_table(rows):
         table.add_row(*line)
     console.print(table)
-    joined, missed = joint_rows(rows), misses(rows)
+    joined, missed = joint_rows(rows[rows["sample"] == "table"]), misses(rows)
     for title, few in (
         (f"Joint model: cells that miss its target (t/l to {TARGET_TO:g})", missed[missed.slenderness <= TARGET_TO]),
         (f"Joint model: what is left at t/l {SLENDERNESS[-1]:g}", joined[joined.slenderness > TARGET_TO]),
@@ -420,7 +439,7 @@ def shown(console: Console, rows: pd.DataFrame, covered: dict[str, Any]) -> None
             table.add_column(name)
         for r in few.itertuples():
             table.add_row(
-                r.group, str(r.shape), f"{r.slenderness:g}",
+                r.group, str(r.shape if r.sample == "table" else r.parameters), f"{r.slenderness:g}",
                 *(f"{getattr(r, f'{k}_error_percent'):.2f}" for k in MODULI),
                 *(f"{getattr(r, f'{k}_error'):.4f}" for k in RATIOS),
                 " ".join(word for word in ("near", "overlap", "outside") if getattr(r, word)),
@@ -501,27 +520,30 @@ def figure(rows: pd.DataFrame) -> Any:
 def main() -> None:
     parser = argparse.ArgumentParser(description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter)
     parser.add_argument("--processes", type=int, default=2, help="solids at a time (2)")
-    parser.add_argument("--redraw", action="store_true", help="from data/model_errors.csv, without solids")
+    parser.add_argument("--again", action="store_true", help="with the solids of data/model_errors.csv")
     options = parser.parse_args()
     if options.processes < 1:
         parser.error(f"--processes = {options.processes}: give at least 1")
     console, path = Console(), DATA / "model_errors.csv"
-    if options.redraw:
-        if not path.exists():
-            parser.error(f"{path} is not there; run without --redraw first")
-        rows = read(path)
+    if options.again and not path.exists():
+        parser.error(f"{path} is not there; run without --again first")
+    found: list[dict[str, Any]] = []
+    if options.again:
+        cells = read(path).drop_duplicates(["sample", "shape", "parameters", "slenderness", "poisson", "deep"])
+        rows_of = [{str(name): value for name, value in row.items()} for row in cells.to_dict("records")]
+        for row in track(rows_of, "models", console=Console(file=sys.stderr)):
+            found += compared(row)
     else:
         cases = [*table_cases(), *edge_cases(), *near_cases(), *random_cases("widen"), *random_cases("check")]
-        found: list[dict[str, Any]] = []
-        with ProcessPoolExecutor(options.processes) as pool:
-            for part in track(
-                pool.map(measured, cases, chunksize=2), "solids", len(cases), console=Console(file=sys.stderr)
-            ):
+        # fresh processes: the mesher keeps a state of its own that does not survive a fork
+        with ProcessPoolExecutor(options.processes, mp_context=get_context("spawn")) as pool:
+            results = pool.map(measured, cases, chunksize=2)
+            for part in track(results, "solids", len(cases), console=Console(file=sys.stderr)):
                 found += part
-        part_path = path.with_suffix(".part")
-        pd.DataFrame(found).to_csv(part_path, index=False, float_format="%.9g", lineterminator="\n")
-        os.replace(part_path, path)
-        rows = read(path)
+    part_path = path.with_suffix(".part")
+    pd.DataFrame(found).to_csv(part_path, index=False, float_format="%.9g", lineterminator="\n")
+    os.replace(part_path, path)
+    rows = read(path)
     covered = {}
     for samples, check in ((("table",), "widen"), (FIXED, "widen"), (MAKE, "check")):
         write_bands(envelopes(rows, samples))

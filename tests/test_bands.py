@@ -43,12 +43,6 @@ def rows(script):
     return found[found.note == ""]
 
 
-def words(parameters, size=1):
-    """Return a row's parameters as a batch of one."""
-    pairs = (pair.split("=") for pair in parameters.split())
-    return {k: v if k == "node" else np.full(size, float(v)) for k, v in pairs}
-
-
 # ---------------------------------------------------------------------------------------- what was measured
 
 
@@ -85,7 +79,7 @@ def test_the_shipped_envelope_is_that_of_the_shipped_rows(script, rows):
 def test_a_row_comes_out_again(script, rows, number):
     # the models are deterministic; the file has nine figures
     row = rows.iloc[np.random.default_rng([8123, number]).integers(len(rows))]
-    cell = script.batch_of_one(row.family, words(row.parameters), row.poisson, row.deep)
+    cell = script.batch_of_one(row.family, script.parameters(row.parameters), row.poisson, row.deep)
     found = script.constants(homog.homogenize(cell, model=row.model))
     for name in script.MODULI:
         again = 100.0 * (found[name] / row[f"solid_{name}"] - 1.0)
@@ -97,7 +91,7 @@ def test_a_row_comes_out_again(script, rows, number):
 def test_a_solid_comes_out_again(script, rows):
     # another mesher's release may place other nodes: then the solid moves by no more than its own error estimate
     row = rows[(rows.family == "reentrant-honeycomb") & (rows["sample"] == "table") & (rows.slenderness == 0.2)].iloc[0]
-    cell = script.batch_of_one(row.family, words(row.parameters), row.poisson, row.deep)
+    cell = script.batch_of_one(row.family, script.parameters(row.parameters), row.poisson, row.deep)
     found = script.constants(homog.homogenize(cell.at(0), model="solid"))
     for name in script.MODULI:
         off = 100.0 * abs(found[name] / row[f"solid_{name}"] - 1.0)
