@@ -41,6 +41,7 @@ NEAR = 0.4
 """Plain wall between the inner corners of neighbouring joints, in thicknesses, below which they feel each other. Below
 none the joints overlap and the model fails: moduli come out wrong by any factor, even negative."""
 MOST_ON_DEMAND = 200
+PLAIN_WALL = ("thickness", "modulus", "poisson")
 
 
 # tables ----------------------------------------------------------------------------------------------------------
@@ -187,6 +188,7 @@ def matched(gaps: Array, ratio: Array) -> tuple[Shape, Array, NDArray[np.int64],
 
     With it come its coordinates (k, b), the order in which its walls are the shape's, and -1.0 for its mirror image.
     """
+    sound = np.isfinite(gaps).all(axis=0) & np.isfinite(ratio).all(axis=0)
     n, partly = len(gaps), None
     for shape in SHAPES:
         if shape.walls != n:
@@ -199,8 +201,8 @@ def matched(gaps: Array, ratio: Array) -> tuple[Shape, Array, NDArray[np.int64],
                 found = shape.coordinates(g, t)
                 u = np.array([np.broadcast_to(x, gaps.shape[1:]) for x in found]).reshape(len(found), *gaps.shape[1:])
                 off = [np.abs(a - b) for a, b in zip([*shape.gaps(u), *shape.thickness(u)], [*g, *t], strict=True)]
-            if all((x <= MATCH_TOLERANCE).all() for x in off):
-                if not shape.outside(u).any():
+            if all((x <= MATCH_TOLERANCE)[..., sound].all() for x in off):
+                if not shape.outside(u)[sound].any():
                     return shape, u, order, mirror
                 partly = partly or (shape, u, order, mirror)
     return partly
@@ -230,7 +232,8 @@ def corrections(gaps: Array, thickness: Array, poisson: Array) -> tuple[NDArray[
     """
     n, members = gaps.shape
     order, none = np.arange(n), np.zeros(members, bool)
-    if n == 2 and (np.abs(gaps - np.pi) <= MATCH_TOLERANCE).all() and (np.ptp(thickness, axis=0) == 0.0).all():
+    straight = (np.abs(gaps - np.pi) <= MATCH_TOLERANCE) & (np.ptp(thickness, axis=0) == 0.0)
+    if n == 2 and (straight | ~np.isfinite(gaps)).all():
         return order, np.zeros((3, 3, members)), none  # a wall that runs on
     found = matched(gaps, thickness / thickness[0])
     if found is None:
@@ -244,7 +247,9 @@ def corrections(gaps: Array, thickness: Array, poisson: Array) -> tuple[NDArray[
 
 
 def _on_demand(gaps: Array, ratio: Array, poisson: Array) -> Array:
-    keys, where = np.unique(np.round(np.concatenate([gaps, ratio]), 9), axis=1, return_inverse=True)
+    joint = np.round(np.concatenate([gaps, ratio]), 9)
+    sound = np.isfinite(joint).all(axis=0)
+    keys, where = np.unique(joint[:, sound], axis=1, return_inverse=True)
     if keys.shape[1] > MOST_ON_DEMAND:
         raise InputError(
             f"{keys.shape[1]:,} different joints that no table has, at most {MOST_ON_DEMAND} in one batch: "
@@ -253,7 +258,10 @@ def _on_demand(gaps: Array, ratio: Array, poisson: Array) -> Array:
     from homog.joint_solid import cached_correction
 
     n = len(gaps)
-    parts = np.stack([cached_correction(key[:n], key[n:]) for key in keys.T], axis=-1)[..., where.reshape(-1)]
+    parts = np.full((2, 3 * n - 3, 3 * n - 3, joint.shape[1]), np.nan)
+    if len(keys.T):
+        found = np.stack([cached_correction(key[:n], key[n:]) for key in keys.T], axis=-1)
+        parts[..., sound] = found[..., where.reshape(-1)]
     return np.asarray(parts[0] + poisson * parts[1])
 
 
@@ -262,11 +270,13 @@ def _on_demand(gaps: Array, ratio: Array, poisson: Array) -> Array:
 
 def applies(cell: UnitCell) -> bool:
     """Say whether a cell has condensed joints: planar, all straight walls that meet at their points, no end springs."""
-    if cell.kind != "planar" or len(cell.blocks) != 1 or cell.blocks[0].kind != "wall":
+    walls = [block for block in cell.blocks if len(block)]
+    if cell.kind != "planar" or not walls or any(block.kind != "wall" for block in walls):
         return False
-    wall = cell.blocks[0]
-    joined = np.bincount(wall.nodes.ravel(), minlength=cell.n)[wall.nodes].max(axis=1, initial=0) > 1
-    return set(wall.props) <= {"thickness", "modulus", "poisson"} and bool(joined.all())
+    nodes = np.concatenate([block.nodes for block in walls])
+    joined = np.bincount(nodes.ravel(), minlength=cell.n)[nodes].max(axis=1) > 1
+    others = (np.any(value) for block in walls for name, value in block.props.items() if name not in PLAIN_WALL)
+    return not any(others) and bool(joined.all())
 
 
 def with_joints(cell: UnitCell) -> tuple[UnitCell, Mask, Array]:
@@ -284,22 +294,26 @@ def with_joints(cell: UnitCell) -> tuple[UnitCell, Mask, Array]:
     plain : ndarray of shape (b,); least plain wall between two joints, in thicknesses of the wall; negative where the
         inner corners of two joints overlap: no such pair of joints exists
     """
-    wall, (members,) = cell.blocks[0], cell.shape
-    m = len(wall)
-    t, E, nu = (np.broadcast_to(wall.props[name], (members, m)).T for name in ("thickness", "modulus", "poisson"))
-    vectors = element_vectors(cell.points, cell.lattice, wall.nodes, wall.shifts)
-    home = cell.points[..., wall.nodes[:, 0], :] + np.einsum(
-        "mp,...pd->...md", wall.shifts[:, 0].astype(float), cell.lattice
+    blocks, (members,) = [block for block in cell.blocks if len(block)], cell.shape
+    ends_of, shifts_of = (np.concatenate([getattr(b, name) for b in blocks]) for name in ("nodes", "shifts"))
+    m = len(ends_of)
+    t, E, nu = (
+        np.concatenate([np.broadcast_to(b.props[name], (members, len(b))) for b in blocks], axis=1).T
+        for name in PLAIN_WALL
+    )
+    vectors = element_vectors(cell.points, cell.lattice, ends_of, shifts_of)
+    home = cell.points[..., ends_of[:, 0], :] + np.einsum(
+        "mp,...pd->...md", shifts_of[:, 0].astype(float), cell.lattice
     )
     x, y = np.moveaxis(np.broadcast_to(vectors, (members, m, 2)), -1, 0).swapaxes(1, 2)
     lengths, directions = np.hypot(x, y), np.arctan2(y, x)
     plain = lengths.copy()
     outside = np.zeros(members, bool)
-    blocks: dict[int, tuple[list[Any], list[Any], list[NDArray[Any]]]] = {}
+    joints: dict[int, tuple[list[Any], list[Any], list[NDArray[Any]]]] = {}
     sound = int(
         np.argmax(np.isfinite(directions).all(axis=0) & (cell.status == Status.OK))
     )  # it gives the order of walls
-    for arms in arms_of(cell.n, wall.nodes):
+    for arms in arms_of(cell.n, ends_of):
         if len(arms) < 2:  # a free end: half a wall that carries nothing
             continue
         walls, ends = (np.array(part) for part in zip(*arms, strict=True))
@@ -317,8 +331,8 @@ def with_joints(cell: UnitCell) -> tuple[UnitCell, Mask, Array]:
         tips = half * np.exp(1j * angles)
         R = _turns(angles - np.angle(tips[1] - tips[0]))
         weight = np.linalg.inv(R @ np.moveaxis(F, -1, 0) @ np.swapaxes(R, -1, -2))
-        shifts = -wall.shifts[walls, ends]  # of the wall's middle, seen from this end
-        nodes, images, weights = blocks.setdefault(len(walls), ([], [], []))
+        shifts = -shifts_of[walls, ends]  # of the wall's middle, seen from this end
+        nodes, images, weights = joints.setdefault(len(walls), ([], [], []))
         nodes.append(walls)
         images.append(shifts)
         weights.append(weight)
@@ -327,7 +341,7 @@ def with_joints(cell: UnitCell) -> tuple[UnitCell, Mask, Array]:
         points=home + vectors / 2.0,
         blocks=tuple(
             Block("joint", np.array(nodes), np.array(images), {"weight": np.stack(weights, axis=1)})
-            for nodes, images, weights in blocks.values()
+            for nodes, images, weights in joints.values()
         ),
     )
     return joined, outside, np.asarray((plain / t).min(axis=0))
