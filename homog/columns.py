@@ -68,7 +68,7 @@ REASONS: Mapping[str, tuple[str, str]] = {
                       "they are 24 to 36 % and 53 to 68 %; use model 'solid'"),
     "joint-outside": ("caution", "a joint's angle or thickness ratio lies outside its table: taken as a point"),
     "joints-near": ("caution", "less than 0.4 of a thickness of plain wall is left between two joints: moduli were up "
-                    "to 8 % off"),
+                    "to 5 % off"),
     "joints-overlap": ("reject", "no plain wall is left between two joints: the joint model does not hold; use model "
                        "'solid'"),
     "hinge-model": ("caution", "the ligaments are pure hinges: their stretch and the give of the units' corners "

@@ -529,7 +529,7 @@ def main() -> None:
         parser.error(f"{path} is not there; run without --again first")
     found: list[dict[str, Any]] = []
     if options.again:
-        cells = read(path).drop_duplicates(["sample", "shape", "parameters", "slenderness", "poisson", "deep"])
+        cells = read(path).drop_duplicates(["sample", "group", "shape", "parameters", "poisson", "deep"])
         rows_of = [{str(name): value for name, value in row.items()} for row in cells.to_dict("records")]
         for row in track(rows_of, "models", console=Console(file=sys.stderr)):
             found += compared(row)

@@ -336,6 +336,18 @@ def test_the_readme_shows_the_measured_table(script, rows):
     assert script.markdown(rows) in (ROOT / "README.md").read_text(encoding="utf-8")
 
 
+def test_the_readme_says_where_the_joint_model_misses(script, rows):
+    joined = rows[(rows.used == "joint") & ~rows.overlap]
+    off = joined[[f"{k}_error_percent" for k in script.MODULI]].abs().max(axis=1)
+    far = off[~joined.near]
+    steep = far[far > 1.0]
+    shapes = [script.parameters(text) for text in joined.loc[steep.index, "parameters"]]
+    assert all(p["angle"] == 60.0 and p["vertical_thickness"] == 2.0 * p["thickness"] for p in shapes) and shapes
+    readme = " ".join((ROOT / "README.md").read_text(encoding="utf-8").split())
+    assert f"near each other (up to {off[joined.near].max():.0f} %)" in readme
+    assert f"doubled vertical walls (up to {steep.max():.0f} % in E1)" in readme
+
+
 def test_the_figure_shows_every_group_and_model(script, rows):
     page = script.figure(rows)
     assert {ax.get_title(loc="left") for ax in page.axes} == set(rows["group"])
