@@ -99,6 +99,11 @@ class Brief:
     text: str = field(repr=False, default="")
 
     @property
+    def known(self) -> dict[str, Any]:
+        """What columns may know of the brief (`columns.quantities`)."""
+        return {"part": self.part, "limits": {limit.column: (limit.low, limit.high) for limit in self.limits}}
+
+    @property
     def count(self) -> int:
         """How many candidates the brief describes."""
         return sum(c.count for c in self.candidates)

@@ -21,7 +21,7 @@ from homog.assembly import dense, freedoms, sparse, strain_count
 from homog.cell import STRAINS, Kind, Status, UnitCell
 from homog.elements import check_model
 from homog.errors import GeometryError, InputError, MechanismError
-from homog.joints import applies, with_joints
+from homog.joints import NEAR, applies, with_joints
 from homog.solid import homogenize_solid
 from homog.tensors import voigt_factors
 
@@ -53,6 +53,7 @@ class Flag(IntFlag):
     JOINT_OUTSIDE = 1  # a joint that no table covers was taken as a point
     JOINTS_NEAR = 2  # too little plain wall between two joints
     SOLID_COARSE = 4  # the solid's two meshes differ by more than half a percent
+    JOINTS_OVERLAP = 8  # no plain wall at all between two joints: their corners overlap
 
 
 @dataclass(frozen=True, eq=False)
@@ -242,8 +243,11 @@ def _solid(cell: UnitCell, fillet: float) -> Effective:
 
 
 def _joined(cell: UnitCell) -> tuple[UnitCell, NDArray[np.int8]]:
-    joined, outside, near = with_joints(cell)
-    return joined, (outside * Flag.JOINT_OUTSIDE + near * Flag.JOINTS_NEAR).astype(np.int8)
+    joined, outside, plain = with_joints(cell)
+    overlap = plain < 0.0
+    near = (plain < NEAR) & ~overlap
+    flags = outside * Flag.JOINT_OUTSIDE + near * Flag.JOINTS_NEAR + overlap * Flag.JOINTS_OVERLAP
+    return joined, flags.astype(np.int8)
 
 
 def _flattened(cell: UnitCell) -> UnitCell:

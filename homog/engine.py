@@ -123,7 +123,7 @@ def rows(brief: Brief, part: Part) -> dict[str, Any]:
     """Return all columns of a part's candidates, with `meets`, `misses` and the miss of each limit, by name."""
     given = _batched(part.source, part.source.take(part.start, part.stop))
     cell = part.source.family.build(given, brief.material)
-    out: dict[str, Any] = quantities(homogenize(cell, model=brief.model), part=brief.part)
+    out: dict[str, Any] = quantities(homogenize(cell, model=brief.model), **brief.known)
     count = part.stop - part.start
     missed = {}
     for limit in brief.limits:

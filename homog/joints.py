@@ -38,7 +38,8 @@ TABLES = "joint_tables.npz"
 MATCH_TOLERANCE = 1e-9
 """Gaps (rad) and thickness ratios of a joint that a shape reproduces within this are that shape's."""
 NEAR = 0.4
-"""Plain wall between the inner corners of neighbouring joints, in thicknesses, below which they feel each other."""
+"""Plain wall between the inner corners of neighbouring joints, in thicknesses, below which they feel each other. Below
+none the joints overlap and the model fails: moduli come out wrong by any factor, even negative."""
 MOST_ON_DEMAND = 200
 PLAIN_WALL = ("thickness", "modulus", "poisson")
 
@@ -278,7 +279,7 @@ def applies(cell: UnitCell) -> bool:
     return not any(others) and bool(joined.all())
 
 
-def with_joints(cell: UnitCell) -> tuple[UnitCell, Mask, Mask]:
+def with_joints(cell: UnitCell) -> tuple[UnitCell, Mask, Array]:
     """Return a cell of straight walls as joints with half walls: its points are the middles of the walls.
 
     Parameters
@@ -290,7 +291,8 @@ def with_joints(cell: UnitCell) -> tuple[UnitCell, Mask, Mask]:
     -------
     joined : UnitCell
     outside : ndarray of bool, shape (b,); members with a joint that no table covers
-    near : ndarray of bool, shape (b,); members with less than NEAR t of plain wall between two joints
+    plain : ndarray of shape (b,); least plain wall between two joints, in thicknesses of the wall; negative where the
+        inner corners of two joints overlap: no such pair of joints exists
     """
     blocks, (members,) = [block for block in cell.blocks if len(block)], cell.shape
     ends_of, shifts_of = (np.concatenate([getattr(b, name) for b in blocks]) for name in ("nodes", "shifts"))
@@ -343,7 +345,7 @@ def with_joints(cell: UnitCell) -> tuple[UnitCell, Mask, Mask]:
             for nodes, images, weights in joints.values()
         ),
     )
-    return joined, outside, (plain < NEAR * t).any(axis=0)
+    return joined, outside, np.asarray((plain / t).min(axis=0))
 
 
 def _swallow(plain: Array, walls: NDArray[np.int64], gaps: Array, thickness: Array) -> None:

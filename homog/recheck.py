@@ -9,7 +9,7 @@ from __future__ import annotations
 from collections.abc import Callable, Mapping, Sequence
 from concurrent.futures import ProcessPoolExecutor, as_completed
 from concurrent.futures.process import BrokenProcessPool
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from multiprocessing import get_context
 from typing import TYPE_CHECKING, Any
 
@@ -39,12 +39,12 @@ Look = Callable[["Task"], "dict[str, Any] | str"]
 
 @dataclass(frozen=True)
 class Task:
-    """One candidate: its family, its parameters (numbers and words by name), its parent, the size of the part."""
+    """One candidate: its family, parameters (numbers and words by name), parent, and what columns may know."""
 
     family: str
     given: Mapping[str, Any]
     material: Material
-    part: tuple[float, ...] = ()
+    known: Mapping[str, Any] = field(default_factory=dict)
 
 
 def has_section(task: Task) -> bool:
@@ -78,7 +78,7 @@ def second_look(
         again[f"screened_{name}"] = again.get(name, np.nan)
     again["note"] = ""
     tasks = {
-        place: Task(str(row["family"]), given(row), brief.material, brief.part)
+        place: Task(str(row["family"]), given(row), brief.material, brief.known)
         for place, row in enumerate(records(best.head(MOST)))
     }
     tasks = {place: task for place, task in tasks.items() if has_section(task)}
@@ -117,7 +117,7 @@ def look(task: Task) -> dict[str, Any] | str:
             effective = homogenize(family(task.family).build(task.given, task.material), model="solid")
     except HomogError as fault:
         return " ".join(str(fault).split())
-    return {name: np.ravel(values)[0] for name, values in evaluate(effective, part=task.part).items()}
+    return {name: np.ravel(values)[0] for name, values in evaluate(effective, **task.known).items()}
 
 
 def looks(

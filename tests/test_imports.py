@@ -18,7 +18,7 @@ ORDER = [
     *("stars", "joint_solid", "joints", "solid"),
     *("families", "assembly", "reference"),
     "effective",
-    *("directional", "bounds"),
+    *("directional", "bounds", "bands"),
     "columns",
     *("candidates", "brief"),
     *("store", "ranking", "engine", "screening", "recheck"),
@@ -30,7 +30,7 @@ ORDER = [
 ]
 
 # Tighter than the order: arrays in, arrays out.
-ONLY = {name: {"errors", "tensors"} for name in ("elements", "directional", "bounds")}
+ONLY = {name: {"errors", "tensors"} for name in ("elements", "directional", "bounds", "bands")}
 
 # Tighter than the order: a family describes points and blocks, the mechanics never knows which family it is given.
 NEVER = {
