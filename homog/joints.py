@@ -280,6 +280,7 @@ def with_joints(cell: UnitCell) -> tuple[UnitCell, Mask, Mask]:
         tips = half * np.exp(1j * angles)
         R = _turns(angles - np.angle(tips[1] - tips[0]))
         weight = np.linalg.inv(R @ np.moveaxis(F, -1, 0) @ np.swapaxes(R, -1, -2))
+        weight = (weight + np.swapaxes(weight, -1, -2)) / 2.0
         shifts = -wall.shifts[walls, ends]  # of the wall's middle, seen from this end
         nodes, images, weights = blocks.setdefault(len(walls), ([], [], []))
         nodes.append(walls)
