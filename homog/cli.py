@@ -69,6 +69,9 @@ Model = Annotated[
 Fillet = Annotated[
     float, typer.Option("--fillet", metavar="MM", help="Radius of inner corners, mm; model solid only, else sharp.")
 ]
+Quantity = Annotated[
+    str, typer.Option("--quantity", metavar="Q", help="stiffness (E, nu, G), or yield (first yield of a wall's fibre).")
+]
 Overwrite = Annotated[bool, typer.Option("--overwrite", help="Replace a file that is there already.")]
 FIGURES = (".svg", ".png", ".pdf")
 STOPPED = "homog: stopped; nothing was written"
@@ -96,13 +99,13 @@ def _parent(
     poisson: str | None,
     density: str | None,
     deep: bool,
-    yield_stress: str | None = None,
+    strength: str | None = None,
 ) -> Material:
     from homog.materials import UNIT, material
 
     values: dict[str, Any] = {}
     given = (("modulus_MPa", "--modulus", modulus), ("poisson", "--poisson", poisson),
-             ("density_kg_m3", "--solid-density", density), ("yield_MPa", "--yield", yield_stress))  # fmt: skip
+             ("density_kg_m3", "--solid-density", density), ("yield_MPa", "--yield", strength))  # fmt: skip
     for key, option, text in given:
         if text is not None:
             values[key] = _number(text, f"Option {option}", "give one number, such as 0.3 or 1600")
@@ -333,14 +336,7 @@ def polar(
     yield_stress: Yield = None,
     deep: Deep = False,
     model: Model = "joint",
-    quantity: Annotated[
-        str,
-        typer.Option(
-            "--quantity",
-            metavar="Q",
-            help="stiffness (E, nu and G), or yield (stress and strain at which a wall's fibre first yields).",
-        ),
-    ] = "stiffness",
+    quantity: Quantity = "stiffness",
     overwrite: Overwrite = False,
 ) -> int:
     """Draw E, nu and G of one cell, or its first yield, against direction, with the cell beside them.

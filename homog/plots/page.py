@@ -220,11 +220,11 @@ def _yield_panels(results: Results) -> list[Panel]:
         stress, across = (parent.yield_MPa / found.peak(load)[0] for load in (pull, shear))
         E = directional.young(results.stiffness[0], **({"angle": TURN} if planar else {"direction": n}))
         curves.append((stress, across, stress / E))
-    words = f"{FIRST_YIELD} (the parent yields at {number(parent.yield_MPa, 'MPa')}); a push as a pull, no buckling"
-    notes: tuple[str, ...] = (words,)
+    notes: tuple[str, ...] = (FIRST_YIELD, f"the parent yields at {number(parent.yield_MPa, 'MPa')}; a push does what a "
+                              "pull does, buckling is left out")  # fmt: skip
     if not planar:
         same = all(np.abs(a - b).max() <= SAME * a.max() for a, b in zip(*curves, strict=True))
-        notes = (FIRST if same else f"{FIRST}; {SECOND}", words)
+        notes = (FIRST if same else f"{FIRST}; {SECOND}", *notes)
         curves = curves[:1] if same else curves
 
     def panel(k: int, name: str, title: str, unit: str, on_axis: dict[str, float], notes: tuple[str, ...]) -> Panel:
