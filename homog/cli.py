@@ -63,7 +63,7 @@ Model = Annotated[
     typer.Option(
         "--model",
         metavar="M",
-        help="joint (condensed joints), timoshenko or euler (walls to a point), solid (the true section, planar walls).",
+        help="joint (condensed joints), timoshenko or euler (walls to a point), solid (true section; planar walls).",
     ),
 ]
 Fillet = Annotated[

@@ -154,7 +154,7 @@ def homogenize(cell: UnitCell, *, model: str = DEFAULT_MODEL, fillet: float = 0.
     condensed = model == "joint" and applies(cell)
     if model == "joint" and not condensed:
         model = "timoshenko"
-    count = 3 * len(cell.blocks[0]) - 2 if condensed else freedoms(flat).count
+    count = 3 * sum(len(block) for block in cell.blocks) - 2 if condensed else freedoms(flat).count
     flags = np.zeros(members, np.int8)
     C = np.empty((members, v, v))
     upper = np.empty((members, v))

@@ -149,7 +149,7 @@ def member_forces(effective: Effective) -> tuple[Members, ...]:
         for block in cell.blocks
     ]
     good = np.flatnonzero(effective.status.reshape(b) == Status.OK)
-    size = 3 * len(cell.blocks[0]) - 2 if condensed else freedoms(flat).count
+    size = 3 * sum(len(block) for block in cell.blocks) - 2 if condensed else freedoms(flat).count
     step = max(8, CHUNK_ENTRIES // (size + v) ** 2) if size <= DENSE_LIMIT else 1
     for part in (good[i : i + step] for i in range(0, len(good), step)):
         piece = flat.at(part)
@@ -160,11 +160,11 @@ def member_forces(effective: Effective) -> tuple[Members, ...]:
             _end_loads(block, motion, compliance, 0 if condensed else 1) for block in strained_blocks(given, model)
         ]
         if condensed:
-            _wall_middles(piece, given, loads, found[0], part)
-            continue
+            loads = _wall_middles(piece, given, loads)
         for block, (force, moment), members in zip(cell.blocks, loads, found, strict=True):
+            x = _ends(piece, block)
             members.force[part], members.moment[part] = force[:, :, 0], moment[:, :, 0]
-            members.at[part] = _ends(piece, block)[..., 1, :]
+            members.at[part] = x.mean(axis=2) if condensed else x[:, :, 1]
     return tuple(found)
 
 
@@ -224,24 +224,29 @@ def _ends(cell: UnitCell, block: Block) -> Array:
     return np.asarray(cell.points[:, block.nodes] + moved)
 
 
-def _wall_middles(
-    cell: UnitCell, joined: UnitCell, loads: list[tuple[Array, Array]], members: Members, part: Index
-) -> None:
-    """Fill in what walls carry at their middles, from the tips of the joints at their starts.
+def _walls(cell: UnitCell) -> tuple[Index, Index]:
+    """Return nodes (m, 2) and shifts (m, 2, p) of the walls of all blocks, in the order of `joints.with_joints`."""
+    nodes, shifts = zip(*((block.nodes, block.shifts) for block in cell.blocks), strict=True)
+    return np.concatenate(nodes), np.concatenate(shifts)
 
-    `joined` holds the joints of one number of walls in a block, in the order of their points. A wall from a free end
-    has no joint there, and carries nothing.
+
+def _wall_middles(cell: UnitCell, joined: UnitCell, loads: list[tuple[Array, Array]]) -> list[tuple[Array, Array]]:
+    """Return force (b, m, 1, d, v) and moment (b, m, 1, r, v) at the middles of each block's walls, from their starts.
+
+    `joined` holds the joints of one number of walls in a block, in the order of their points, and `loads` what acts on
+    their tips. A wall from a free end has no joint there, and carries nothing.
     """
-    wall = cell.blocks[0]
-    members.force[part], members.moment[part] = 0.0, 0.0
-    members.at[part] = _ends(cell, wall).mean(axis=2)
-    arms = [len(found) for found in arms_of(cell.n, wall.nodes)]
-    for block, (force, moment) in zip(joined.blocks, loads, strict=True):
-        here = np.flatnonzero(np.array(arms) == block.nodes.shape[1])
-        starts = (wall.nodes[block.nodes, 0] == here[:, None]) & (wall.shifts[block.nodes, 0] == -block.shifts).all(-1)
-        for joint, tip in zip(*np.nonzero(starts), strict=True):
-            members.force[part, block.nodes[joint, tip]] = force[:, joint, tip]
-            members.moment[part, block.nodes[joint, tip]] = moment[:, joint, tip]
+    nodes, shifts = _walls(cell)
+    arms = np.array([len(found) for found in arms_of(cell.n, nodes)])
+    whole = [np.zeros((*cell.shape, len(nodes), 1, *load.shape[-2:])) for load in loads[0]]
+    for block, tips in zip(joined.blocks, loads, strict=True):
+        here = np.flatnonzero(arms == block.nodes.shape[1])
+        starts = (nodes[block.nodes, 0] == here[:, None]) & (shifts[block.nodes, 0] == -block.shifts).all(axis=-1)
+        joint, tip = np.nonzero(starts)
+        for into, load in zip(whole, tips, strict=True):
+            into[:, block.nodes[joint, tip], 0] = load[:, joint, tip]
+    cuts = np.cumsum([len(block) for block in cell.blocks])[:-1]
+    return list(zip(*(np.split(load, cuts, axis=1) for load in whole), strict=True))
 
 
 # sections --------------------------------------------------------------------------------------------------------
@@ -265,27 +270,35 @@ def sections(effective: Effective) -> Sections:
     loads = member_forces(effective)
     cell = effective.cell
     flat = _flat(effective)
-    condensed = effective.model in ("joint", "solid") and applies(cell)
+    swallowed: list[Array | None] = [None] * len(cell.blocks)
+    if effective.model in ("joint", "solid") and applies(cell):
+        sizes = [len(block) for block in cell.blocks]
+        t = [
+            np.broadcast_to(b.props["thickness"], (len(flat.points), m))
+            for b, m in zip(flat.blocks, sizes, strict=True)
+        ]
+        cuts = wall_cuts(flat.points, flat.lattice, *_walls(flat), np.concatenate(t, axis=1))
+        swallowed = [*np.split(cuts, np.cumsum(sizes)[:-1], axis=1)]
     parts = []
-    for k, (block, members) in enumerate(zip(flat.blocks, loads, strict=True)):
-        where, along = _places(flat, block, condensed=condensed)
+    for k, (block, members, lost) in enumerate(zip(flat.blocks, loads, swallowed, strict=True)):
+        where, along = _places(flat, block, lost)
         parts.append(_block_sections(block, members, where, along, k))
     return Sections(*(np.concatenate(values, axis=min(1, values[0].ndim - 1)) for values in zip(*parts, strict=True)))
 
 
-def _places(cell: UnitCell, block: Block, *, condensed: bool) -> tuple[Array, Array]:
-    """Return where the sections of each element are (b, m, q, d), and the direction of its line there."""
+def _places(cell: UnitCell, block: Block, swallowed: Array | None) -> tuple[Array, Array]:
+    """Return where the sections of each element are (b, m, q, d), and the direction of its line there.
+
+    Between condensed joints `swallowed` (b, m, 2) is what the joints at both ends take of each wall.
+    """
     x = _ends(cell, block)
     shape = x.shape[:2]
     e = x[:, :, 1] - x[:, :, 0]
     length = np.linalg.norm(e, axis=-1)
     e = e / length[..., None]
-    if condensed:
-        t = np.broadcast_to(block.props["thickness"], shape)
-        cuts = wall_cuts(cell.points, cell.lattice, block.nodes, block.shifts, t)
-        middle = x.mean(axis=2)[:, :, None]
-        half = np.maximum(length[..., None] / 2.0 - cuts, 0.0) * np.array([-1.0, 1.0])
-        return middle + half[..., None] * e[:, :, None], e[:, :, None]
+    if swallowed is not None:
+        half = np.maximum(length[..., None] / 2.0 - swallowed, 0.0) * np.array([-1.0, 1.0])
+        return x.mean(axis=2)[:, :, None] + half[..., None] * e[:, :, None], e[:, :, None]
     if block.kind == "strut":
         return x, e[:, :, None]
 

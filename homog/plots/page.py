@@ -220,8 +220,8 @@ def _yield_panels(results: Results) -> list[Panel]:
         stress, across = (parent.yield_MPa / found.peak(load)[0] for load in (pull, shear))
         E = directional.young(results.stiffness[0], **({"angle": TURN} if planar else {"direction": n}))
         curves.append((stress, across, stress / E))
-    notes: tuple[str, ...] = (FIRST_YIELD, f"the parent yields at {number(parent.yield_MPa, 'MPa')}; a push does what a "
-                              "pull does, buckling is left out")  # fmt: skip
+    parent_words = f"the parent yields at {number(parent.yield_MPa, 'MPa')}; a push does what a pull does, no buckling"
+    notes: tuple[str, ...] = (FIRST_YIELD, parent_words)
     if not planar:
         same = all(np.abs(a - b).max() <= SAME * a.max() for a, b in zip(*curves, strict=True))
         notes = (FIRST if same else f"{FIRST}; {SECOND}", *notes)
