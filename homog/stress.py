@@ -283,6 +283,8 @@ def sections(effective: Effective) -> Sections:
     for k, (block, members, lost) in enumerate(zip(flat.blocks, loads, swallowed, strict=True)):
         where, along = _places(flat, block, lost)
         parts.append(_block_sections(block, members, where, along, k))
+    if len(parts) == 1:
+        return Sections(*parts[0])
     return Sections(*(np.concatenate(values, axis=min(1, values[0].ndim - 1)) for values in zip(*parts, strict=True)))
 
 
@@ -332,7 +334,7 @@ def _block_sections(block: Block, members: Members, where: Array, along: Array, 
     normal = np.einsum("bmqd,bmdv->bmqv", np.broadcast_to(along, where.shape), members.force)
     if d == 2:
         moment = lever[..., :1, :] * force[..., 1:, :] - lever[..., 1:, :] * force[..., :1, :]
-        bending, twist = members.moment[:, :, None] + moment, np.zeros_like(normal)
+        bending, twist = members.moment[:, :, None] + moment, np.broadcast_to(0.0, normal.shape)
     else:
         moment = members.moment[:, :, None] + np.cross(np.broadcast_to(lever, (b, m, q, d, v)), force, axis=-2)
         twist = np.einsum("bmqd,bmqdv->bmqv", np.broadcast_to(along, where.shape), moment)

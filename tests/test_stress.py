@@ -276,6 +276,25 @@ def test_a_supercell_carries_the_same_dense_or_sparse(name, model):
     np.testing.assert_allclose(peak(large, model), once, rtol=max(close, 1e-7))
 
 
+@pytest.mark.parametrize("model", MODELS)
+@pytest.mark.parametrize("name", ["reentrant-honeycomb", "kagome-grid", "anti-tetrachiral-ring", "octet"])
+def test_blocks_may_be_cut_in_pieces(name, model):
+    cell = subject(name, model).cell
+    (block,) = cell.blocks
+    m = len(block)
+    order = np.r_[1:m, 0]  # the first element last, in a block of its own
+    parts = []
+    for pick in (order[:-1], order[-1:]):
+        props = {key: np.broadcast_to(v, (*v.shape[:-1], m))[..., pick] for key, v in block.props.items()}
+        parts.append(Block(block.kind, block.nodes[pick], block.shifts[pick], props))
+    found = homogenize(dataclasses.replace(cell, blocks=tuple(parts)), model=model)
+    np.testing.assert_allclose(sections(found).peak(unit_stresses(cell.d)), peak(cell, model), rtol=TABLE)
+    whole, (first, second) = member_forces(subject(name, model))[0], member_forces(found)
+    force = np.concatenate([first.force, second.force], axis=1)[:, np.argsort(order)]
+    np.testing.assert_allclose(force, whole.force, atol=TABLE * np.abs(whole.force).max())
+    assert set(sections(found).block) == {0, 1} and sections(found).member.max() == m - 2
+
+
 def test_a_batch_is_its_members_one_by_one_and_bad_ones_are_nan():
     cell = build("reentrant-honeycomb", angle=[-30.0, -80.0, -20.0], thickness=[[0.4], [1.2]])  # -80: the tips collide
     found = homogenize(cell, model="timoshenko")
