@@ -22,7 +22,7 @@ A beam knows no notch: inner corners see more. `corner_stress` takes that from t
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import NamedTuple
+from typing import Any, NamedTuple
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
@@ -283,9 +283,10 @@ def sections(effective: Effective) -> Sections:
     for k, (block, members, lost) in enumerate(zip(flat.blocks, loads, swallowed, strict=True)):
         where, along = _places(flat, block, lost)
         parts.append(_block_sections(block, members, where, along, k))
-    if len(parts) == 1:
-        return Sections(*parts[0])
-    return Sections(*(np.concatenate(values, axis=min(1, values[0].ndim - 1)) for values in zip(*parts, strict=True)))
+    joined: Any = parts[0]  # one block needs no copy
+    if len(parts) > 1:
+        joined = (np.concatenate(values, axis=min(1, values[0].ndim - 1)) for values in zip(*parts, strict=True))
+    return Sections(*joined)
 
 
 def _places(cell: UnitCell, block: Block, swallowed: Array | None) -> tuple[Array, Array]:

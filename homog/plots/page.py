@@ -245,7 +245,7 @@ def _dyads(a: Array, b: Array) -> Array:
 
 def _least(curve: Array) -> int:
     """The first place over TURN at which a curve is lowest."""
-    return int(np.argmax(curve <= curve.min() + SAME**2 * np.abs(curve).max()))
+    return int(np.argmax(curve <= curve.min() + SAME**2 * abs(curve.min())))
 
 
 def _space_panels(results: Results) -> list[Panel]:
