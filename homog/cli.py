@@ -56,6 +56,7 @@ MaterialName = Annotated[
 Modulus = Annotated[str | None, typer.Option("--modulus", metavar="MPA", help="Parent's Young's modulus, MPa.")]
 Poisson = Annotated[str | None, typer.Option("--poisson", metavar="NU", help="Parent's Poisson's ratio.")]
 SolidDensity = Annotated[str | None, typer.Option("--solid-density", metavar="KG_M3", help="Parent's density, kg/m3.")]
+Yield = Annotated[str | None, typer.Option("--yield", metavar="MPA", help="Parent's yield or strength, MPa.")]
 Deep = Annotated[
     bool, typer.Option("--deep", help="Planar cells deep along axis 3: plane strain instead of plane stress.")
 ]
@@ -69,6 +70,9 @@ Model = Annotated[
 ]
 Fillet = Annotated[
     float, typer.Option("--fillet", metavar="MM", help="Radius of inner corners, mm; model solid only, else sharp.")
+]
+Quantity = Annotated[
+    str, typer.Option("--quantity", metavar="Q", help="stiffness (E, nu, G), or yield (first yield of a wall's fibre).")
 ]
 Overwrite = Annotated[bool, typer.Option("--overwrite", help="Replace a file that is there already.")]
 FIGURES = (".svg", ".png", ".pdf")
@@ -97,12 +101,19 @@ def _table(*headers: str, numeric: Sequence[str] = ()) -> Table:
     return table
 
 
-def _parent(name: str | None, modulus: str | None, poisson: str | None, density: str | None, deep: bool) -> Material:
+def _parent(
+    name: str | None,
+    modulus: str | None,
+    poisson: str | None,
+    density: str | None,
+    deep: bool,
+    strength: str | None = None,
+) -> Material:
     from homog.materials import UNIT, material
 
     values: dict[str, Any] = {}
     given = (("modulus_MPa", "--modulus", modulus), ("poisson", "--poisson", poisson),
-             ("density_kg_m3", "--solid-density", density))  # fmt: skip
+             ("density_kg_m3", "--solid-density", density), ("yield_MPa", "--yield", strength))  # fmt: skip
     for key, option, text in given:
         if text is not None:
             values[key] = _number(text, f"Option {option}", "give one number, such as 0.3 or 1600")
@@ -267,6 +278,7 @@ def evaluate(
     modulus: Modulus = None,
     poisson: Poisson = None,
     solid_density: SolidDensity = None,
+    yield_stress: Yield = None,
     deep: Deep = False,
     model: Model = "joint",
     fillet: Fillet = 0.0,
@@ -281,7 +293,7 @@ def evaluate(
     from homog.columns import COLUMNS, reason_text
     from homog.report import WHAT_IT_IS, evaluation, number
 
-    parent = _parent(material, modulus, poisson, solid_density, deep)
+    parent = _parent(material, modulus, poisson, solid_density, deep, yield_stress)
     effective = _one(id, parameters, parent, model, fillet)
     card = evaluation(effective)
     given, quantities, stiffness = card["parameters"], card["columns"], np.array(card["stiffness"], float)
@@ -331,11 +343,13 @@ def polar(
     modulus: Modulus = None,
     poisson: Poisson = None,
     solid_density: SolidDensity = None,
+    yield_stress: Yield = None,
     deep: Deep = False,
     model: Model = "joint",
+    quantity: Quantity = "stiffness",
     overwrite: Overwrite = False,
 ) -> int:
-    """Draw E, nu and G of one cell against direction, with the cell beside them.
+    """Draw E, nu and G of one cell, or its first yield, against direction, with the cell beside them.
 
     Example: homog polar reentrant-honeycomb angle=-30 thickness=1 --material PLA --out bow-tie.png
     """
@@ -345,11 +359,11 @@ def polar(
     if out.suffix not in FIGURES:
         raise InputError(f"Figure '{out}' has the suffix '{out.suffix}'; allowed are {', '.join(FIGURES)}")
     check_free(out, overwrite=overwrite)
-    parent = _parent(material, modulus, poisson, solid_density, deep)
+    parent = _parent(material, modulus, poisson, solid_density, deep, yield_stress)
     effective = _one(id, parameters, parent, model)
     from homog import plots
 
-    figure = plots.polar_figure(effective, title=family(id).title)
+    figure = plots.polar_figure(effective, quantity=quantity, title=family(id).title)
     with whole_file(out, overwrite=overwrite) as temporary:
         plots.save(figure, temporary)
     print(f"wrote {out}")
@@ -370,6 +384,7 @@ def sweep(
     modulus: Modulus = None,
     poisson: Poisson = None,
     solid_density: SolidDensity = None,
+    yield_stress: Yield = None,
     deep: Deep = False,
     model: Model = "joint",
     overwrite: Overwrite = False,
@@ -389,7 +404,7 @@ def sweep(
     from homog.screening import sweep_tables
 
     check_table(out, overwrite=overwrite)
-    found, parent = family(id), _parent(material, modulus, poisson, solid_density, deep)
+    found, parent = family(id), _parent(material, modulus, poisson, solid_density, deep, yield_stress)
     given = _assigned(found, parameters)
     words = {name: values for name, values in given.items() if found.parameter(name).choices}
     spans: dict[str, Any] = {name: values for name, values in given.items() if name not in words}

@@ -24,6 +24,7 @@ from homog.effective import Effective, Flag, homogenize, soft_mode
 from homog.errors import unknown
 from homog.families import FAMILIES
 from homog.materials import Material
+from homog.stress import BEAMS, sections, unit_stresses
 from homog.tensors import compliance_to_voigt, stiffness_to_voigt
 
 if TYPE_CHECKING:
@@ -36,6 +37,7 @@ Limits = Mapping[str, tuple[float, float]]
 PLANAR: tuple[Kind, ...] = ("planar",)
 SHEET: tuple[Kind, ...] = ("sheet",)
 SPATIAL: tuple[Kind, ...] = ("spatial",)
+WALLED: tuple[Kind, ...] = ("planar", "spatial")
 ALL: tuple[Kind, ...] = ("planar", "sheet", "spatial")
 
 SLENDER_CAUTION, SLENDER_REJECT = 0.05, 0.25
@@ -47,6 +49,8 @@ CELLS_CAUTION = 4.0
 PANEL_POISSON = 0.1
 HEXAGON_POINTS = 32
 
+FIRST_YIELD = "first yield of a beam's extreme fibre"
+CORNERS = "inner corners of the solid see more"
 VOIGT_PAIRS = (("11", 0, 0), ("12", 0, 1), ("16", 0, 2), ("22", 1, 1), ("26", 1, 2), ("66", 2, 2))
 
 REASONS: Mapping[str, tuple[str, str]] = {
@@ -175,6 +179,14 @@ class Results:
         if self.kind == "planar":
             modulus, poisson = self.parent.wall_modulus_MPa, self.parent.wall_poisson
         return bounds.report(self.stiffness, self.density, modulus, poisson, sheet=self.kind == "sheet")
+
+    @cached_property
+    def yields(self) -> Array:
+        """Stress at first yield of a beam's fibre, MPa, (count, v) in Voigt's order; NaN without yield or sections."""
+        beams = bool(self.cell.blocks) and all(block.kind in BEAMS for block in self.cell.blocks)
+        if self.kind == "sheet" or not beams or np.isnan(self.parent.yield_MPa):
+            return np.full((self.count, self.stiffness.shape[-1]), np.nan)
+        return np.asarray(self.parent.yield_MPa / sections(self.effective).peak(unit_stresses(self.cell.d)))
 
     def young(self, i: int) -> Array:
         return np.asarray(1.0 / self.voigt[:, i, i])
@@ -351,6 +363,10 @@ def _bending(i: int, j: int) -> Callable[[Results], Array]:
     return lambda r: np.asarray(-r.compliance[:, 3 + j, 3 + i] / r.compliance[:, 3 + i, 3 + i])
 
 
+def _yield(i: int) -> Callable[[Results], Array]:
+    return lambda r: np.asarray(r.yields[:, i])
+
+
 def _sheet_coupling(r: Results) -> Array:
     size = np.sqrt(np.diagonal(r.stiffness, axis1=-2, axis2=-1))
     return np.asarray((np.abs(r.stiffness[:, :3, 3:]) / (size[:, :3, None] * size[:, None, 3:])).max(axis=(-1, -2)))
@@ -409,6 +425,14 @@ _ALL_COLUMNS = (
     Column("voigt_ratio", "largest stiffness over the Voigt bound, of any strain", ALL, lambda r: r.bounds.voigt_ratio),
     Column("hashin_shtrikman_ratio", "largest of K and G over the Hashin-Shtrikman bound (isotropic cells only)", ALL,
            lambda r: r.bounds.hashin_shtrikman_ratio),
+    Column("yield_1_MPa", f"pull along 1 at {FIRST_YIELD} (|N|/A + |M|/W, twist by von Mises, no shear); {CORNERS}",
+           WALLED, _yield(0)),
+    Column("yield_2_MPa", f"pull along 2 at {FIRST_YIELD}; {CORNERS}", WALLED, _yield(1)),
+    Column("yield_3_MPa", f"pull along 3 at {FIRST_YIELD}; {CORNERS}", SPATIAL, _yield(2)),
+    Column("yield_12_MPa", f"shear in the plane 1-2 at {FIRST_YIELD}; {CORNERS}", WALLED, _yield(-1)),
+    Column("yield_13_MPa", f"shear in the plane 1-3 at {FIRST_YIELD}; {CORNERS}", SPATIAL, _yield(4)),
+    Column("yield_23_MPa", f"shear in the plane 2-3 at {FIRST_YIELD}; {CORNERS}", SPATIAL, _yield(3)),
+    Column("yield_strain_1", "strain along 1 at yield_1_MPa", WALLED, lambda r: r.yields[:, 0] / r.young(0)),
     Column("slenderness", "largest thickness over length in the cell", ALL, lambda r: r.flat(r.cell.slenderness)),
     Column("thinnest_mm", "thinnest wall, strut, ligament or sheet to be made", ALL, lambda r: r.flat(r.cell.thinnest)),
     Column("cell_1_mm", "repeat along axis 1", ALL, lambda r: r.size[:, 0]),

@@ -332,6 +332,7 @@ def with_joints(cell: UnitCell) -> tuple[UnitCell, Mask, Array]:
         tips = half * np.exp(1j * angles)
         R = _turns(angles - np.angle(tips[1] - tips[0]))
         weight = np.linalg.inv(R @ np.moveaxis(F, -1, 0) @ np.swapaxes(R, -1, -2))
+        weight = (weight + np.swapaxes(weight, -1, -2)) / 2.0  # round-off of the stretch counts beside the bending
         shifts = -shifts_of[walls, ends]  # of the wall's middle, seen from this end
         nodes, images, weights = joints.setdefault(len(walls), ([], [], []))
         nodes.append(walls)

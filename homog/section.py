@@ -80,6 +80,14 @@ def element_vectors(points: Array, lattice: Array, nodes: Index, shifts: Index) 
     return np.asarray(images[..., 1, :] - images[..., 0, :])
 
 
+def wall_cuts(points: Array, lattice: Array, nodes: Index, shifts: Index, thickness: Array) -> Array:
+    """Return how much of each straight wall the corners and discs at its ends swallow, ndarray (..., m, 2), mm.
+
+    Arguments as of `wall_section`; of the two sides of a wall the one that loses more.
+    """
+    return np.asarray(_section(points, lattice, nodes, shifts, thickness)[2].max(axis=-1))
+
+
 def wall_section(points: Array, lattice: Array, nodes: Index, shifts: Index, thickness: Array) -> tuple[Array, Array]:
     """Return the area of the union of straight walls and whether their joints run into each other.
 
@@ -94,6 +102,15 @@ def wall_section(points: Array, lattice: Array, nodes: Index, shifts: Index, thi
     area : ndarray of shape (...), mm2 per cell
     merged : ndarray of bool, shape (...); there the area is not exact and the void beside a wall has closed
     """
+    area, lengths, cuts = _section(points, lattice, nodes, shifts, thickness)
+    merged = (cuts.sum(axis=-2) >= lengths[..., None]).any(axis=(-1, -2))
+    return np.asarray(area), np.asarray(merged)
+
+
+def _section(
+    points: Array, lattice: Array, nodes: Index, shifts: Index, thickness: Array
+) -> tuple[Array, Array, Array]:
+    """Return the area (...), the walls' lengths (..., m) and what each end loses on each side (..., m, 2, 2)."""
     vectors = element_vectors(points, lattice, nodes, shifts)
     lengths = np.linalg.norm(vectors, axis=-1)
     half = np.broadcast_to(thickness, lengths.shape) / 2.0
@@ -121,8 +138,7 @@ def wall_section(points: Array, lattice: Array, nodes: Index, shifts: Index, thi
             left = np.where(found, here, 0.0).sum(axis=-1)
             right = np.where(found, np.roll(there, 1, axis=-1), 0.0).sum(axis=-1)
             cuts[..., wall, end, :] = np.stack([left, right] if end == 0 else [right, left], -1)
-    merged = (cuts.sum(axis=-2) >= lengths[..., None]).any(axis=(-1, -2))
-    return np.asarray(area), np.asarray(merged)
+    return np.asarray(area), lengths, cuts
 
 
 def strut_volume(points: Array, lattice: Array, nodes: Index, shifts: Index, diameter: Array) -> Array:

@@ -62,6 +62,8 @@ def test_every_column_has_a_value_wherever_it_should(case):
     may_be_nan |= {"E1_low_MPa", "E1_high_MPa", "nu12_low", "nu12_high"}  # where nothing was measured: test_bands
     if family(case[0]).symmetry != "isotropic":
         may_be_nan |= isotropic_only
+    if {block.kind for block in effective.cell.blocks} & {"hinge", "bar", "fold"}:  # no cross section, no yield
+        may_be_nan |= {name for name in COLUMNS if name.startswith("yield")}
     for name in columns_of(effective.kind):
         if COLUMNS[name].text:
             assert all(isinstance(word, str) for word in out[name]), name
@@ -265,9 +267,6 @@ CASES = {
     "internal-mechanism": lambda: evaluate(homogenize(grid("wall", solid=4.0, props=WALLS, extra=(DANGLING,)))),
     "panels-unbraced": lambda: evaluate(homogenize(build("miura-fold", fold_angle=[30.0],
                                                          material=PLA.replaced(poisson=0.05)))),
-    "joint-outside": lambda: evaluate(homog.homogenize(build("arrowhead", outer_angle=[12.0], inner_angle=[15.0],
-                                                             thickness=0.05))),
-    "joints-near": lambda: evaluate(homog.homogenize(build("square-grid", thickness=[7.3]))),
     "near-singular": lambda: evaluate(homogenize(build("square-grid", thickness=[0.005]))),
     "coupled": lambda: turned("square-grid", 22.5, thickness=[0.2]),
     "reach-short": lambda: evaluate(homogenize(build("reentrant-honeycomb", angle=[-3.0], thickness=0.4))),

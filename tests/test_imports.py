@@ -17,7 +17,7 @@ ORDER = [
     *("cell", "elements"),
     *("stars", "joint_solid", "joints", "solid"),
     *("families", "assembly", "reference"),
-    "effective",
+    *("effective", "stress"),
     *("directional", "bounds", "bands"),
     "columns",
     *("candidates", "brief"),
