@@ -23,6 +23,7 @@ from homog.cell import Kind, Status
 from homog.effective import Effective, Flag, homogenize, soft_mode
 from homog.errors import unknown
 from homog.families import FAMILIES
+from homog.gradient import wall_rates
 from homog.materials import Material
 from homog.tensors import compliance_to_voigt, stiffness_to_voigt
 
@@ -98,10 +99,12 @@ class Results:
         A batch of any shape; everything here is flat, one entry a member in C order.
     part : sequence of float
         Size of the part along axes 1, 2, (3) in mm, if it is known.
+    tolerance : float
+        By how much the process may miss a wall, plus or minus, mm; 0 if it is not known.
     """
 
-    def __init__(self, effective: Effective, part: Sequence[float] = ()) -> None:
-        self.effective, self.part = effective, tuple(part)
+    def __init__(self, effective: Effective, part: Sequence[float] = (), tolerance: float = 0.0) -> None:
+        self.effective, self.part, self.tolerance = effective, tuple(part), tolerance
         self.cell, self.kind, self.parent = effective.cell, effective.kind, effective.cell.parent
         self.shape = effective.status.shape
         self.count = int(effective.status.size)
@@ -182,6 +185,24 @@ class Results:
             return np.full(self.count, np.nan)
         axes = min(len(self.part), self.cell.p)
         return np.asarray((np.asarray(self.part[:axes]) / self.size[:, :axes]).min(axis=-1))
+
+    @cached_property
+    def tolerances(self) -> Array:
+        """To first order, share of E1 and change of nu12 that the tolerance brings: bias, then scatter, (4, count).
+
+        Bias: every wall is off alike. Scatter: each wall of the cell by itself, added in quadrature; the cells repeat it,
+        so that a part of many cells, whose walls all differ, scatters less. NaN without a tolerance or a derivative.
+        """
+        if not self.tolerance > 0.0 or self.effective.model == "solid" or self.cell.family not in FAMILIES:
+            return np.full((4, self.count), np.nan)
+        together, apart, plain = wall_rates(self.effective)
+
+        def changes(rate: Array, S: Array) -> tuple[Array, Array]:
+            stretch = rate[..., 0, 0] / S[:, 0, 0]
+            return np.abs(stretch), np.abs((rate[..., 1, 0] - S[:, 1, 0] * stretch) / S[:, 0, 0])
+
+        scatter = (np.sqrt((change**2).sum(axis=0)) for change in changes(apart, plain))
+        return np.asarray(self.tolerance * np.array([*changes(together, self.compliance), *scatter]))
 
     @cached_property
     def soft_modes(self) -> list[str]:
@@ -267,17 +288,25 @@ def reason_text(code: str) -> str:
 
 @dataclass(frozen=True)
 class Column:
-    """One output quantity: name with unit, meaning, the kinds of cell that have it, and its function of Results."""
+    """One output quantity: name with unit, meaning, the kinds of cell that have it, and its function of Results.
+
+    `text` marks words, `smooth` what has a derivative by the parameters: not words, counts and directions, which jump.
+    """
 
     name: str
     meaning: str
     kinds: tuple[Kind, ...]
     of: Callable[[Results], NDArray[Any]]
     text: bool = False
+    smooth: bool = True
 
 
 def _extreme(name: str) -> Callable[[Results], Array]:
     return lambda r: np.asarray(getattr(r.extremes, name))
+
+
+def _tolerance(i: int, factor: float = 1.0) -> Callable[[Results], Array]:
+    return lambda r: np.asarray(factor * r.tolerances[i])
 
 
 def _plate(i: int, j: int) -> Callable[[Results], Array]:
@@ -320,13 +349,13 @@ _ALL_COLUMNS = (
     Column("bending_nu12", "-k2/k1 under a moment along 1: negative a dome, positive a saddle", SHEET, _bending(0, 1)),
     Column("bending_nu21", "-k1/k2 under a moment along 2", SHEET, _bending(1, 0)),
     Column("nu_min", "smallest Poisson's ratio of all directions", ALL, _extreme("nu_min")),
-    Column("nu_min_deg", "direction of nu_min from axis 1", ALL, _extreme("nu_min_deg")),
+    Column("nu_min_deg", "direction of nu_min from axis 1", ALL, _extreme("nu_min_deg"), smooth=False),
     Column("nu_max", "largest Poisson's ratio of all directions", ALL, _extreme("nu_max")),
-    Column("nu_max_deg", "direction of nu_max from axis 1", ALL, _extreme("nu_max_deg")),
+    Column("nu_max_deg", "direction of nu_max from axis 1", ALL, _extreme("nu_max_deg"), smooth=False),
     Column("E_min_MPa", "smallest Young's modulus of all directions", ALL, _extreme("E_min")),
-    Column("E_min_deg", "direction of E_min from axis 1", ALL, _extreme("E_min_deg")),
+    Column("E_min_deg", "direction of E_min from axis 1", ALL, _extreme("E_min_deg"), smooth=False),
     Column("E_max_MPa", "largest Young's modulus of all directions", ALL, _extreme("E_max")),
-    Column("E_max_deg", "direction of E_max from axis 1", ALL, _extreme("E_max_deg")),
+    Column("E_max_deg", "direction of E_max from axis 1", ALL, _extreme("E_max_deg"), smooth=False),
     Column("G_min_MPa", "smallest shear modulus of all directions", ALL, _extreme("G_min")),
     Column("G_max_MPa", "largest shear modulus of all directions", ALL, _extreme("G_max")),
     Column("auxetic_share", "share of directions with a negative Poisson's ratio", ALL, _extreme("auxetic_share")),
@@ -350,11 +379,18 @@ _ALL_COLUMNS = (
     Column("largest_cell_mm", "largest repeat", ALL, lambda r: r.size[:, : r.cell.p].max(axis=-1)),
     Column("height_mm", "thickness of the slab that holds the sheet", SHEET, lambda r: r.flat(r.cell.height)),
     Column("cells_across", "fewest repeats across the part, if its size is given", ALL, lambda r: r.cells_across),
-    Column("mechanisms", "motions that cost no energy", ALL, lambda r: r.effective.mechanisms.reshape(-1)),
+    Column("E1_tolerance_percent", "change of E1, in percent, where the process makes all walls too thick or thin by its "
+           "tolerance (first order)", ALL, _tolerance(0, 100.0), smooth=False),
+    Column("nu12_tolerance", "the same, change of nu12", ALL, _tolerance(1), smooth=False),
+    Column("E1_scatter_percent", "change of E1, in percent, where each wall of the cell is off by itself (quadrature over "
+           "its walls, less over many cells)", ALL, _tolerance(2, 100.0), smooth=False),
+    Column("nu12_scatter", "the same, change of nu12", ALL, _tolerance(3), smooth=False),
+    Column("mechanisms", "motions that cost no energy", ALL, lambda r: r.effective.mechanisms.reshape(-1),
+           smooth=False),
     Column("soft_mode", "the uniform strain that costs no energy", ALL,
-           lambda r: np.array(r.soft_modes, dtype=object), text=True),
-    Column("verdict", "ok, caution or reject", ALL, _verdict, text=True),
-    Column("reasons", "codes of what speaks against the cell or its model", ALL, Results.reason_words, text=True),
+           lambda r: np.array(r.soft_modes, dtype=object), text=True, smooth=False),
+    Column("verdict", "ok, caution or reject", ALL, _verdict, text=True, smooth=False),
+    Column("reasons", "codes of what speaks against the cell or its model", ALL, Results.reason_words, text=True, smooth=False),
 )  # fmt: skip
 
 COLUMNS: Mapping[str, Column] = MappingProxyType({column.name: column for column in _ALL_COLUMNS})
@@ -383,7 +419,9 @@ def parameter_columns(effective: Effective) -> dict[str, NDArray[Any]]:
     }
 
 
-def evaluate(effective: Effective, names: Sequence[str] | None = None, *, part: Sequence[float] = ()) -> dict[str, Any]:
+def evaluate(
+    effective: Effective, names: Sequence[str] | None = None, *, part: Sequence[float] = (), tolerance: float = 0.0
+) -> dict[str, Any]:
     """Return family, parameters and output quantities as flat arrays by column name.
 
     Parameters
@@ -394,12 +432,14 @@ def evaluate(effective: Effective, names: Sequence[str] | None = None, *, part: 
         Columns wanted, all of the cell's kind if not given; a column that the kind does not have is NaN.
     part : sequence of float
         Size of the part along the axes, mm, for `cells_across`.
+    tolerance : float
+        Tolerance of the process on a wall, plus or minus mm, for `E1_tolerance_percent` and its like.
 
     Returns
     -------
     dict of str to ndarray of shape (m,)
     """
-    results = Results(effective, part)
+    results = Results(effective, part, tolerance)
     wanted = columns_of(effective.kind) if names is None else list(names)
     out: dict[str, Any] = {"family": np.full(results.count, effective.cell.family, dtype=object)}
     out.update(parameter_columns(effective))
@@ -411,8 +451,10 @@ def evaluate(effective: Effective, names: Sequence[str] | None = None, *, part: 
     return out
 
 
-def table(effective: Effective, names: Sequence[str] | None = None, *, part: Sequence[float] = ()) -> pd.DataFrame:
+def table(
+    effective: Effective, names: Sequence[str] | None = None, *, part: Sequence[float] = (), tolerance: float = 0.0
+) -> pd.DataFrame:
     """Return `evaluate` as a DataFrame, one row a member."""
     import pandas as pd
 
-    return pd.DataFrame(evaluate(effective, names, part=part))
+    return pd.DataFrame(evaluate(effective, names, part=part, tolerance=tolerance))

@@ -101,7 +101,8 @@ def rows(brief: Brief, source: Candidates, given: dict[str, Any]) -> dict[str, A
     """Return all columns of some candidates, with `meets`, `misses` and the miss of each limit, flat arrays by name."""
     cell = source.family.build({name: np.atleast_1d(v) if not isinstance(v, str) else v for name, v in given.items()},
                                brief.material)  # fmt: skip
-    out = evaluate(homogenize(cell, model=brief.model), part=brief.part)
+    tolerance = brief.process.wall_tolerance_mm
+    out = evaluate(homogenize(cell, model=brief.model), part=brief.part, tolerance=tolerance)
     count = len(out["family"])
     missed = {}
     for limit in brief.limits:
