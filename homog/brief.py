@@ -252,7 +252,7 @@ class _Reader:
             )
         kinds = {c.family.kind for c in candidates}
         made_by = self._process(tables["process"])
-        limits = self._merged([*self._limits(data.get("limits", {}), kinds), *_process_limits(made_by)])
+        limits = self._merged([*self._limits(data.get("limits", {}), kinds), *process_limits(made_by)])
         goals, front, keep, per_family = self._rank(tables["rank"], kinds)
         return Brief(
             " ".join(self._text(data.get("title", "untitled brief"), "title").split()),
@@ -457,7 +457,7 @@ def _short(value: Any) -> str:
     return words if len(words) <= 60 else words[:57] + "..."
 
 
-def _process_limits(made_by: Process) -> list[Limit]:
+def process_limits(made_by: Process) -> list[Limit]:
     """Return what a process asks of every candidate."""
     limits = []
     if made_by.min_wall_mm > 0.0:

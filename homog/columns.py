@@ -190,8 +190,8 @@ class Results:
     def tolerances(self) -> Array:
         """To first order, share of E1 and change of nu12 that the tolerance brings: bias, then scatter, (4, count).
 
-        Bias: every wall is off alike. Scatter: each wall of the cell by itself, added in quadrature; the cells repeat it,
-        so that a part of many cells, whose walls all differ, scatters less. NaN without a tolerance or a derivative.
+        Bias: every wall is off alike. Scatter: each wall of the cell by itself, added in quadrature; every cell repeats
+        it, so that a part of many cells, whose walls all differ, scatters less. NaN without tolerance or derivative.
         """
         if not self.tolerance > 0.0 or self.effective.model == "solid" or self.cell.family not in FAMILIES:
             return np.full((4, self.count), np.nan)
@@ -379,18 +379,19 @@ _ALL_COLUMNS = (
     Column("largest_cell_mm", "largest repeat", ALL, lambda r: r.size[:, : r.cell.p].max(axis=-1)),
     Column("height_mm", "thickness of the slab that holds the sheet", SHEET, lambda r: r.flat(r.cell.height)),
     Column("cells_across", "fewest repeats across the part, if its size is given", ALL, lambda r: r.cells_across),
-    Column("E1_tolerance_percent", "change of E1, in percent, where the process makes all walls too thick or thin by its "
-           "tolerance (first order)", ALL, _tolerance(0, 100.0), smooth=False),
-    Column("nu12_tolerance", "the same, change of nu12", ALL, _tolerance(1), smooth=False),
-    Column("E1_scatter_percent", "change of E1, in percent, where each wall of the cell is off by itself (quadrature over "
-           "its walls, less over many cells)", ALL, _tolerance(2, 100.0), smooth=False),
-    Column("nu12_scatter", "the same, change of nu12", ALL, _tolerance(3), smooth=False),
+    Column("E1_tolerance_percent", "by how many percent E1 is off where all walls are off by the process's tolerance",
+           ALL, _tolerance(0, 100.0), smooth=False),
+    Column("nu12_tolerance", "by how much nu12 is off there, both to first order", ALL, _tolerance(1), smooth=False),
+    Column("E1_scatter_percent", "the same where each wall of one cell is off by itself; less over many cells",
+           ALL, _tolerance(2, 100.0), smooth=False),
+    Column("nu12_scatter", "by how much nu12 is off there", ALL, _tolerance(3), smooth=False),
     Column("mechanisms", "motions that cost no energy", ALL, lambda r: r.effective.mechanisms.reshape(-1),
            smooth=False),
     Column("soft_mode", "the uniform strain that costs no energy", ALL,
            lambda r: np.array(r.soft_modes, dtype=object), text=True, smooth=False),
     Column("verdict", "ok, caution or reject", ALL, _verdict, text=True, smooth=False),
-    Column("reasons", "codes of what speaks against the cell or its model", ALL, Results.reason_words, text=True, smooth=False),
+    Column("reasons", "codes of what speaks against the cell or its model", ALL, Results.reason_words, text=True,
+           smooth=False),
 )  # fmt: skip
 
 COLUMNS: Mapping[str, Column] = MappingProxyType({column.name: column for column in _ALL_COLUMNS})

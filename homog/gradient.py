@@ -83,7 +83,7 @@ def _open(name: str) -> Family:
 
 
 def moved(cell: UnitCell, index: Index, moves: Sequence[Move], steps: Array) -> UnitCell:
-    """Return the cells (q * k * b,) that some members (b,) become when they go along each move by its steps (q, k, b)."""
+    """Return the cells (q * k * b,) that some members (b,) become along each move, by its steps (q, k, b)."""
     given = parameters_of(cell, index)
     for name, value in given.items():
         if not isinstance(value, str):
@@ -138,11 +138,12 @@ def held(effective: Effective, index: Index) -> Held:
     loose = effective.mechanisms.reshape(-1)[index] > 0
     u[~loose, :count] = -np.linalg.solve(K[~loose], F[~loose])
     if loose.any():  # the smallest of the motions that relax it
-        scale = 1.0 / np.sqrt(np.diagonal(K[loose], axis1=-2, axis2=-1))[:, :, None]
+        diagonal = np.diagonal(K[loose], axis1=-2, axis2=-1)
+        scale = 1.0 / np.sqrt(np.where(diagonal > 0.0, diagonal, 1.0))[:, :, None]
         inverse = np.linalg.pinv(K[loose] * scale * np.swapaxes(scale, -1, -2), RANK_TOLERANCE, hermitian=True)
         u[loose, :count] = -scale * (inverse @ (scale * F[loose]))
     motion, strains = (np.ascontiguousarray(np.moveaxis(x, 0, -1)) for x in (u, np.swapaxes(back, -1, -2)))
-    return Held(L, back, motion, strains, outside)
+    return Held(np.asarray(L), np.asarray(back), motion, strains, outside)
 
 
 def energies(cell: UnitCell, model: str, still: Held) -> Iterator[tuple[str, Index, Array]]:
@@ -150,7 +151,7 @@ def energies(cell: UnitCell, model: str, still: Held) -> Iterator[tuple[str, Ind
     numbers = freedoms(cell).numbers
     members = still.motion.shape[-1]
     for part in strained_blocks(cell, model):
-        (s, nodes, f), m, v = part.rows.shape[:3], len(part.block), len(still.strains)
+        (nodes, f), m = part.rows.shape[1:3], len(part.block)
         rows, affine, weights = (
             np.broadcast_to(x, (*x.shape[:-2], m, *cell.shape)).reshape(*x.shape[:-2], m, -1, members)
             for x in (part.rows, part.affine, part.weights)

@@ -2,9 +2,9 @@
 
 A column is a function of the tensor, the density and the cell. `gradient` says how stiffness and compliance move; each
 column is then differenced along that line, C +- h dC and S +- h dS side by side (so that no soft strain is lost in an
-inverse), on cells built at p +- h. Extremes over directions need nothing more: at an extreme the direction does not count
-(envelope theorem). Where a column has a kink (the thinner of two equal walls) the result is the mean of both sides.
-Words, counts and the directions of extremes (`Column.smooth`) have no derivative: NaN.
+inverse), on cells built at p +- h. Extremes over directions need nothing more: at an extreme the direction does not
+count (envelope theorem). Where a column has a kink (the thinner of two equal walls) the result is the mean of both
+sides. Words, counts and the directions of extremes (`Column.smooth`) have no derivative: NaN.
 """
 
 from __future__ import annotations
