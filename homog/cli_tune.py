@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import json
-import math
 import re
 from collections.abc import Sequence
 from pathlib import Path
@@ -99,8 +98,9 @@ def sensitivity(
     table = _table("quantity", "value", *heads, numeric=("value", *heads))
     for name, row in zip(names, rates_now[..., 0], strict=True):
         value = str(values[name][0]) if COLUMNS[name].text else number(values[name][0])
-        if column or math.isfinite(float(np.nansum(np.abs(row)))) and not np.isnan(row).all():
-            table.add_row(name, value, *(number(x) for x in row))
+        if column or not np.isnan(row).all():
+            floor = 0.0 if COLUMNS[name].text else 1e-9 * abs(float(values[name][0]))  # round-off of a zero
+            table.add_row(name, value, *(number(x if not abs(x) < floor else 0.0) for x in row))
     console.print(table)
     console.print("Each parameter alone, the others held; - where there is no derivative (words, counts, directions).")
     console.print(WHAT_IT_IS, style="dim")

@@ -222,7 +222,8 @@ def wall_rates(effective: Effective) -> tuple[Array, Array, Array]:
     Returns
     -------
     together : ndarray of shape (b, v, v)
-        dS per mm by which everything that has to be made (thicknesses, ligaments, diameters, a sheet) is thicker.
+        dS per mm by which everything that has to be made (thicknesses, ligaments, diameters, a sheet) is thicker; as of
+        a slab, whose compliance grows with its height.
     apart : ndarray of shape (w, b, v, v)
         dS per mm of each wall of the cell alone, with walls that run from point to point (`timoshenko`, where joints
         are condensed: a joint of unequal walls is in no table). NaN for a sheet, which is of one piece.
@@ -242,7 +243,8 @@ def wall_rates(effective: Effective) -> tuple[Array, Array, Array]:
         index = good[start : start + CHUNK // 2]
         h = WALL_STEP * sizes(family, parameters_of(cell, index), bias)
         near = moved(cell, index, bias, WALL_STENCIL[0][:, None] * h[:, None])
-        volume = near.volume.reshape(-1, len(index))
+        height = np.broadcast_to(cell.height, cell.shape).reshape(-1)[index]
+        volume = near.volume.reshape(-1, len(index)) * (near.height.reshape(-1, len(index)) / height)
         alone: list[Array] = []
         for one in (effective,) if effective is pointwise else (effective, pointwise):
             still = held(one, index)

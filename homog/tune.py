@@ -22,11 +22,11 @@ from numpy.typing import NDArray
 
 from homog.brief import Limit
 from homog.cell import Status
-from homog.columns import evaluate
+from homog.columns import evaluate, reason_level, reason_text
 from homog.effective import DEFAULT_MODEL, homogenize
 from homog.errors import InputError
 from homog.materials import UNIT, Material, Process
-from homog.problem import Array, Asked, Mask, Problem, meets, posed, words
+from homog.problem import Array, Asked, Problem, meets, posed, words
 from homog.sensitivity import column_rates
 
 if TYPE_CHECKING:
@@ -41,6 +41,8 @@ STEPS, LONGEST = 60, 0.5
 """Most steps of a search; its longest step, in radians or as a logarithm of a length."""
 SETTLED, LEAST_GAIN, STUCK = 1e-18, 1e-6, 1e8
 """A search ends with this sum of squared misses, a step that brings it down by less (relative), or this damping."""
+PROBE = 0.02
+"""A rule that stands so near on a search's way, in radians or as a logarithm of a length, is what stopped it."""
 MOST_STARTS = 4096
 DRAWS = 64
 """So many random geometries are tried for each start before a range counts as empty."""
@@ -116,8 +118,8 @@ def tune(
         if not 1 <= value <= most:
             raise InputError(f"{name} = {value}; allowed: a whole number from 1 to {most}")
     x = first_points(problem, starts, seed)
-    x, blocked = search(problem, x, progress or (lambda step, running: None))
-    return _sorted_out(problem, x, blocked, keep)
+    x, onward = search(problem, x, progress or (lambda step, running: None))
+    return _sorted_out(problem, x, onward, keep)
 
 
 def first_points(problem: Problem, starts: int, seed: int) -> Array:
@@ -170,8 +172,8 @@ class Misses:
             return r, J, np.where(sound, (r**2).sum(axis=0), np.inf)
 
 
-def _solved(problem: Problem, x: Array) -> tuple[Array, Array, Mask]:
-    """Return limited columns (limit, b), their slopes (limit, variable, b) and which cells exist; NaN elsewhere."""
+def _solved(problem: Problem, x: Array) -> tuple[Array, Array]:
+    """Return limited columns (limit, b) and their slopes (limit, variable, b), NaN where there is no cell."""
     names = [limit.column for limit in problem.limits]
     cell = problem.family.build(problem.given(x), problem.material)
     there = np.asarray(cell.status == Status.OK)
@@ -183,21 +185,21 @@ def _solved(problem: Problem, x: Array) -> tuple[Array, Array, Mask]:
         y[:, there] = [np.asarray(row[name], float) for name in names]
         along = np.array([v.slope(one) for v, one in zip(problem.variables, x[:, there], strict=True)])
         slopes[:, :, there] = np.array([rates[name] for name in names]) * along
-    return y, slopes, there
+    return y, slopes
 
 
-def search(problem: Problem, x: Array, progress: Progress) -> tuple[Array, NDArray[Any]]:
-    """Return where searches from coordinates (variable, b) end, and the rule that stopped each one's last step, (b,)."""
+def search(problem: Problem, x: Array, progress: Progress) -> tuple[Array, Array]:
+    """Return where searches from coordinates (variable, b) end, and the direction in which each would go on."""
     low, high = problem.box
     x = np.clip(x, low, high)
     members = x.shape[1]
-    y, slopes, there = _solved(problem, x)
+    y, slopes = _solved(problem, x)
     misses = Misses(problem.limits, tuple(
         all(end > 0.0 for end in (limit.low, limit.high) if math.isfinite(end)) and not (values <= 0.0).any()
         for limit, values in zip(problem.limits, y, strict=True)
     ))  # fmt: skip
     r, J, cost = misses.of(y, slopes)
-    damping, blocked = np.full(members, 1e-3), np.full(members, "", dtype=object)
+    damping = np.full(members, 1e-3)
     running = np.isfinite(cost) & (cost > SETTLED)
     for step in range(STEPS):
         progress(step, int(running.sum()))
@@ -205,11 +207,9 @@ def search(problem: Problem, x: Array, progress: Progress) -> tuple[Array, NDArr
         if not len(live):
             break
         trial = _step(x[:, live], r[:, live], J[:, :, live], damping[live], low, high)
-        y, slopes, there = _solved(problem, trial)
+        y, slopes = _solved(problem, trial)
         r_new, J_new, cost_new = misses.of(y, slopes)
         better = cost_new < cost[live]
-        blocked[live[better]] = ""
-        blocked[live[~there]] = problem.rule(trial[:, ~there])
         won, lost = live[better], live[~better]
         gain = (cost[won] - cost_new[better]) / cost[won]
         x[:, won], r[:, won], J[:, :, won], cost[won] = (a[..., better] for a in (trial, r_new, J_new, cost_new))
@@ -217,7 +217,7 @@ def search(problem: Problem, x: Array, progress: Progress) -> tuple[Array, NDArr
         damping[lost] *= 8.0
         running[won] = (cost[won] > SETTLED) & (gain > LEAST_GAIN)
         running[lost] = damping[lost] < STUCK
-    return x, blocked
+    return x, -np.einsum("knb,kb->nb", J, r)
 
 
 def _step(x: Array, r: Array, J: Array, damping: Array, low: Array, high: Array) -> Array:
@@ -233,7 +233,7 @@ def _step(x: Array, r: Array, J: Array, damping: Array, low: Array, high: Array)
     return np.clip(x + step, low, high)
 
 
-def _sorted_out(problem: Problem, x: Array, blocked: NDArray[Any], keep: int) -> Tuning:
+def _sorted_out(problem: Problem, x: Array, onward: Array, keep: int) -> Tuning:
     """Evaluate where the searches ended, put equal shapes together and rank; or say what is in the way."""
     import pandas as pd
 
@@ -252,7 +252,7 @@ def _sorted_out(problem: Problem, x: Array, blocked: NDArray[Any], keep: int) ->
     total = np.where((effective.status == Status.OK) & np.isfinite(total), total, np.inf)
     best = int(np.argmin(np.where(good, np.inf, total + 1e-6 * (table["verdict"] == "reject").to_numpy())))
     nearest = table.iloc[[] if len(chosen) else [best]].reset_index(drop=True)
-    hindrances = () if len(chosen) else _in_the_way(problem, x[:, best], nearest, str(blocked[best]))
+    hindrances = () if len(chosen) else _in_the_way(problem, x[:, [best]], onward[:, [best]], nearest)
     return Tuning(problem, found, nearest, hindrances, x.shape[1], int(good.sum()))
 
 
@@ -275,23 +275,24 @@ def distinct(problem: Problem, x: Array, order: NDArray[np.int64], keep: int) ->
     return chosen
 
 
-def _in_the_way(problem: Problem, x: Array, nearest: pd.DataFrame, rule: str) -> tuple[str, ...]:
+def _in_the_way(problem: Problem, x: Array, onward: Array, nearest: pd.DataFrame) -> tuple[str, ...]:
     """Return in words what holds the nearest geometry back: misses, ends of limits and ranges, a rule, a rejection."""
     found = []
     for limit in problem.limits:
         value = float(nearest[limit.column].iloc[0])
         if not meets(limit, np.array(value)):
             found.append(f"{words(limit)} ({limit.origin}): missed, it is {value:.4g}")
-        elif min(abs(value - limit.low), abs(value - limit.high)) <= 2.0 * INSIDE * limit.scale:
+        elif limit.low < limit.high and min(value - limit.low, limit.high - value) <= 2.0 * INSIDE * limit.scale:
             found.append(f"{words(limit)} ({limit.origin}): at its end")
     low, high = problem.box
     for i, v in enumerate(problem.variables):
         for at, end, origin, side in ((low, v.low, v.low_origin, "lowest"), (high, v.high, "its range", "highest")):
-            if abs(x[i] - at[i, 0]) < 1e-9:
+            if abs(x[i, 0] - at[i, 0]) < 1e-9:
                 found.append(f"{v.name} is at its {side}, {end:g} {v.unit} ({origin})")
-    if rule:
-        texts = {r.code: r.words for r in problem.family.rules}
-        found.append(f"{rule}: {texts.get(rule, 'the joints run into each other')}")
-    if nearest["verdict"].iloc[0] == "reject":
-        found.append(f"rejected: {nearest['reasons'].iloc[0]}")
+    further = np.clip(x + PROBE * onward / max(float(np.abs(onward).max()), 1e-300), low, high)
+    if not problem.exists(further)[0]:
+        code = str(problem.rule(further)[0])
+        found.append(f"{code}: {reason_text(code)}")
+    codes = str(nearest["reasons"].iloc[0]).split()
+    found += [f"rejected, {code}: {reason_text(code)}" for code in codes if reason_level(code) == "reject"]
     return tuple(found)
