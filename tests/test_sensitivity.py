@@ -13,10 +13,10 @@ from homog import columns, gradient
 from homog.cell import Block
 from homog.columns import COLUMNS, Results, columns_of, evaluate
 from homog.directional import plane_extremes, poisson
-from homog.effective import homogenize
+from homog.effective import Flag, homogenize
 from homog.errors import InputError
 from homog.families import FAMILIES, build
-from homog.gradient import sizes, tensor_rates, wall_rates
+from homog.gradient import _walls, sizes, tensor_rates, wall_rates
 from homog.joints import applies
 from homog.materials import UNIT, material
 from homog.sensitivity import column_rates, elasticities, sensitivities, smooth_columns
@@ -114,7 +114,17 @@ def test_a_batch_is_a_loop(case, model):
         one = {key: value if isinstance(value, str) else value[i] for key, value in values.items()}
         alone = column_rates(homogenize(family.build(one, UNIT), model=model), names)
         for name in names:
+            assert np.isfinite(whole[name]).all()
             np.testing.assert_allclose(alone[name][:, 0], whole[name][:, i], rtol=1e-6, atol=1e-9)
+
+
+def test_at_the_edge_of_a_joint_table_there_is_no_derivative():
+    # the narrowest gap of a fork's table is 9 deg: inclined walls that leave the stem at 81 deg from the horizontal
+    values = {"angle": [-80.0, -80.98, -81.5], "thickness": 0.1, "inclined": 10.0, "vertical": 40.0}
+    effective = homogenize(FAMILIES["reentrant-honeycomb"].build(values, UNIT))
+    assert (effective.flags & Flag.JOINT_OUTSIDE).astype(bool).tolist() == [False, False, True]
+    rates = column_rates(effective, ["E1_MPa"], moves=[{"angle": 1.0}, {"thickness": 1.0}])["E1_MPa"]
+    assert np.isfinite(rates).tolist() == [[True, False, True], [True] * 3]
 
 
 SOLID_RUNS = [(case, model) for case, model in RUNS if FAMILIES[case[0]].kind != "sheet"]
@@ -204,7 +214,7 @@ def test_a_mechanism_inside_does_not_matter():
 
     def hung(values, parent):
         cell = family.make(values, parent)
-        free = np.broadcast_to([[3.0, 2.0]], (*cell.shape, 1, 2))
+        free = np.broadcast_to([[3.0, 0.0]], (*cell.shape, 1, 2))
         block = Block("bar", np.array([[0, 1]]), np.zeros((1, 2, 2), int), {"rigidity": np.ones(1)})
         return dataclasses.replace(cell, points=np.concatenate([cell.points, free], -2), blocks=(*cell.blocks, block))
 
@@ -224,6 +234,8 @@ def test_models_and_cells_without_derivatives_say_so():
     effective = homogenize(build("square-grid", thickness=1.0), model="euler")
     with pytest.raises(InputError, match="Model 'solid' is meshed"):
         column_rates(dataclasses.replace(effective, model="solid"), ["nu12"])
+    with pytest.raises(InputError, match="Model 'solid' is meshed"):
+        tensor_rates(dataclasses.replace(effective, model="solid"), [{"thickness": 1.0}])
     own = dataclasses.replace(effective, cell=dataclasses.replace(effective.cell, family="custom"))
     with pytest.raises(InputError, match="'custom' is of no family"):
         column_rates(own, ["nu12"])
@@ -238,6 +250,8 @@ def test_frames_and_elasticities():
     given = {"thickness": 0.5}
     share = sensitivities("square-grid", given, model="euler", relative=True, columns=["eta1_12", "verdict"])
     assert np.isnan(share.to_numpy()).all()
+    sheet = sensitivities("miura-fold", relative=True, columns=["A11_N_per_mm", "A16_N_per_mm", "D26_N_mm"])
+    assert np.isnan(sheet).all(axis=1).tolist() == [False, True, True]
     effective = homogenize(build("square-grid", thickness=0.5), model="euler")
     rates = np.ones((1, 2, 1))
     np.testing.assert_allclose(elasticities(effective, ["E1_MPa"], rates)[0, :, 0], [10.0 / 0.05, 0.5 / 0.05])
@@ -307,9 +321,17 @@ def test_each_wall_apart_is_a_difference_of_that_wall():
         np.testing.assert_allclose(apart[i, 0], (S[1] - S[0]) / (2.0 * h), rtol=1e-5, atol=atol)
 
 
-def test_hinges_of_one_ligament_are_one():
-    _, apart, _ = wall_rates(homogenize(build("rotating-squares", opening=30.0)))
-    assert len(apart) == 4
+def test_both_hinges_of_a_ligament_are_one_wall():
+    cell = build("rotating-squares", opening=30.0, ligament_thickness=0.4)
+    _, apart, _ = wall_rates(homogenize(cell))
+    hinges, h = cell.blocks[1], 1e-4
+    groups = _walls("hinge", np.array([[1, 0, 2], [1, 5, 2], [3, 0, 4]]))
+    assert len(apart) == 4 and [group.tolist() for group in groups] == [[0, 2], [1]]
+    for pin in range(4):
+        stiffness = hinges.props["stiffness"] * (1.0 + np.array([[-h], [h]]) * (hinges.nodes[:, 1] == pin))
+        S = np.linalg.inv(homogenize(with_props(repeated(cell, 2), 1, stiffness=stiffness)).stiffness)
+        rate = 3.0 / 0.4 * (S[1] - S[0]) / (2.0 * h)  # the stiffness goes with the cube of the ligament's thickness
+        np.testing.assert_allclose(apart[pin, 0], rate, rtol=1e-4, atol=1e-6 * np.abs(rate).max())
 
 
 def test_without_a_tolerance_there_is_no_column_and_no_work(monkeypatch):

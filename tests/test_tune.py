@@ -20,7 +20,7 @@ from homog.errors import InputError
 from homog.families import FAMILIES, build
 from homog.materials import Process
 from homog.problem import meets, merged, posed
-from homog.tune import DISTINCT, Misses, _step, first_points, shapes, tune
+from homog.tune import DISTINCT, LONGEST, Misses, _step, distinct, first_points, shapes, tune
 
 SEED = 51407
 
@@ -44,7 +44,7 @@ KNOWN = {
     "kagome-grid": ({"length": 8.0}, {"thickness": 0.45}, ("E_min_MPa",)),
     "anti-tetrachiral": ({"ligament_x": 10.0}, {"ligament_y": 12.0, "node_radius": 2.0, "thickness": 0.6},
                          ("E1_MPa", "E2_MPa", "density_kg_m3")),
-    "rotating-triangles": ({"side": 10.0, "ligament_length": 1.0}, {"opening": 80.0, "ligament_thickness": 0.3},
+    "rotating-triangles": ({"side": 10.0, "ligament_length": 1.0}, {"opening": 20.0, "ligament_thickness": 0.3},
                            ("E1_MPa", "density_kg_m3")),
     "miura-fold": ({"side_a": 10.0, "side_b": 10.0, "crease_length": 10.0},
                    {"sector_angle": 62.0, "fold_angle": 40.0, "sheet_thickness": 0.25},
@@ -115,6 +115,22 @@ def test_listed_shapes_differ_and_sizes_alone_do_not_count():
     np.testing.assert_allclose(
         shapes(problem, x + np.array([[v.unit == "mm"] for v in problem.variables])), z, atol=1e-9
     )
+
+
+def test_shapes_are_told_apart_at_five_percent():
+    problem = posed("square-grid", {"nu12": 0.0}, limits={}, fix={"length": 10.0}, within={}, free=(), material="PLA",
+                    model="euler", process=None, rank={"density_kg_m3": "min"})  # fmt: skip
+    # half of a thickness's logarithm is its own, the other half that of the mean of the two lengths
+    x = np.log([[0.5, 0.5 * np.exp(1.9 * DISTINCT), 0.5 * np.exp(2.1 * DISTINCT), 0.5 * np.exp(9.0 * DISTINCT)]])
+    assert distinct(problem, x, np.arange(4), 9) == [0, 2, 3]
+    assert distinct(problem, x, np.array([1, 0, 3]), 9) == [1, 3] and distinct(problem, x, np.arange(4), 1) == [0]
+
+
+def test_the_end_of_a_range_is_reached_from_inside():
+    result = tune(
+        "square-grid", {"E1_MPa": (0.0513, 0.0527)}, fix={"length": 10.0}, model="euler", starts=32, seed=SEED
+    )
+    assert result.met == 32 and result.found["E1_MPa"].between(0.0513, 0.0527).all()
 
 
 def test_ranges_and_process_are_kept_to_the_letter():
@@ -211,6 +227,8 @@ def test_residuals_vanish_in_the_range_and_have_the_slope_they_say(y, log, low, 
 def test_misses_of_nothing_are_infinite():
     misses = Misses((Limit("nu12", -1.0, -1.0),), (False,))
     assert misses.of(np.array([[np.nan, -1.0]]), np.zeros((1, 2, 2)))[2].tolist() == [np.inf, 0.0]
+    misses = Misses((Limit("E1_MPa", 1.0, 1.0),), (True,))
+    assert misses.of(np.array([[-1.0, 1.0]]), np.zeros((1, 2, 2)))[2].tolist() == [np.inf, 0.0]
 
 
 @given(st.integers(0, 10**6))
@@ -224,7 +242,8 @@ def test_a_step_goes_down_and_stays_inside(seed):
     assert (trial >= low).all() and (trial <= high).all()
     gradient = np.einsum("knb,kb->nb", J, r)
     assert (trial - x)[(x == high) & (gradient < 0.0)].tolist() == [0.0] * int(((x == high) & (gradient < 0.0)).sum())
-    assert np.abs(trial - x).max() <= 0.5 + 1e-12
+    assert np.abs(trial - x).max() <= LONGEST + 1e-12
+    assert np.abs(_step(0.0 * x, 9.0 * r, J, np.full(6, 1e-9), 9.0 * low, 9.0 * high)).max() == pytest.approx(LONGEST)
 
 
 def test_starts_are_cells_that_exist():
@@ -346,8 +365,12 @@ def test_the_sensitivity_command_shows_what_the_library_finds(capsys):
     status, out, _ = run("sensitivity reentrant-honeycomb --relative --column E1_MPa --column verdict", capsys)
     assert status == 0 and "thickness %/%" in out and "angle per deg" not in out
     assert [line.split()[2:] for line in out.splitlines() if line.strip().startswith("verdict")] == [["-"] * 5]
+    share = homog.sensitivities("reentrant-honeycomb", relative=True, columns=["E1_MPa"]).loc["E1_MPa", "thickness"]
+    assert f"{share:.4g}" in next(line for line in out.splitlines() if line.strip().startswith("E1_MPa"))
     status, out, _ = run("sensitivity miura-fold", capsys)
     assert status == 0 and "bending_nu12" in out and "fold_angle per" in out
+    density = next(line for line in out.splitlines() if line.strip().startswith("density"))
+    assert density.split()[3] == "0"  # side_b, to round-off
 
 
 def test_the_commands_show_their_progress(monkeypatch, capsys):
