@@ -36,7 +36,7 @@ _HOME = {
     "screen": "screening",
     "run_screen": "screening",
     "sensitivities": "sensitivity",
-    "tune": "tune",
+    "tune": "tuning",
     "HomogError": "errors",
     "InputError": "errors",
     "GeometryError": "errors",
@@ -90,4 +90,4 @@ if TYPE_CHECKING:
     from homog.screening import run_screen as run_screen
     from homog.screening import screen as screen
     from homog.sensitivity import sensitivities as sensitivities
-    from homog.tune import tune as tune
+    from homog.tuning import tune as tune

@@ -36,7 +36,7 @@ if TYPE_CHECKING:
 
     from homog.families import Family
     from homog.problem import Asked
-    from homog.tune import Tuning
+    from homog.tuning import Tuning
 
 MAIN = ("density_kg_m3", "E1_MPa", "nu12")
 
@@ -162,7 +162,7 @@ def tune(
     from homog.materials import process as named
     from homog.problem import words
     from homog.report import check_table, provenance, write_table
-    from homog.tune import tune as search
+    from homog.tuning import tune as search
 
     if out is not None:
         check_table(out, overwrite=overwrite)
@@ -283,12 +283,17 @@ def _card(result: Tuning) -> dict[str, Any]:
     }
 
 
+def _head(name: str) -> str:
+    """Return a long name in two lines, so that a table stays narrow."""
+    return name.replace("_", "_\n", 1) if len(name) > 10 else name
+
+
 def _show(result: Tuning) -> None:
     from homog.columns import reason_text
     from homog.problem import words
     from homog.report import WHAT_IT_IS, number
     from homog.screening import records
-    from homog.tune import DISTINCT
+    from homog.tuning import DISTINCT
 
     problem, console = result.problem, _console()
     console.print(f"{problem.family.title}  ({problem.family.id}), {problem.material.name}, model {problem.model}",
@@ -307,8 +312,8 @@ def _show(result: Tuning) -> None:
     else:
         console.print(f"None of {result.starts} searches met everything. The nearest:")
     columns = list(dict.fromkeys([*(one.column for one in problem.limits), *(g.column for g in problem.goals), *MAIN]))
-    units = {p.name: f"{p.name} {p.unit}" for p in problem.family.parameters}
-    heads = [*(units[name] for name in names), *columns]
+    columns = [name for name in columns if name != "thinnest_mm"]  # the thicknesses stand beside it
+    heads = [*(f"{_head(name)}\n{problem.family.parameter(name).unit}" for name in names), *map(_head, columns)]
     table = _table("", *heads, "cautions", numeric=heads)
     for i, row in enumerate(records(shown), 1):
         values = [number(row[problem.family.parameter(name).column]) for name in names]

@@ -53,12 +53,14 @@ def codes(row):
 def test_every_column_has_a_value_wherever_it_should(case):
     given = possible(case, 6, np.random.default_rng(90210), PLA)
     effective = homogenize(family(case[0]).build(given, PLA))
-    out = evaluate(effective, part=PART)
+    out = evaluate(effective, part=PART, tolerance=0.01)
     assert list(out) == ["family", *(p.column for p in family(case[0]).parameters), *columns_of(effective.kind)]
     live = effective.status == Status.OK
     assert live.any()
     isotropic_only = {"E1_per_hashin_shtrikman", "hashin_shtrikman_ratio"}
-    may_be_nan = {"voigt_ratio", *isotropic_only} if effective.kind == "sheet" else set()
+    may_be_nan = (
+        {"voigt_ratio", *isotropic_only, "E1_scatter_percent", "nu12_scatter"} if effective.kind == "sheet" else set()
+    )
     if family(case[0]).symmetry != "isotropic":
         may_be_nan |= isotropic_only
     for name in columns_of(effective.kind):

@@ -21,7 +21,7 @@ ORDER = [
     *("directional", "bounds"),
     "columns",
     *("brief", "screening"),
-    *("sensitivity", "problem", "tune"),
+    *("sensitivity", "problem", "tuning"),
     *("geometry", "plots"),
     "report",
     "__init__",

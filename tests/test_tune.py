@@ -20,7 +20,7 @@ from homog.errors import InputError
 from homog.families import FAMILIES, build
 from homog.materials import Process
 from homog.problem import meets, merged, posed
-from homog.tune import DISTINCT, LONGEST, Misses, _step, distinct, first_points, shapes, tune
+from homog.tuning import DISTINCT, LONGEST, Misses, _step, distinct, first_points, shapes, tune
 
 SEED = 51407
 
