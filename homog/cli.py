@@ -498,6 +498,8 @@ def _root(
 
 def main(argv: Sequence[str] | None = None) -> int:
     """Run the command line on `argv` (the process's own arguments if None) and return the exit status."""
+    import homog.cli_tune  # noqa: F401  # its commands register themselves
+
     try:
         status = app(args=list(sys.argv[1:] if argv is None else argv), prog_name="homog", standalone_mode=False)
         if status == 130:  # what the parser makes of an interrupt, or else an Abort

@@ -23,6 +23,7 @@ from homog.cell import Kind, Status
 from homog.effective import Effective, Flag, homogenize, soft_mode
 from homog.errors import unknown
 from homog.families import FAMILIES
+from homog.gradient import wall_rates
 from homog.materials import Material
 from homog.stress import BEAMS, sections, unit_stresses
 from homog.tensors import compliance_to_voigt, stiffness_to_voigt
@@ -120,10 +121,15 @@ class Results:
         Size of the part along axes 1, 2, (3) in mm, if it is known.
     limits : mapping of str to (float, float)
         Least and largest value allowed of columns, if they are known, for `limit-within-band`.
+    tolerance : float
+        By how much the process may miss a wall, plus or minus, mm; 0 if it is not known.
     """
 
-    def __init__(self, effective: Effective, part: Sequence[float] = (), limits: Limits | None = None) -> None:
-        self.effective, self.part, self.limits = effective, tuple(part), limits or {}
+    def __init__(
+        self, effective: Effective, part: Sequence[float] = (), limits: Limits | None = None, tolerance: float = 0.0
+    ) -> None:
+        self.effective, self.part = effective, tuple(part)
+        self.limits, self.tolerance = limits or {}, tolerance
         self.cell, self.kind, self.parent = effective.cell, effective.kind, effective.cell.parent
         self.shape = effective.status.shape
         self.count = int(effective.status.size)
@@ -241,6 +247,24 @@ class Results:
         return np.asarray((np.asarray(self.part[:axes]) / self.size[:, :axes]).min(axis=-1))
 
     @cached_property
+    def tolerances(self) -> Array:
+        """To first order, share of E1 and change of nu12 that the tolerance brings: bias, then scatter, (4, count).
+
+        Bias: every wall is off alike. Scatter: each wall of the cell by itself, added in quadrature; every cell repeats
+        it, so that a part of many cells, whose walls all differ, scatters less. NaN without tolerance or derivative.
+        """
+        if not self.tolerance > 0.0 or self.effective.model == "solid" or self.cell.family not in FAMILIES:
+            return np.full((4, self.count), np.nan)
+        together, apart, plain = wall_rates(self.effective)
+
+        def changes(rate: Array, S: Array) -> tuple[Array, Array]:
+            stretch = rate[..., 0, 0] / S[:, 0, 0]
+            return np.abs(stretch), np.abs((rate[..., 1, 0] - S[:, 1, 0] * stretch) / S[:, 0, 0])
+
+        scatter = (np.sqrt((change**2).sum(axis=0)) for change in changes(apart, plain))
+        return np.asarray(self.tolerance * np.array([*changes(together, self.compliance), *scatter]))
+
+    @cached_property
     def soft_modes(self) -> Words:
         """The soft mode of each member that has one."""
         codes, words = np.zeros(self.count, np.int64), {"": 0}
@@ -341,7 +365,10 @@ def reason_text(code: str) -> str:
 
 @dataclass(frozen=True)
 class Column:
-    """One output quantity: name with unit, meaning, the kinds of cell that have it, and its function of Results."""
+    """One output quantity: name with unit, meaning, the kinds of cell that have it, and its function of Results.
+
+    `text` marks words, `smooth` what has a derivative by the parameters: not words, counts and directions, which jump.
+    """
 
     name: str
     meaning: str
@@ -349,10 +376,15 @@ class Column:
     of: Callable[[Results], NDArray[Any] | Words]
     text: bool = False
     whole: bool = False
+    smooth: bool = True
 
 
 def _extreme(name: str) -> Callable[[Results], Array]:
     return lambda r: np.asarray(getattr(r.extremes, name))
+
+
+def _tolerance(i: int, factor: float = 1.0) -> Callable[[Results], Array]:
+    return lambda r: np.asarray(factor * r.tolerances[i])
 
 
 def _plate(i: int, j: int) -> Callable[[Results], Array]:
@@ -398,18 +430,20 @@ _ALL_COLUMNS = (
     Column("membrane_bending_coupling", "largest |B_ij| / sqrt(A_ii D_jj), z from mid-height", SHEET, _sheet_coupling),
     Column("bending_nu12", "-k2/k1 under a moment along 1: negative a dome, positive a saddle", SHEET, _bending(0, 1)),
     Column("bending_nu21", "-k1/k2 under a moment along 2", SHEET, _bending(1, 0)),
-    Column("E1_low_MPa", "low end of the band in which a solid's E1 was found", ALL, lambda r: r.band.E1_low),
-    Column("E1_high_MPa", "high end of that band", ALL, lambda r: r.band.E1_high),
-    Column("nu12_low", "low end of the band in which a solid's nu12 was found", ALL, lambda r: r.band.nu12_low),
-    Column("nu12_high", "high end of that band", ALL, lambda r: r.band.nu12_high),
+    Column("E1_low_MPa", "low end of the band in which a solid's E1 was found", ALL,
+           lambda r: r.band.E1_low, smooth=False),
+    Column("E1_high_MPa", "high end of that band", ALL, lambda r: r.band.E1_high, smooth=False),
+    Column("nu12_low", "low end of the band in which a solid's nu12 was found", ALL,
+           lambda r: r.band.nu12_low, smooth=False),
+    Column("nu12_high", "high end of that band", ALL, lambda r: r.band.nu12_high, smooth=False),
     Column("nu_min", "smallest Poisson's ratio of all directions", ALL, _extreme("nu_min")),
-    Column("nu_min_deg", "direction of nu_min from axis 1", ALL, _extreme("nu_min_deg")),
+    Column("nu_min_deg", "direction of nu_min from axis 1", ALL, _extreme("nu_min_deg"), smooth=False),
     Column("nu_max", "largest Poisson's ratio of all directions", ALL, _extreme("nu_max")),
-    Column("nu_max_deg", "direction of nu_max from axis 1", ALL, _extreme("nu_max_deg")),
+    Column("nu_max_deg", "direction of nu_max from axis 1", ALL, _extreme("nu_max_deg"), smooth=False),
     Column("E_min_MPa", "smallest Young's modulus of all directions", ALL, _extreme("E_min")),
-    Column("E_min_deg", "direction of E_min from axis 1", ALL, _extreme("E_min_deg")),
+    Column("E_min_deg", "direction of E_min from axis 1", ALL, _extreme("E_min_deg"), smooth=False),
     Column("E_max_MPa", "largest Young's modulus of all directions", ALL, _extreme("E_max")),
-    Column("E_max_deg", "direction of E_max from axis 1", ALL, _extreme("E_max_deg")),
+    Column("E_max_deg", "direction of E_max from axis 1", ALL, _extreme("E_max_deg"), smooth=False),
     Column("G_min_MPa", "smallest shear modulus of all directions", ALL, _extreme("G_min")),
     Column("G_max_MPa", "largest shear modulus of all directions", ALL, _extreme("G_max")),
     Column("auxetic_share", "share of directions with a negative Poisson's ratio", ALL, _extreme("auxetic_share")),
@@ -426,13 +460,14 @@ _ALL_COLUMNS = (
     Column("hashin_shtrikman_ratio", "largest of K and G over the Hashin-Shtrikman bound (isotropic cells only)", ALL,
            lambda r: r.bounds.hashin_shtrikman_ratio),
     Column("yield_1_MPa", f"pull along 1 at {FIRST_YIELD} (|N|/A + |M|/W, twist by von Mises, no shear); {CORNERS}",
-           WALLED, _yield(0)),
-    Column("yield_2_MPa", f"pull along 2 at {FIRST_YIELD}; {CORNERS}", WALLED, _yield(1)),
-    Column("yield_3_MPa", f"pull along 3 at {FIRST_YIELD}; {CORNERS}", SPATIAL, _yield(2)),
-    Column("yield_12_MPa", f"shear in the plane 1-2 at {FIRST_YIELD}; {CORNERS}", WALLED, _yield(-1)),
-    Column("yield_13_MPa", f"shear in the plane 1-3 at {FIRST_YIELD}; {CORNERS}", SPATIAL, _yield(4)),
-    Column("yield_23_MPa", f"shear in the plane 2-3 at {FIRST_YIELD}; {CORNERS}", SPATIAL, _yield(3)),
-    Column("yield_strain_1", "strain along 1 at yield_1_MPa", WALLED, lambda r: r.yields[:, 0] / r.young(0)),
+           WALLED, _yield(0), smooth=False),
+    Column("yield_2_MPa", f"pull along 2 at {FIRST_YIELD}; {CORNERS}", WALLED, _yield(1), smooth=False),
+    Column("yield_3_MPa", f"pull along 3 at {FIRST_YIELD}; {CORNERS}", SPATIAL, _yield(2), smooth=False),
+    Column("yield_12_MPa", f"shear in the plane 1-2 at {FIRST_YIELD}; {CORNERS}", WALLED, _yield(-1), smooth=False),
+    Column("yield_13_MPa", f"shear in the plane 1-3 at {FIRST_YIELD}; {CORNERS}", SPATIAL, _yield(4), smooth=False),
+    Column("yield_23_MPa", f"shear in the plane 2-3 at {FIRST_YIELD}; {CORNERS}", SPATIAL, _yield(3), smooth=False),
+    Column("yield_strain_1", "strain along 1 at yield_1_MPa", WALLED, lambda r: r.yields[:, 0] / r.young(0),
+           smooth=False),
     Column("slenderness", "largest thickness over length in the cell", ALL, lambda r: r.flat(r.cell.slenderness)),
     Column("thinnest_mm", "thinnest wall, strut, ligament or sheet to be made", ALL, lambda r: r.flat(r.cell.thinnest)),
     Column("cell_1_mm", "repeat along axis 1", ALL, lambda r: r.size[:, 0]),
@@ -441,14 +476,21 @@ _ALL_COLUMNS = (
     Column("largest_cell_mm", "largest repeat", ALL, lambda r: r.size[:, : r.cell.p].max(axis=-1)),
     Column("height_mm", "thickness of the slab that holds the sheet", SHEET, lambda r: r.flat(r.cell.height)),
     Column("cells_across", "fewest repeats across the part, if its size is given", ALL, lambda r: r.cells_across),
+    Column("E1_tolerance_percent", "by how many percent E1 is off where all walls are off by the process's tolerance",
+           ALL, _tolerance(0, 100.0), smooth=False),
+    Column("nu12_tolerance", "by how much nu12 is off there, both to first order", ALL, _tolerance(1), smooth=False),
+    Column("E1_scatter_percent", "the same where each wall of one cell is off by itself; less over many cells",
+           ALL, _tolerance(2, 100.0), smooth=False),
+    Column("nu12_scatter", "by how much nu12 is off there", ALL, _tolerance(3), smooth=False),
     Column("mechanisms", "motions that cost no energy", ALL, lambda r: r.effective.mechanisms.reshape(-1),
-           whole=True),
+           whole=True, smooth=False),
     Column("model", "what the numbers come from: euler, timoshenko, joint or solid", ALL,
-           lambda r: Words(np.zeros(r.count, np.int64), (r.effective.model,)), text=True),
-    Column("soft_mode", "the uniform strain that costs no energy", ALL, lambda r: r.soft_modes, text=True),
-    Column("verdict", "ok, caution or reject", ALL, _verdict, text=True),
+           lambda r: Words(np.zeros(r.count, np.int64), (r.effective.model,)), text=True, smooth=False),
+    Column("soft_mode", "the uniform strain that costs no energy", ALL, lambda r: r.soft_modes, text=True,
+           smooth=False),
+    Column("verdict", "ok, caution or reject", ALL, _verdict, text=True, smooth=False),
     Column("reasons", "codes of what speaks against the cell or its model", ALL,
-           lambda r: listed(r.reasons, r.count), text=True),
+           lambda r: listed(r.reasons, r.count), text=True, smooth=False),
 )  # fmt: skip
 
 COLUMNS: Mapping[str, Column] = MappingProxyType({column.name: column for column in _ALL_COLUMNS})
@@ -483,6 +525,7 @@ def quantities(
     *,
     part: Sequence[float] = (),
     limits: Limits | None = None,
+    tolerance: float = 0.0,
 ) -> dict[str, NDArray[Any] | Words]:
     """Return family, parameters and output quantities by column name: flat arrays of numbers, text as `Words`.
 
@@ -496,8 +539,10 @@ def quantities(
         Size of the part along the axes, mm, for `cells_across`.
     limits : mapping of str to (float, float)
         Least and largest value allowed of columns, for the reason `limit-within-band`.
+    tolerance : float
+        Tolerance of the process on a wall, plus or minus mm, for `E1_tolerance_percent` and its like.
     """
-    results = Results(effective, part, limits)
+    results = Results(effective, part, limits, tolerance)
     wanted = columns_of(effective.kind) if names is None else list(names)
     out: dict[str, NDArray[Any] | Words] = {
         "family": Words(np.zeros(results.count, np.int64), (effective.cell.family,))

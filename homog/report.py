@@ -77,17 +77,18 @@ def evaluation(effective: Effective) -> dict[str, Any]:
     cell = effective.cell
     return {
         "family": cell.family,
-        "parameters": {name: _plain(values.reshape(-1)[0]) for name, values in cell.parameters.items()},
-        "material": {key: _plain(value) for key, value in dataclasses.asdict(cell.parent).items()},
+        "parameters": {name: plain(values.reshape(-1)[0]) for name, values in cell.parameters.items()},
+        "material": {key: plain(value) for key, value in dataclasses.asdict(cell.parent).items()},
         "model": effective.model,
-        "relative_density": _plain(row["relative_density"]),
+        "relative_density": plain(row["relative_density"]),
         "mechanisms": int(row["mechanisms"]),
-        "stiffness": [[_plain(x) for x in line] for line in stiffness],
-        "columns": {name: _plain(row[name]) for name in COLUMNS if name in row},
+        "stiffness": [[plain(x) for x in line] for line in stiffness],
+        "columns": {name: plain(row[name]) for name in COLUMNS if name in row},
     }
 
 
-def _plain(value: Any) -> Any:
+def plain(value: Any) -> Any:
+    """Return a number or word of a table as a plain JSON value, no value (NaN) as None."""
     if isinstance(value, str):
         return str(value)
     if isinstance(value, bool | np.bool_):

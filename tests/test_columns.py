@@ -53,12 +53,13 @@ def codes(row):
 def test_every_column_has_a_value_wherever_it_should(case):
     given = possible(case, 6, np.random.default_rng(90210), PLA)
     effective = homogenize(family(case[0]).build(given, PLA))
-    out = evaluate(effective, part=PART)
+    out = evaluate(effective, part=PART, tolerance=0.01)
     assert list(out) == ["family", *(p.column for p in family(case[0]).parameters), *columns_of(effective.kind)]
     live = effective.status == Status.OK
     assert live.any()
     isotropic_only = {"E1_per_hashin_shtrikman", "hashin_shtrikman_ratio"}
-    may_be_nan = {"voigt_ratio", *isotropic_only} if effective.kind == "sheet" else set()
+    scatter = {"E1_scatter_percent", "nu12_scatter"}
+    may_be_nan = {"voigt_ratio", *isotropic_only, *scatter} if effective.kind == "sheet" else set()
     may_be_nan |= {"E1_low_MPa", "E1_high_MPa", "nu12_low", "nu12_high"}  # where nothing was measured: test_bands
     if family(case[0]).symmetry != "isotropic":
         may_be_nan |= isotropic_only
