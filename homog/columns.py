@@ -73,12 +73,12 @@ REASONS: Mapping[str, tuple[str, str]] = {
                       "thickness of 0.02 of the length E1 comes out 13 to 18 % and G12 34 to 44 % too low, at 0.1 "
                       "they are 24 to 36 % and 53 to 68 %; use model 'solid'"),
     "joint-outside": ("caution", "a joint's angle or thickness ratio lies outside its table: taken as a point"),
-    "joints-near": ("caution", "less than 0.4 of a thickness of plain wall is left between two joints: moduli were up "
+    "joints-near": ("caution", "less than 0.5 of a thickness of plain wall is left between two joints: moduli were up "
                     "to 5 % off"),
     "joints-overlap": ("reject", "no plain wall is left between two joints: the joint model does not hold; use model "
                        "'solid'"),
-    "hinge-model": ("caution", "the ligaments are pure hinges: their stretch and the give of the units' corners "
-                    "are left out, so stiffness is an upper estimate"),
+    "hinge-model": ("caution", "the ligaments are pure hinges: without their stretch and shear and the give of the "
+                    "units' corners stiffness is an upper estimate, G12 and G at 45 deg several times too high"),
     "ligament-stubby": ("caution", f"the ligament is over {LIGAMENT_CAUTION:g} of its length thick: no flexure strip"),
     "sheet-model": ("caution", "bar-and-hinge model of a folded sheet: signs and ratios are sound, stiffness "
                     "may be off by a factor of 2.6 against a full shell"),
@@ -181,10 +181,13 @@ class Results:
     @cached_property
     def bounds(self) -> bounds.Report:
         """Values over bounds."""
-        modulus, poisson = self.parent.modulus_MPa, self.parent.poisson
-        if self.kind == "planar":
-            modulus, poisson = self.parent.wall_modulus_MPa, self.parent.wall_poisson
-        return bounds.report(self.stiffness, self.density, modulus, poisson, sheet=self.kind == "sheet")
+        poisson = self.parent.wall_poisson if self.kind == "planar" else self.parent.poisson
+        return bounds.report(self.stiffness, self.density, self.bound_modulus, poisson, sheet=self.kind == "sheet")
+
+    @property
+    def bound_modulus(self) -> float:
+        """The parent's modulus that bounds are of: in plane strain that of deep walls."""
+        return self.parent.wall_modulus_MPa if self.kind == "planar" else self.parent.modulus_MPa
 
     @cached_property
     def yields(self) -> Array:
@@ -453,7 +456,7 @@ _ALL_COLUMNS = (
     Column("E1_per_hexagon", "E1 over that of the regular hexagonal honeycomb of equal density and parent", ALL,
            lambda r: r.young(0) / r.hexagon),
     Column("E1_per_bound", "E1 over the Voigt bound, relative density times the parent's modulus", ALL,
-           lambda r: r.young(0) / (r.density * r.parent.modulus_MPa)),
+           lambda r: r.young(0) / (r.density * r.bound_modulus)),
     Column("E1_per_hashin_shtrikman", "E1 over the Hashin-Shtrikman bound (isotropic cells only)", ALL,
            lambda r: r.bounds.young_ratio),
     Column("voigt_ratio", "largest stiffness over the Voigt bound, of any strain", ALL, lambda r: r.bounds.voigt_ratio),
