@@ -1,9 +1,7 @@
 """The brief: a requirement in TOML, read and checked whole before anything is computed.
 
-    title, material, process, part, limits on any output column, rank, and candidates: families with each parameter
-    fixed, listed, spanned ({from, to, count}) or sampled ({from, to, sampled = true}; Sobol points with a seed).
-
-Candidates are numbered and made from their number alone, so any slice of them can be had at any time.
+title, material, process, part, limits on any output column, rank, and candidates: families with each parameter
+fixed, listed, spanned ({from, to, count}) or sampled ({from, to, sampled = true}; Sobol points with a seed).
 """
 
 from __future__ import annotations
@@ -16,19 +14,19 @@ import tomllib
 from collections.abc import Iterator, Mapping, Sequence
 from contextlib import contextmanager
 from dataclasses import dataclass, field
-from functools import cached_property
 from pathlib import Path
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
+from homog.candidates import Candidates, Span
 from homog.cell import Kind
 from homog.columns import column
 from homog.effective import DEFAULT_MODEL
 from homog.elements import check_model
 from homog.errors import InputError, unknown
-from homog.families import Family, family
+from homog.families import family
 from homog.materials import UNIT, Material, Process, material, process
 
 KEYS = {
@@ -40,8 +38,8 @@ KEYS = {
 }
 CANDIDATE_KEYS = ("family", "samples", "seed")
 MOST_KEPT = 200
-MOST_CANDIDATES = 2_000_000
-"""One candidate with all its columns takes about 1.6 kB while a screen runs."""
+MOST_CANDIDATES = 1_000_000_000
+"""Sobol' points are numbered with SOBOL_BITS digits; a screen of so many takes days and some 300 GB."""
 _STATEMENT = re.compile(r"""\s*(\[|[\w"'][^=]*=)""")
 
 
@@ -84,43 +82,6 @@ class Goal:
 
 
 @dataclass(frozen=True)
-class Candidates:
-    """Numbered candidates of one family: the product of listed values, times the Sobol samples of sampled ranges."""
-
-    family: Family
-    words: Mapping[str, str]
-    listed: Mapping[str, tuple[float, ...]]
-    sampled: Mapping[str, tuple[float, float]]
-    samples: int = 1
-    seed: int = 0
-
-    @property
-    def count(self) -> int:
-        """How many candidates there are."""
-        return math.prod(len(values) for values in self.listed.values()) * self.samples
-
-    @cached_property
-    def _points(self) -> NDArray[np.float64]:
-        from scipy.stats import qmc
-
-        sobol = qmc.Sobol(len(self.sampled), scramble=True, rng=np.random.default_rng(self.seed))
-        return np.asarray(sobol.random_base2(math.ceil(math.log2(max(self.samples, 1))))[: self.samples])
-
-    def take(self, start: int, stop: int) -> dict[str, Any]:
-        """Return the parameters of candidates start to stop - 1, arrays by name."""
-        number = np.arange(start, min(stop, self.count))
-        given: dict[str, Any] = dict(self.words)
-        grid, sample = np.divmod(number, self.samples)
-        sizes = [len(values) for values in self.listed.values()]
-        where = np.unravel_index(grid, sizes) if sizes else ()
-        for (name, values), index in zip(self.listed.items(), where, strict=True):
-            given[name] = np.asarray(values)[index]
-        for axis, (name, (low, high)) in enumerate(self.sampled.items()):
-            given[name] = low + (high - low) * self._points[sample, axis]
-        return given
-
-
-@dataclass(frozen=True)
 class Brief:
     """A requirement, checked."""
 
@@ -138,9 +99,20 @@ class Brief:
     text: str = field(repr=False, default="")
 
     @property
+    def known(self) -> dict[str, Any]:
+        """What columns may know of the brief (`columns.quantities`)."""
+        return {"part": self.part, "limits": {limit.column: (limit.low, limit.high) for limit in self.limits}}
+
+    @property
     def count(self) -> int:
         """How many candidates the brief describes."""
         return sum(c.count for c in self.candidates)
+
+
+def bare_brief(candidates: Sequence[Candidates], material: Material, model: str) -> Brief:
+    """Return a brief that asks for nothing: these candidates of this parent, without limits."""
+    goal = Goal("density_kg_m3", "min")
+    return Brief("sweep", material, Process("no process"), (), (goal,), False, 1, 1, (), model, tuple(candidates))
 
 
 def read_brief(path: str | Path) -> Brief:
@@ -390,7 +362,7 @@ class _Reader:
         samples = self._count(given.get("samples", 1), "samples", 1, MOST_CANDIDATES, *here, "samples")
         seed = self._count(given.get("seed", 0), "seed", 0, 2**63 - 1, *here, "seed")
         words: dict[str, list[str]] = {}
-        listed: dict[str, tuple[float, ...]] = {}
+        listed: dict[str, tuple[float, ...] | Span] = {}
         sampled: dict[str, tuple[float, float]] = {}
         known = [p.name for p in found.parameters]
         for name, spec in given.items():
@@ -408,8 +380,8 @@ class _Reader:
                 sampled[name] = self._span(spec, "sampled", *here, name)
                 tried = [list(sampled[name])]
             else:
-                listed[name] = self._listed(spec, *here, name)
-                tried = [list(listed[name])]
+                values = listed[name] = self._listed(spec, *here, name)
+                tried = [[values.low, values.high] if isinstance(values, Span) else list(values)]
             for value in tried:
                 with self.at(*here, name):
                     found.values({name: value})
@@ -436,12 +408,12 @@ class _Reader:
             raise self.fault(f"'{name}': empty range, from {low:g} is above to {high:g}; swap them", *place)
         return low, high
 
-    def _listed(self, spec: Any, *place: str | int) -> tuple[float, ...]:
+    def _listed(self, spec: Any, *place: str | int) -> tuple[float, ...] | Span:
         name = place[-1]
         if isinstance(spec, dict):
             low, high = self._span(spec, "count", *place)
             count = self._count(spec["count"], f"'{name}' count", 1, MOST_CANDIDATES, *place, "count")
-            return tuple(np.linspace(low, high, count).tolist())
+            return Span(low, high, count)
         if isinstance(spec, list):
             return tuple(self._number(value, f"'{name}'", *place, i) for i, value in enumerate(spec))
         return (self._number(spec, f"'{name}'", *place),)

@@ -12,8 +12,7 @@ import os
 import re
 import signal
 import sys
-from collections.abc import Callable, Iterator, Sequence
-from contextlib import contextmanager
+from collections.abc import Sequence
 from itertools import product
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated, Any
@@ -22,11 +21,14 @@ import typer
 
 from homog import __version__
 from homog.errors import HomogError, InputError
+from homog.terminal import Stopped, kept, progress, teller
 
 if TYPE_CHECKING:
+    from pandas import DataFrame
     from rich.console import Console
     from rich.table import Table
 
+    from homog.brief import Brief
     from homog.effective import Effective
     from homog.families import Family
     from homog.materials import Material
@@ -54,6 +56,7 @@ MaterialName = Annotated[
 Modulus = Annotated[str | None, typer.Option("--modulus", metavar="MPA", help="Parent's Young's modulus, MPa.")]
 Poisson = Annotated[str | None, typer.Option("--poisson", metavar="NU", help="Parent's Poisson's ratio.")]
 SolidDensity = Annotated[str | None, typer.Option("--solid-density", metavar="KG_M3", help="Parent's density, kg/m3.")]
+Yield = Annotated[str | None, typer.Option("--yield", metavar="MPA", help="Parent's yield or strength, MPa.")]
 Deep = Annotated[
     bool, typer.Option("--deep", help="Planar cells deep along axis 3: plane strain instead of plane stress.")
 ]
@@ -68,9 +71,18 @@ Model = Annotated[
 Fillet = Annotated[
     float, typer.Option("--fillet", metavar="MM", help="Radius of inner corners, mm; model solid only, else sharp.")
 ]
+Quantity = Annotated[
+    str, typer.Option("--quantity", metavar="Q", help="stiffness (E, nu, G), or yield (first yield of a wall's fibre).")
+]
 Overwrite = Annotated[bool, typer.Option("--overwrite", help="Replace a file that is there already.")]
 FIGURES = (".svg", ".png", ".pdf")
 STOPPED = "homog: stopped; nothing was written"
+Processes = Annotated[
+    int, typer.Option("--workers", metavar="N", min=0, max=999, help="Processes; 0: one a core, fewer for a small job.")
+]
+Cluster = Annotated[
+    str, typer.Option("--cluster", metavar="ADDRESS", help="Dask scheduler (tcp://HOST:8786) to compute on instead.")
+]
 
 
 def _console() -> Console:
@@ -89,12 +101,19 @@ def _table(*headers: str, numeric: Sequence[str] = ()) -> Table:
     return table
 
 
-def _parent(name: str | None, modulus: str | None, poisson: str | None, density: str | None, deep: bool) -> Material:
+def _parent(
+    name: str | None,
+    modulus: str | None,
+    poisson: str | None,
+    density: str | None,
+    deep: bool,
+    strength: str | None = None,
+) -> Material:
     from homog.materials import UNIT, material
 
     values: dict[str, Any] = {}
     given = (("modulus_MPa", "--modulus", modulus), ("poisson", "--poisson", poisson),
-             ("density_kg_m3", "--solid-density", density))  # fmt: skip
+             ("density_kg_m3", "--solid-density", density), ("yield_MPa", "--yield", strength))  # fmt: skip
     for key, option, text in given:
         if text is not None:
             values[key] = _number(text, f"Option {option}", "give one number, such as 0.3 or 1600")
@@ -112,13 +131,12 @@ def _number(text: str, what: str, remedy: str) -> float:
         raise InputError(f"{what} = {text!r} is not a number; {remedy}") from None
 
 
-def _assigned(found: Family, words: Sequence[str] | None) -> dict[str, list[Any]]:
+def _assigned(found: Family, words: Sequence[str] | None) -> dict[str, Any]:
     """Return the numbers or words of each PARAM=VALUE, PARAM=A,B,C or PARAM=LOW:HIGH:COUNT, checked."""
-    import numpy as np
-
     from homog.brief import MOST_CANDIDATES
+    from homog.candidates import Span
 
-    given: dict[str, list[Any]] = {}
+    given: dict[str, Any] = {}
     for word in words or ():
         name, equals, text = word.partition("=")
         if not equals or not name or not text:
@@ -127,9 +145,10 @@ def _assigned(found: Family, words: Sequence[str] | None) -> dict[str, list[Any]
             raise InputError(f"Parameter '{name}' is given twice; give it once")
         what, remedy = f"Parameter '{name}'", f"write {name}=VALUE, in a sweep also LOW:HIGH:COUNT or A,B,C"
         if found.parameter(name).choices:
-            given[name] = text.split(",")
-            for choice in given[name]:
+            choices = text.split(",")
+            for choice in choices:
                 found.values({name: choice})
+            given[name] = choices
             continue
         if ":" in text:
             parts = text.split(":")
@@ -140,10 +159,11 @@ def _assigned(found: Family, words: Sequence[str] | None) -> dict[str, list[Any]
                 raise InputError(f"{what} = {text!r}: COUNT must be 1 (0 is an empty range) to {MOST_CANDIDATES:,}")
             if low > high:
                 raise InputError(f"{what} = {text!r}: an empty range, {low:g} is above {high:g}; swap them")
-            given[name] = np.linspace(low, high, count).tolist()
+            given[name] = Span(low, high, count)
+            found.values({name: [low, high]})
         else:
             given[name] = [_number(part, what, remedy) for part in text.split(",")]
-        found.values({name: given[name]})
+            found.values({name: given[name]})
     return given
 
 
@@ -151,15 +171,16 @@ def _one(family_id: str, words: Sequence[str] | None, parent: Material, model: s
     """Return one evaluated cell, as a batch of one but for a solid, so that a mechanism is reported and not raised."""
     import numpy as np
 
+    from homog.candidates import Span
     from homog.effective import homogenize
     from homog.families import family
 
     found = family(family_id)
-    given = {}
+    given: dict[str, Any] = {}
     for name, values in _assigned(found, words).items():
         if len(values) > 1:
             raise InputError(f"Parameter '{name}' has {len(values)} values; give one, or use 'homog sweep'")
-        given[name] = values[0]
+        given[name] = values.low if isinstance(values, Span) else values[0]
     cell = found.build(given, parent)  # raises where the cell cannot exist
     if model == "solid" or fillet != 0.0:
         return homogenize(cell, model=model, fillet=fillet)
@@ -257,6 +278,7 @@ def evaluate(
     modulus: Modulus = None,
     poisson: Poisson = None,
     solid_density: SolidDensity = None,
+    yield_stress: Yield = None,
     deep: Deep = False,
     model: Model = "joint",
     fillet: Fillet = 0.0,
@@ -271,7 +293,7 @@ def evaluate(
     from homog.columns import COLUMNS, reason_text
     from homog.report import WHAT_IT_IS, evaluation, number
 
-    parent = _parent(material, modulus, poisson, solid_density, deep)
+    parent = _parent(material, modulus, poisson, solid_density, deep, yield_stress)
     effective = _one(id, parameters, parent, model, fillet)
     card = evaluation(effective)
     given, quantities, stiffness = card["parameters"], card["columns"], np.array(card["stiffness"], float)
@@ -321,25 +343,27 @@ def polar(
     modulus: Modulus = None,
     poisson: Poisson = None,
     solid_density: SolidDensity = None,
+    yield_stress: Yield = None,
     deep: Deep = False,
     model: Model = "joint",
+    quantity: Quantity = "stiffness",
     overwrite: Overwrite = False,
 ) -> int:
-    """Draw E, nu and G of one cell against direction, with the cell beside them.
+    """Draw E, nu and G of one cell, or its first yield, against direction, with the cell beside them.
 
     Example: homog polar reentrant-honeycomb angle=-30 thickness=1 --material PLA --out bow-tie.png
     """
     from homog.families import family
-    from homog.report import check_free, whole_file
+    from homog.files import check_free, whole_file
 
     if out.suffix not in FIGURES:
         raise InputError(f"Figure '{out}' has the suffix '{out.suffix}'; allowed are {', '.join(FIGURES)}")
     check_free(out, overwrite=overwrite)
-    parent = _parent(material, modulus, poisson, solid_density, deep)
+    parent = _parent(material, modulus, poisson, solid_density, deep, yield_stress)
     effective = _one(id, parameters, parent, model)
     from homog import plots
 
-    figure = plots.polar_figure(effective, title=family(id).title)
+    figure = plots.polar_figure(effective, quantity=quantity, title=family(id).title)
     with whole_file(out, overwrite=overwrite) as temporary:
         plots.save(figure, temporary)
     print(f"wrote {out}")
@@ -360,43 +384,40 @@ def sweep(
     modulus: Modulus = None,
     poisson: Poisson = None,
     solid_density: SolidDensity = None,
+    yield_stress: Yield = None,
     deep: Deep = False,
     model: Model = "joint",
     overwrite: Overwrite = False,
+    workers: Processes = 0,
+    cluster: Cluster = "",
 ) -> int:
     """Evaluate all combinations of some parameters and write one row each, every output quantity a column.
 
     Example: homog sweep arrowhead outer_angle=20:40:21 inner_angle=50:80:31 --material PLA --out sweep.csv
     """
-    import pandas as pd
-
-    from homog.brief import MOST_CANDIDATES, Candidates
-    from homog.columns import table as tabulate
-    from homog.effective import homogenize
+    from homog.brief import MOST_CANDIDATES, bare_brief
+    from homog.candidates import Candidates
+    from homog.engine import Plan
+    from homog.engine import workers as started
     from homog.families import family
     from homog.report import check_table, provenance, write_table
-    from homog.screening import CHUNK
+    from homog.screening import sweep_tables
 
     check_table(out, overwrite=overwrite)
-    found, parent = family(id), _parent(material, modulus, poisson, solid_density, deep)
+    found, parent = family(id), _parent(material, modulus, poisson, solid_density, deep, yield_stress)
     given = _assigned(found, parameters)
     words = {name: values for name, values in given.items() if found.parameter(name).choices}
-    spans = {name: tuple(values) for name, values in given.items() if name not in words}
+    spans: dict[str, Any] = {name: values for name, values in given.items() if name not in words}
     choices = [dict(zip(words, choice, strict=True)) for choice in product(*words.values())]
     sources = [Candidates(found, choice, spans, {}) for choice in choices]
     count = sum(source.count for source in sources)
     if count > MOST_CANDIDATES:
         raise InputError(f"{count:,} combinations; at most {MOST_CANDIDATES:,} in one sweep: lower a COUNT")
-    parts = []
-    with _progress(count, f"sweeping {id}") as advance:
-        for source in sources:
-            for start in range(0, source.count, CHUNK):
-                cell = found.build(source.take(start, start + CHUNK), parent)
-                parts.append(tabulate(homogenize(cell if cell.shape else cell.at(None), model=model)))
-                advance(len(parts[-1]))
-    whole = pd.concat(parts, ignore_index=True)
-    write_table(whole, out, provenance(__version__, model, parent, family=id, rows=len(whole)), overwrite=overwrite)
-    print(f"wrote {out}: {len(whole):,} rows")
+    plan = Plan(bare_brief(sources, parent, model))
+    with started(workers, cluster, parts=len(plan)) as using, progress(count, f"sweeping {id}") as advance:
+        tables, whole = sweep_tables(plan, using, progress=advance)
+        write_table(tables, whole, out, provenance(__version__, model, parent, family=id), overwrite=overwrite)
+    print(f"wrote {out}: {count:,} rows")
     return 0
 
 
@@ -404,58 +425,66 @@ def sweep(
 def screen(
     brief: Annotated[Path, typer.Argument(metavar="BRIEF", help="The requirement, a TOML file.")],
     out: Annotated[Path, typer.Option("--out", metavar="FOLDER", help="New folder for tables, figures and summary.")],
+    resume: Annotated[bool, typer.Option("--resume", help="Go on with a run into FOLDER that has stopped.")] = False,
+    csv: Annotated[bool, typer.Option("--csv", help="Write candidates.csv whatever its size.")] = False,
+    solids: Annotated[bool, typer.Option(help="Look at the best again as solids, and rank by what they say.")] = True,
+    workers: Processes = 0,
+    cluster: Cluster = "",
 ) -> int:
     """Screen a brief: every candidate evaluated, the ones that meet it ranked, drawn and summed up.
 
-    Writes candidates.csv, shortlist.csv, a polar plot per shortlisted cell, a property chart, summary.md and a copy of
-    the brief. Exit status 3 if nothing meets it: the summary then says what is in the way.
+    Writes the candidates as Parquet parts below candidates/ (up to 100,000 also as candidates.csv), shortlist.csv, a
+    polar plot per shortlisted cell, a property chart, summary.md and a copy of the brief. FOLDER appears when all is
+    there; until then the run grows in FOLDER.partial, and --resume goes on with it after a stop of any kind.
+
+    Twice as many as are kept, 60 at most, are looked at again as solids of their true section where they are planar
+    walls and the extra `solid` is installed; the shortlist is ranked by the result and shows both numbers.
+
+    Exit status 3 if nothing meets the brief: the summary then says what is in the way.
     """
     from homog.brief import read_brief
-    from homog.report import whole_folder, write_screening
+    from homog.engine import Plan
+    from homog.engine import workers as started
+    from homog.files import whole_folder
+    from homog.recheck import MOST, missing_extra, second_look
+    from homog.report import write_screening
     from homog.screening import run_screen
+    from homog.store import Folder, has_parts
 
     asked = read_brief(brief)
-    with whole_folder(out) as place:
-        with _progress(asked.count, "screening") as advance:
-            found = run_screen(asked, progress=advance)
-        tell = _teller()
-        write_screening(found, place, version=__version__, brief_name=brief.name, progress=tell)
+    with kept(out), whole_folder(out, resume=resume, worth=has_parts) as place:
+        plan = Plan(asked)
+        parts = Folder(place, plan.about())
+        unlooked = "it was not asked for" if not solids else missing_extra() if asked.model != "solid" else ""
+
+        def second(best: DataFrame, asked: Brief) -> DataFrame:
+            with progress(min(len(best), MOST), "solids") as advance:
+                return second_look(best, asked, workers=workers, progress=advance)
+
+        looks = None if unlooked or asked.model == "solid" else second
+        there = len(parts.done())
+        with (
+            started(workers, cluster, parts=len(plan) - there) as using,
+            progress(asked.count, "screening", parts=parts, computing=using.words) as advance,
+        ):
+            found = run_screen(asked, parts=parts, using=using, progress=advance, second=looks)
+        tell = teller()
+        write_screening(found, place, version=__version__, brief_name=brief.name, csv=csv, progress=tell,
+                        unlooked=unlooked)  # fmt: skip
         tell("")
-    if not found.met:
+    if len(found.shortlist):
+        best = found.shortlist.iloc[0]
+        print(f"{found.met:,} of {asked.count:,} candidates meet the brief; "
+              f"first: {best['family']} (candidate {best['candidate']}).")  # fmt: skip
+    elif found.met:
+        print(f"{found.met:,} of {asked.count:,} candidates meet the brief by the screen's model, none of the best as "
+              "a solid.")  # fmt: skip
+    else:
         worst = max(found.falls, key=lambda fall: fall.missed, default=None)
         why = f"most miss: {worst.limit.words}" if worst and worst.missed else "every one is rejected"
         print(f"nothing of {asked.count:,} candidates meets the brief; {why}.")
-        print(f"Results: {out / 'summary.md'}")
-        return 3
-    best = found.shortlist.iloc[0]
-    print(
-        f"{found.met:,} of {asked.count:,} candidates meet the brief; "
-        f"first: {best['family']} (candidate {best['candidate']})."
-    )
     print(f"Results: {out / 'summary.md'}")
-    return 0
-
-
-@contextmanager
-def _progress(total: int, words: str) -> Iterator[Callable[[int], None]]:
-    """Show a progress bar on a terminal, nothing in a pipe; yield a function that takes the number just done."""
-    if not sys.stderr.isatty():
-        yield lambda done: None
-        return
-    from rich.console import Console
-    from rich.progress import BarColumn, MofNCompleteColumn, Progress, TextColumn, TimeRemainingColumn
-
-    columns = (TextColumn("{task.description}"), BarColumn(), MofNCompleteColumn(), TimeRemainingColumn())
-    with Progress(*columns, console=Console(stderr=True), transient=True) as bar:
-        task = bar.add_task(words, total=total)
-        yield lambda done: bar.advance(task, done)
-
-
-def _teller() -> Any:
-    """Return a function that shows what is being written, on a terminal only."""
-    if not sys.stderr.isatty():
-        return lambda step: None
-    return lambda step: print(f"\r\033[K{f'writing {step}' if step else ''}", end="", file=sys.stderr, flush=True)
+    return 0 if len(found.shortlist) else 3
 
 
 @app.callback(invoke_without_command=True)
@@ -474,6 +503,9 @@ def main(argv: Sequence[str] | None = None) -> int:
         if status == 130:  # what the parser makes of an interrupt, or else an Abort
             print(STOPPED, file=sys.stderr)
         return int(status or 0)
+    except Stopped as stop:
+        print(f"homog: {stop}", file=sys.stderr)
+        return stop.status
     except HomogError as error:
         print(f"homog: {' '.join(str(error).split())}", file=sys.stderr)
         return 2

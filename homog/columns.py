@@ -24,6 +24,7 @@ from homog.effective import Effective, Flag, homogenize, soft_mode
 from homog.errors import unknown
 from homog.families import FAMILIES
 from homog.materials import Material
+from homog.stress import BEAMS, sections, unit_stresses
 from homog.tensors import compliance_to_voigt, stiffness_to_voigt
 
 if TYPE_CHECKING:
@@ -36,6 +37,7 @@ Limits = Mapping[str, tuple[float, float]]
 PLANAR: tuple[Kind, ...] = ("planar",)
 SHEET: tuple[Kind, ...] = ("sheet",)
 SPATIAL: tuple[Kind, ...] = ("spatial",)
+WALLED: tuple[Kind, ...] = ("planar", "spatial")
 ALL: tuple[Kind, ...] = ("planar", "sheet", "spatial")
 
 SLENDER_CAUTION, SLENDER_REJECT = 0.05, 0.25
@@ -44,8 +46,11 @@ COUPLING_CAUTION = 0.1
 REACH_CAUTION_DEG = 5.0
 SINGULAR_CAUTION = 1e-6
 CELLS_CAUTION = 4.0
+PANEL_POISSON = 0.1
 HEXAGON_POINTS = 32
 
+FIRST_YIELD = "first yield of a beam's extreme fibre"
+CORNERS = "inner corners of the solid see more"
 VOIGT_PAIRS = (("11", 0, 0), ("12", 0, 1), ("16", 0, 2), ("22", 1, 1), ("26", 1, 2), ("66", 2, 2))
 
 REASONS: Mapping[str, tuple[str, str]] = {
@@ -76,6 +81,8 @@ REASONS: Mapping[str, tuple[str, str]] = {
     "ligament-stubby": ("caution", f"the ligament is over {LIGAMENT_CAUTION:g} of its length thick: no flexure strip"),
     "sheet-model": ("caution", "bar-and-hinge model of a folded sheet: signs and ratios are sound, stiffness "
                     "may be off by a factor of 2.6 against a full shell"),
+    "panels-unbraced": ("reject", f"a parent's Poisson's ratio under {PANEL_POISSON:g}: the diagonal bars of a panel, "
+                        "proportional to it, hold hardly any shear; give a larger one"),
     "internal-mechanism": ("caution", "joints can move at no energy, although no uniform strain is free"),
     "near-singular": ("caution", f"the softest strain is under {SINGULAR_CAUTION:g} of the stiffest: flaws decide"),
     "coupled": ("caution", "stretch along the axes comes with shear (eta1_12): a strip must be free to shear"),
@@ -173,6 +180,14 @@ class Results:
             modulus, poisson = self.parent.wall_modulus_MPa, self.parent.wall_poisson
         return bounds.report(self.stiffness, self.density, modulus, poisson, sheet=self.kind == "sheet")
 
+    @cached_property
+    def yields(self) -> Array:
+        """Stress at first yield of a beam's fibre, MPa, (count, v) in Voigt's order; NaN without yield or sections."""
+        beams = bool(self.cell.blocks) and all(block.kind in BEAMS for block in self.cell.blocks)
+        if self.kind == "sheet" or not beams or np.isnan(self.parent.yield_MPa):
+            return np.full((self.count, self.stiffness.shape[-1]), np.nan)
+        return np.asarray(self.parent.yield_MPa / sections(self.effective).peak(unit_stresses(self.cell.d)))
+
     def young(self, i: int) -> Array:
         return np.asarray(1.0 / self.voigt[:, i, i])
 
@@ -226,11 +241,12 @@ class Results:
         return np.asarray((np.asarray(self.part[:axes]) / self.size[:, :axes]).min(axis=-1))
 
     @cached_property
-    def soft_modes(self) -> list[str]:
-        modes = [""] * self.count
+    def soft_modes(self) -> Words:
+        """The soft mode of each member that has one."""
+        codes, words = np.zeros(self.count, np.int64), {"": 0}
         for i in np.flatnonzero(self.status == Status.MECHANISM):
-            modes[i] = soft_mode(self.stiffness[i], self.kind)
-        return modes
+            codes[i] = words.setdefault(soft_mode(self.stiffness[i], self.kind), len(words))
+        return Words(codes, tuple(words))
 
     @cached_property
     def reasons(self) -> dict[str, Mask]:
@@ -265,6 +281,7 @@ class Results:
         found["joints-overlap"] = live & ((flags & Flag.JOINTS_OVERLAP) > 0)
         found["ligament-stubby"] = live & ("hinge" in kinds) & (slenderness > LIGAMENT_CAUTION)
         found["hinge-model"] = live & ("hinge" in kinds)
+        found["panels-unbraced"] = live & ("fold" in kinds) & (self.parent.poisson < PANEL_POISSON)
         found["sheet-model"] = live & ("fold" in kinds)
         found["internal-mechanism"] = live & (self.effective.mechanisms.reshape(-1) > 0)
         found["near-singular"] = live & (self.bounds.stability < SINGULAR_CAUTION)
@@ -283,19 +300,27 @@ class Results:
         masks = [mask for code, mask in self.reasons.items() if reason_level(code) == level]
         return np.logical_or.reduce(masks) if masks else np.zeros(self.count, bool)
 
-    def reason_words(self) -> NDArray[Any]:
-        """Reason codes of each member, joined by blanks."""
-        return listed(self.reasons, self.count)
+
+@dataclass(frozen=True, eq=False)
+class Words:
+    """Text of m members, of few different words: `words[codes]`."""
+
+    codes: NDArray[np.int64]
+    words: tuple[str, ...]
+
+    def spelled(self) -> NDArray[Any]:
+        """Return the text of each member (object array)."""
+        return np.array(self.words, dtype=object)[self.codes]
 
 
-def listed(masks: Mapping[str, Mask], count: int) -> NDArray[Any]:
-    """Return for each of `count` members the names whose mask is true there, joined by blanks (object array)."""
+def listed(masks: Mapping[str, Mask], count: int) -> Words:
+    """Return for each of `count` members the names whose mask is true there, joined by blanks."""
     bits = np.zeros(count, np.int64)
     for bit, mask in enumerate(masks.values()):
         bits |= mask.astype(np.int64) << bit
     patterns, where = np.unique(bits, return_inverse=True)
-    words = [" ".join(name for bit, name in enumerate(masks) if pattern >> bit & 1) for pattern in patterns]
-    return np.array(words, dtype=object)[where]
+    words = (" ".join(name for bit, name in enumerate(masks) if pattern >> bit & 1) for pattern in patterns)
+    return Words(where, tuple(words))
 
 
 def reason_level(code: str) -> str:
@@ -321,8 +346,9 @@ class Column:
     name: str
     meaning: str
     kinds: tuple[Kind, ...]
-    of: Callable[[Results], NDArray[Any]]
+    of: Callable[[Results], NDArray[Any] | Words]
     text: bool = False
+    whole: bool = False
 
 
 def _extreme(name: str) -> Callable[[Results], Array]:
@@ -337,13 +363,17 @@ def _bending(i: int, j: int) -> Callable[[Results], Array]:
     return lambda r: np.asarray(-r.compliance[:, 3 + j, 3 + i] / r.compliance[:, 3 + i, 3 + i])
 
 
+def _yield(i: int) -> Callable[[Results], Array]:
+    return lambda r: np.asarray(r.yields[:, i])
+
+
 def _sheet_coupling(r: Results) -> Array:
     size = np.sqrt(np.diagonal(r.stiffness, axis1=-2, axis2=-1))
     return np.asarray((np.abs(r.stiffness[:, :3, 3:]) / (size[:, :3, None] * size[:, None, 3:])).max(axis=(-1, -2)))
 
 
-def _verdict(r: Results) -> NDArray[Any]:
-    return np.where(r.worst("reject"), "reject", np.where(r.worst("caution"), "caution", "ok")).astype(object)
+def _verdict(r: Results) -> Words:
+    return Words(np.where(r.worst("reject"), 2, r.worst("caution").astype(np.int64)), ("ok", "caution", "reject"))
 
 
 _ALL_COLUMNS = (
@@ -395,6 +425,14 @@ _ALL_COLUMNS = (
     Column("voigt_ratio", "largest stiffness over the Voigt bound, of any strain", ALL, lambda r: r.bounds.voigt_ratio),
     Column("hashin_shtrikman_ratio", "largest of K and G over the Hashin-Shtrikman bound (isotropic cells only)", ALL,
            lambda r: r.bounds.hashin_shtrikman_ratio),
+    Column("yield_1_MPa", f"pull along 1 at {FIRST_YIELD} (|N|/A + |M|/W, twist by von Mises, no shear); {CORNERS}",
+           WALLED, _yield(0)),
+    Column("yield_2_MPa", f"pull along 2 at {FIRST_YIELD}; {CORNERS}", WALLED, _yield(1)),
+    Column("yield_3_MPa", f"pull along 3 at {FIRST_YIELD}; {CORNERS}", SPATIAL, _yield(2)),
+    Column("yield_12_MPa", f"shear in the plane 1-2 at {FIRST_YIELD}; {CORNERS}", WALLED, _yield(-1)),
+    Column("yield_13_MPa", f"shear in the plane 1-3 at {FIRST_YIELD}; {CORNERS}", SPATIAL, _yield(4)),
+    Column("yield_23_MPa", f"shear in the plane 2-3 at {FIRST_YIELD}; {CORNERS}", SPATIAL, _yield(3)),
+    Column("yield_strain_1", "strain along 1 at yield_1_MPa", WALLED, lambda r: r.yields[:, 0] / r.young(0)),
     Column("slenderness", "largest thickness over length in the cell", ALL, lambda r: r.flat(r.cell.slenderness)),
     Column("thinnest_mm", "thinnest wall, strut, ligament or sheet to be made", ALL, lambda r: r.flat(r.cell.thinnest)),
     Column("cell_1_mm", "repeat along axis 1", ALL, lambda r: r.size[:, 0]),
@@ -403,11 +441,14 @@ _ALL_COLUMNS = (
     Column("largest_cell_mm", "largest repeat", ALL, lambda r: r.size[:, : r.cell.p].max(axis=-1)),
     Column("height_mm", "thickness of the slab that holds the sheet", SHEET, lambda r: r.flat(r.cell.height)),
     Column("cells_across", "fewest repeats across the part, if its size is given", ALL, lambda r: r.cells_across),
-    Column("mechanisms", "motions that cost no energy", ALL, lambda r: r.effective.mechanisms.reshape(-1)),
-    Column("soft_mode", "the uniform strain that costs no energy", ALL,
-           lambda r: np.array(r.soft_modes, dtype=object), text=True),
+    Column("mechanisms", "motions that cost no energy", ALL, lambda r: r.effective.mechanisms.reshape(-1),
+           whole=True),
+    Column("model", "what the numbers come from: euler, timoshenko, joint or solid", ALL,
+           lambda r: Words(np.zeros(r.count, np.int64), (r.effective.model,)), text=True),
+    Column("soft_mode", "the uniform strain that costs no energy", ALL, lambda r: r.soft_modes, text=True),
     Column("verdict", "ok, caution or reject", ALL, _verdict, text=True),
-    Column("reasons", "codes of what speaks against the cell or its model", ALL, Results.reason_words, text=True),
+    Column("reasons", "codes of what speaks against the cell or its model", ALL,
+           lambda r: listed(r.reasons, r.count), text=True),
 )  # fmt: skip
 
 COLUMNS: Mapping[str, Column] = MappingProxyType({column.name: column for column in _ALL_COLUMNS})
@@ -436,14 +477,14 @@ def parameter_columns(effective: Effective) -> dict[str, NDArray[Any]]:
     }
 
 
-def evaluate(
+def quantities(
     effective: Effective,
     names: Sequence[str] | None = None,
     *,
     part: Sequence[float] = (),
     limits: Limits | None = None,
-) -> dict[str, Any]:
-    """Return family, parameters and output quantities as flat arrays by column name.
+) -> dict[str, NDArray[Any] | Words]:
+    """Return family, parameters and output quantities by column name: flat arrays of numbers, text as `Words`.
 
     Parameters
     ----------
@@ -455,14 +496,12 @@ def evaluate(
         Size of the part along the axes, mm, for `cells_across`.
     limits : mapping of str to (float, float)
         Least and largest value allowed of columns, for the reason `limit-within-band`.
-
-    Returns
-    -------
-    dict of str to ndarray of shape (m,)
     """
     results = Results(effective, part, limits)
     wanted = columns_of(effective.kind) if names is None else list(names)
-    out: dict[str, Any] = {"family": np.full(results.count, effective.cell.family, dtype=object)}
+    out: dict[str, NDArray[Any] | Words] = {
+        "family": Words(np.zeros(results.count, np.int64), (effective.cell.family,))
+    }
     out.update(parameter_columns(effective))
     with np.errstate(all="ignore"):
         for name in wanted:
@@ -472,8 +511,14 @@ def evaluate(
     return out
 
 
-def table(effective: Effective, names: Sequence[str] | None = None, *, part: Sequence[float] = ()) -> pd.DataFrame:
+def evaluate(effective: Effective, names: Sequence[str] | None = None, **known: Any) -> dict[str, Any]:
+    """Return `quantities`, of what is `known` too, with text spelled out: ndarrays of shape (m,) by column name."""
+    found = quantities(effective, names, **known)
+    return {name: values.spelled() if isinstance(values, Words) else values for name, values in found.items()}
+
+
+def table(effective: Effective, names: Sequence[str] | None = None, **known: Any) -> pd.DataFrame:
     """Return `evaluate` as a DataFrame, one row a member."""
     import pandas as pd
 
-    return pd.DataFrame(evaluate(effective, names, part=part))
+    return pd.DataFrame(evaluate(effective, names, **known))

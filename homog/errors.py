@@ -31,6 +31,11 @@ class MissingExtra(HomogError, ImportError):
 
     def __init__(self, feature: str, extra: str) -> None:
         super().__init__(f"{feature} needs the extra '{extra}': pip install 'homog-cells[{extra}]'")
+        self.given = feature, extra
+
+    def __reduce__(self) -> tuple[type[MissingExtra], tuple[str, str]]:
+        """Travel from a worker process as what it was made from."""
+        return MissingExtra, self.given
 
 
 def unknown(what: str, got: str, known: Iterable[str], remedy: str = "") -> InputError:

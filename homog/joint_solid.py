@@ -22,6 +22,8 @@ PLAIN = 1.2
 """Plain wall between an inner corner and the cut, in thicknesses: from 0.6 on the result changes by less than 1e-3."""
 FINE = 0.5
 """Element size over the solid model's."""
+SAME = 1e-9
+"""Gaps (rad) and thickness ratios within this are equal."""
 SOLVED_AT = 0.3
 """Poisson's ratio at which a star is solved; what it is at others follows from the stresses there."""
 
@@ -114,7 +116,29 @@ def correction(gaps: Array, thickness: Array, *, fillet: float = 0.0, size: floa
     angles = np.concatenate([[0.0], np.cumsum(gaps[:-1])])
     solid, cuts = solid_flexibility(angles, thickness, fillet=fillet, size=size)
     zero, one = (star_flexibility(angles, cuts, thickness, np.array(1.0), np.array(nu)) for nu in (0.0, 1.0))
-    return np.stack([carried(solid[0] - zero, -cuts), carried(solid[1] - (one - zero), -cuts)])
+    return _symmetric(
+        np.stack([carried(solid[0] - zero, -cuts), carried(solid[1] - (one - zero), -cuts)]), gaps, thickness
+    )
+
+
+def _symmetric(delta: Array, gaps: Array, thickness: Array) -> Array:
+    """Return the mean of a correction over the joint's own symmetries: a mesh has none of them.
+
+    Seen from another wall or in a mirror the same joint takes the same forces in another order; forces on all walls
+    (`held_forces` about the point) turn into each other by a permutation, and by a sign across and in rotation.
+    """
+    n = len(gaps)
+    angles = np.concatenate([[0.0], np.cumsum(gaps[:-1])])
+    every = np.concatenate([held_forces(angles, np.zeros(n)), np.eye(3 * n - 3)]).reshape(n, 3, -1)
+    seen = []
+    for mirror in (1, -1):
+        for start in range(n):
+            order = (start + np.arange(n) * mirror) % n
+            g = gaps[order] if mirror > 0 else gaps[(order - 1) % n]
+            if np.allclose(g, gaps, rtol=0.0, atol=SAME) and np.allclose(thickness[order], thickness, rtol=SAME):
+                R = (every[order] * np.array([1.0, mirror, mirror])[:, None])[1:].reshape(3 * n - 3, -1)
+                seen.append(R.T @ delta @ R)
+    return np.asarray(np.mean(seen, axis=0))
 
 
 def cached_correction(gaps: Array, thickness: Array) -> Array:

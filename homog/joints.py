@@ -321,7 +321,8 @@ def with_joints(cell: UnitCell) -> tuple[UnitCell, Mask, Array]:
         first = np.argsort(np.mod(angles[:, sound], TURN), kind="stable")  # the order round a joint is the topology's
         walls, ends, angles = walls[first], ends[first], angles[first]
         gaps = np.mod(np.roll(angles, -1, axis=0) - angles, TURN)
-        gaps = np.where(np.abs(gaps.sum(axis=0) - TURN) < 1e-6, gaps, np.nan)  # another order: no such joint
+        there = (np.abs(gaps.sum(axis=0) - TURN) < 1e-6) & (cell.status == Status.OK)
+        gaps = np.where(there, gaps, np.nan)  # another order, or no cell at all: no such joint
         _swallow(plain, walls, gaps, t[walls])
         order, delta, missed = corrections(gaps, t[walls], nu[walls[0]])
         outside |= missed
@@ -331,6 +332,7 @@ def with_joints(cell: UnitCell) -> tuple[UnitCell, Mask, Array]:
         tips = half * np.exp(1j * angles)
         R = _turns(angles - np.angle(tips[1] - tips[0]))
         weight = np.linalg.inv(R @ np.moveaxis(F, -1, 0) @ np.swapaxes(R, -1, -2))
+        weight = (weight + np.swapaxes(weight, -1, -2)) / 2.0  # round-off of the stretch counts beside the bending
         shifts = -shifts_of[walls, ends]  # of the wall's middle, seen from this end
         nodes, images, weights = joints.setdefault(len(walls), ([], [], []))
         nodes.append(walls)

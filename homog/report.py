@@ -1,39 +1,36 @@
 """What is handed over: tables, figures, a summary in an engineer's words, and the provenance beside them.
 
-Files appear whole or not at all: a screening is written into a hidden folder beside its place and renamed at the end.
-Results that are already there are never overwritten unless that is asked for.
+Every number a reader sees in words is made here; the candidates themselves are written by `store`, as they come.
 """
 
 from __future__ import annotations
 
 import dataclasses
-import errno
-import hashlib
 import json
 import math
-import os
 import platform
 import re
-import shutil
-import tempfile
-from collections import Counter
-from collections.abc import Callable, Collection, Iterator, Mapping, Sequence
-from contextlib import contextmanager, suppress
+from collections.abc import Callable, Iterable, Mapping, Sequence
 from datetime import UTC, datetime
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
+import pyarrow as pa
 import scipy
 
 from homog.brief import Brief
 from homog.cell import UnitCell
 from homog.columns import COLUMNS, evaluate, reason_level, reason_text
 from homog.effective import Effective, homogenize
-from homog.errors import InputError, MissingExtra
+from homog.engine import Plan
+from homog.errors import InputError
 from homog.families import FAMILIES
+from homog.files import check_free, whole_file
 from homog.materials import CONFIRM, Material
+from homog.recheck import SCREENED, given
 from homog.screening import Screening, records
+from homog.store import sha256, write_tables
 from homog.tensors import stiffness_to_voigt
 
 if TYPE_CHECKING:
@@ -44,103 +41,11 @@ WHAT_IT_IS = (
     "and hinge models. Screening only, not design evidence: where failure can hurt someone, local codes and licensed "
     "practice decide."
 )
-TABLE_FORMAT = "%.8g"
 TABLES = (".csv", ".parquet")
-FULL = (errno.ENOSPC, errno.EDQUOT, errno.EFBIG)
+MOST_CSV = 100_000
+"""Candidates up to which a screen writes candidates.csv unasked, some 60 MB."""
 ZERO = 1e-12
 SHOWN = ("density_kg_m3", "E1_MPa", "nu12", "auxetic_reach_deg", "E1_per_hexagon")
-
-
-@contextmanager
-def _writing(place: Path, only: Collection[int] = ()) -> Iterator[None]:
-    """Turn the system's word that a place cannot be written to (only these error numbers) into an InputError."""
-    try:
-        yield
-    except OSError as error:
-        if only and error.errno not in only:
-            raise
-        reason = error.strerror or str(error)
-        raise InputError(f"Cannot write '{place}': {reason}; choose another place or make room") from error
-
-
-def check_free(path: Path, *, overwrite: bool = False) -> None:
-    """Raise InputError where a file may not go: it is there (unless `overwrite`), is a folder, or has no folder."""
-    with _writing(path):
-        if path.is_dir():
-            raise InputError(f"'{path}' is a folder; give the name of a file")
-        if path.exists() and not overwrite:
-            raise InputError(f"File '{path}' is there already; choose another name or add --overwrite")
-        if not os.access(path.parent, os.W_OK):
-            raise InputError(f"Cannot write '{path}': no folder '{path.parent}' that may be written to; make it first")
-
-
-@contextmanager
-def whole_file(path: Path, *, overwrite: bool = False) -> Iterator[Path]:
-    """Yield a temporary path beside `path`, renamed to it if the block succeeds and removed if not.
-
-    Raises
-    ------
-    InputError
-        As `check_free`, and for a folder that cannot be written to or is full.
-    """
-    check_free(path, overwrite=overwrite)
-    with _writing(path):
-        handle, name = tempfile.mkstemp(dir=path.parent, prefix=f".{path.stem}.", suffix=path.suffix)
-        os.close(handle)
-    temporary = Path(name)
-    try:
-        with _writing(path, FULL):
-            yield temporary
-        with _writing(path):
-            temporary.chmod(0o666 & ~_umask())
-            os.replace(temporary, path)
-    finally:
-        temporary.unlink(missing_ok=True)
-
-
-def _umask() -> int:
-    mask = os.umask(0)
-    os.umask(mask)
-    return mask
-
-
-@contextmanager
-def whole_folder(folder: Path) -> Iterator[Path]:
-    """Yield a hidden folder whose contents become those of `folder` if the block succeeds, and nothing if not.
-
-    A new folder appears by one renaming; into an empty one that is there (it may be a mount) the contents are moved.
-
-    Raises
-    ------
-    InputError
-        For a folder that already holds something, or a place that cannot be written to or is full.
-    """
-    name, folder = str(folder), Path(os.path.abspath(folder))
-    with _writing(folder):
-        there = folder.exists()
-        files = [place for place in (folder, *folder.parents) if place.is_file()]
-        if files:
-            raise InputError(f"Cannot write to '{name}': '{files[0]}' is a file; give the name of a new folder")
-        if there and any(folder.iterdir()):
-            raise InputError(f"Folder '{name}' already holds results; choose another name or remove it first")
-        made = [parent for parent in folder.parents if not parent.exists()]
-        folder.parent.mkdir(parents=True, exist_ok=True)
-        temporary = Path(tempfile.mkdtemp(dir=folder if there else folder.parent, prefix=f".{folder.name}."))
-    try:
-        with _writing(folder, FULL):
-            yield temporary
-        with _writing(folder):
-            if there:
-                for entry in list(temporary.iterdir()):
-                    os.replace(entry, folder / entry.name)
-            else:
-                temporary.chmod(0o777 & ~_umask())
-                os.replace(temporary, folder)
-    finally:
-        shutil.rmtree(temporary, ignore_errors=True)
-        for parent in made:  # innermost first; one that holds the results stays
-            with suppress(OSError):
-                parent.rmdir()
 
 
 def provenance(version: str, model: str, material: Material, **more: Any) -> dict[str, Any]:
@@ -202,56 +107,57 @@ def check_table(path: Path, *, overwrite: bool = False) -> Path:
     return beside
 
 
-def write_table(table: pd.DataFrame, path: Path, meta: Mapping[str, Any], *, overwrite: bool = False) -> None:
-    """Write a table as CSV or Parquet by its suffix, whole or not at all, and its provenance to NAME.meta.json.
+def write_table(
+    tables: Iterable[pa.Table], whole: pa.Schema, path: Path, meta: Mapping[str, Any], *, overwrite: bool = False
+) -> int:
+    """Write tables of one schema into one file, CSV or Parquet by its suffix, and their provenance to NAME.meta.json.
+
+    All of it or nothing; `rows` is added to the provenance, and returned.
 
     Raises
     ------
     InputError
         For another suffix, or a file that is there already.
-    MissingExtra
-        For Parquet without pyarrow.
     """
     beside = check_table(path, overwrite=overwrite)
-    with whole_file(path, overwrite=overwrite) as temporary:
-        if path.suffix == ".csv":
-            table.to_csv(temporary, index=False, float_format=TABLE_FORMAT)
-        else:
-            try:
-                table.to_parquet(temporary, index=False, compression="zstd")
-            except ImportError:
-                raise MissingExtra("Writing Parquet", "parquet") from None
-        with whole_file(beside, overwrite=overwrite) as meta_file:
-            meta_file.write_text(json.dumps(meta, indent=2, ensure_ascii=False) + "\n", encoding="utf-8")
+    with whole_file(beside, overwrite=overwrite) as meta_file:
+        rows = write_tables(tables, whole, path, overwrite=overwrite)
+        meta_file.write_text(json.dumps({**meta, "rows": rows}, indent=2, ensure_ascii=False) + "\n", encoding="utf-8")
+    return rows
 
 
 def write_screening(
-    screening: Screening, place: Path, *, version: str, brief_name: str = "brief.toml",
-    progress: Callable[[str], None] = lambda step: None,
+    screening: Screening, place: Path, *, version: str, brief_name: str = "brief.toml", csv: bool = False,
+    progress: Callable[[str], None] = lambda step: None, unlooked: str = "",
 ) -> None:  # fmt: skip
-    """Write candidates, shortlist, a polar plot per shortlisted cell, the property chart, the summary and the brief.
+    """Write tables, a polar plot per shortlisted cell, the property chart, the summary and the brief.
 
-    `place` is a folder that exists, usually that of `whole_folder`; `progress` is told what is being written.
+    `place` is a folder that exists, usually that of `whole_folder`; what a stopped run left there is replaced. The
+    candidates are in its parts; up to MOST_CSV of them, or with `csv`, also in candidates.csv. `progress` is told what
+    is being written; `unlooked` says why nothing was looked at again as a solid.
     """
     from homog import plots
 
-    brief = screening.brief
+    brief, whole = screening.brief, Plan(screening.brief).schema
     meta = provenance(
-        version, brief.model, brief.material, title=brief.title,
-        brief_sha256=hashlib.sha256(brief.text.encode()).hexdigest(), candidates=brief.count, meeting=screening.met,
-        seeds=sorted({c.seed for c in brief.candidates if c.sampled}),
+        version, brief.model, brief.material, title=brief.title, brief_sha256=sha256(brief.text),
+        candidates=brief.count, meeting=screening.met, seeds=sorted({c.seed for c in brief.candidates if c.sampled}),
     )  # fmt: skip
-    progress("tables")
-    write_table(screening.candidates, place / "candidates.csv", meta)
-    write_table(screening.shortlist, place / "shortlist.csv", meta)
+    if csv or brief.count <= MOST_CSV:
+        progress("candidates.csv")
+        write_table(screening.tables(), whole, place / "candidates.csv", meta, overwrite=True)
+    progress("shortlist.csv")
+    short = pa.Table.from_pandas(screening.shortlist, preserve_index=False)
+    write_table([short], short.schema, place / "shortlist.csv", meta, overwrite=True)
     copy = place / (brief_name if brief_name.endswith(".toml") else "brief.toml")
     copy.write_bytes(brief.text.encode())
     shown = screening.shortlist if screening.met else screening.nearest
     if len(shown):
         progress("property chart")
         chart = plots.property_chart(
-            screening.candidates, shown, material=brief.material, limits=brief.limits, title=brief.title
-        )
+            screening.sample, shown, material=brief.material, limits=brief.limits, title=brief.title,
+            counts=screening.counts,
+        )  # fmt: skip
         for suffix in (".svg", ".png"):
             plots.save(chart, place / f"chart{suffix}")
     figures = []
@@ -259,7 +165,7 @@ def write_screening(
         rank, family = row["rank"], FAMILIES[row["family"]]
         progress(f"polar plot {rank} of {len(screening.shortlist)}")
         figure = plots.polar_figure(
-            homogenize(rebuilt(row, brief), model=brief.model),
+            homogenize(rebuilt(row, brief), model=row["model"]),
             limits=brief.limits, title=f"{rank}. {family.title}, candidate {row['candidate']}",
         )  # fmt: skip
         stem = f"polar-{rank:02d}-{family.id}"
@@ -267,13 +173,14 @@ def write_screening(
             plots.save(figure, place / f"{stem}{suffix}")
         figures.append(f"{stem}.png")
     progress("summary")
-    (place / "summary.md").write_text(summary(screening, figures=figures, version=version), encoding="utf-8")
+    (place / "summary.md").write_text(
+        summary(screening, figures=figures, version=version, unlooked=unlooked), encoding="utf-8"
+    )
 
 
 def rebuilt(row: Mapping[str, Any], brief: Brief) -> UnitCell:
     """Return the cell of one row of a table."""
-    family = FAMILIES[row["family"]]
-    return family.build({p.name: row[p.column] for p in family.parameters}, brief.material)
+    return FAMILIES[row["family"]].build(given(row), brief.material)
 
 
 def parameter_words(row: Mapping[str, Any]) -> str:
@@ -344,29 +251,26 @@ def _cells(table: pd.DataFrame, brief: Brief, *, misses: bool) -> str:
 
 
 def _falls(screening: Screening) -> str:
-    table = screening.candidates
-    lines = [[f.limit.words, f"{f.missed:,}", f"{f.missed / len(table):.1%}", f"{f.alone:,}"] for f in screening.falls]
-    rejected = int((table["verdict"] == "reject").sum())
-    lines.append(["verdict not reject", f"{rejected:,}", f"{rejected / len(table):.1%}", ""])
-    families = []
-    for name, group in table.groupby("family", sort=True):
-        verdicts = [int((group["verdict"] == verdict).sum()) for verdict in ("ok", "caution", "reject")]
-        families.append([str(name), *(f"{count:,}" for count in (len(group), int(group["meets"].sum()), *verdicts))])
+    count, tally = screening.brief.count, screening.tally
+    lines = [[f.limit.words, f"{f.missed:,}", f"{f.missed / count:.1%}", f"{f.alone:,}"] for f in screening.falls]
+    rejected = tally.total("reject")
+    lines.append(["verdict not reject", f"{rejected:,}", f"{rejected / count:.1%}", ""])
+    families = [
+        [name, *(f"{tally.families[name, what]:,}" for what in ("candidates", "meets", "ok", "caution", "reject"))]
+        for name in sorted(screening.counts)
+    ]
     return (
         "## How many fell to what\n\n" + markdown(["limit", "missed", "share", "missed this alone"], lines) + "\n"
         + markdown(["family", "candidates", "meet", "ok", "caution", "reject"], families) + "\n"
         + markdown(["reason", "verdict", "candidates", "meaning"], [
-            [f"`{code}`", reason_level(code), f"{count:,}", reason_text(code)] for code, count in _reasons(table)
+            [f"`{code}`", reason_level(code), f"{count:,}", reason_text(code)] for code, count in _reasons(screening)
         ])
     )  # fmt: skip
 
 
-def _reasons(table: pd.DataFrame) -> list[tuple[str, int]]:
+def _reasons(screening: Screening) -> list[tuple[str, int]]:
     """Return each reason with the number of candidates it speaks against, rejects first, the most common first."""
-    counts: Counter[str] = Counter()
-    for codes, count in table["reasons"].value_counts().items():
-        for code in str(codes).split():
-            counts[code] += int(count)
+    counts = screening.tally.reasons
     return sorted(counts.items(), key=lambda item: (reason_level(item[0]) != "reject", -item[1], item[0]))
 
 
@@ -392,7 +296,54 @@ def _tolerance(screening: Screening) -> str:
     )
 
 
-def summary(screening: Screening, *, figures: Sequence[str], version: str) -> str:
+def _second(screening: Screening, unlooked: str) -> str:
+    """Return what the second look found: both numbers of each candidate, and where the two models part."""
+    table = screening.looked
+    head = "## The second look, as solids\n\n"
+    if table is None:
+        return f"{head}Nothing was looked at again: {unlooked}.\n" if unlooked else ""
+    again = table[table["model"] == "solid"]
+    lines = []
+    for row in records(again):
+        pairs = [f"{number(row[f'screened_{name}'])} -> {number(row[name])}" for name in SCREENED]
+        what = "meets" if row["meets"] else f"misses {row['misses']}" if row["misses"] else "rejected"
+        lines.append([str(row["rank"]), str(row["candidate"]), str(row["family"]), *pairs, what])
+    words = (
+        f"Of the {len(table)} best of the screen, the {len(again)} that are planar walls were looked at again, each as "
+        "the two-dimensional solid of its true section, meshed twice. The shortlist is judged and ranked by the solids "
+        "where there are any. Both numbers, the screen's first:\n\n"
+    )
+    gone = again[~again["meets"]]
+    after = [f"{len(gone)} of them no longer meet the brief." if len(gone) else "All of them still meet the brief."]
+    for model, group in again.groupby(again["candidate"].map(_screen_models(screening)), sort=True):
+        off = [(group[n] / group[f"screened_{n}"] - 1.0).abs().max() for n in SCREENED if not n.startswith("nu")]
+        nu = max(float((group[n] - group[f"screened_{n}"]).abs().max()) for n in SCREENED if n.startswith("nu"))
+        after.append(
+            f"Of the {len(group)} that the screen took by the model `{model}`, stiffness was off by {max(off):.2%} at "
+            f"most, Poisson's ratio by {nu:.4f}."
+        )
+    notes = [f"- candidate {row['candidate']}: {row['note']}" for row in records(table[table["note"] != ""])]
+    header = ["was", "no.", "family", *SCREENED, "now"]
+    return head + words + markdown(header, lines) + "\n" + " ".join(after) + "\n" + "\n".join([*notes, ""])
+
+
+def _screen_models(screening: Screening) -> Callable[[int], str]:
+    """Return the model that the screen used for a candidate: what it asked for, or what that falls back to."""
+    assert screening.looked is not None
+    families = dict(zip(screening.looked["candidate"], screening.looked["family"], strict=True))
+    fallen: dict[str, str] = {}
+
+    def model(candidate: int) -> str:
+        name = families[candidate]
+        if name not in fallen:
+            cell = FAMILIES[name].build({}, screening.brief.material)
+            fallen[name] = homogenize(cell, model=screening.brief.model).model
+        return fallen[name]
+
+    return model
+
+
+def summary(screening: Screening, *, figures: Sequence[str], version: str, unlooked: str = "") -> str:
     """Return the summary of a screening in Markdown: asked, found, fallen, and what the numbers are and are not."""
     brief, met = screening.brief, screening.met
     parts = [f"# {brief.title}\n"]
@@ -408,14 +359,15 @@ def summary(screening: Screening, *, figures: Sequence[str], version: str) -> st
             "## What was found\n",
             _cells(screening.shortlist, brief, misses=False),
             "![property chart](chart.png)\n",
+            _second(screening, unlooked),
         ]
         reasons = screening.shortlist["reasons"]
     else:
         parts.append("## What is in the way\n")
         worst = sorted(screening.falls, key=lambda fall: -fall.missed)
         parts += [f"- {f.limit.words}: missed by {f.missed:,}, by {f.alone:,} as the only miss" for f in worst]
-        rejected = (screening.candidates["verdict"] == "reject").sum()
-        counts = [(code, n) for code, n in _reasons(screening.candidates) if reason_level(code) == "reject"]
+        rejected = screening.tally.total("reject")
+        counts = [(code, n) for code, n in _reasons(screening) if reason_level(code) == "reject"]
         why = f" ({', '.join(f'{code} {n:,}' for code, n in counts)})" if counts else ""
         parts.append(f"- verdict not reject: missed by {rejected:,}{why}")
         parts.append(

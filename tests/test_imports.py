@@ -12,19 +12,20 @@ import pytest
 PACKAGE = Path(__file__).resolve().parent.parent / "homog"
 
 ORDER = [
-    *("errors", "tensors"),
+    *("version", "errors", "tensors", "files"),
     *("materials", "section", "mesh"),
     *("cell", "elements"),
     *("stars", "joint_solid", "joints", "solid"),
     *("families", "assembly", "reference"),
-    "effective",
+    *("effective", "stress"),
     *("directional", "bounds", "bands"),
     "columns",
-    *("brief", "screening"),
+    *("candidates", "brief"),
+    *("store", "ranking", "engine", "screening", "recheck"),
     *("geometry", "plots"),
     "report",
     "__init__",
-    "cli",
+    *("terminal", "cli"),
     "__main__",
 ]
 
@@ -42,7 +43,7 @@ ALLOWED = {
     ("effective", "columns"): "Effective.table is the data model's door to the columns",
 }
 
-MAY_PRINT = {"cli", "__main__"}
+MAY_PRINT = {"cli", "terminal", "__main__"}
 MAY_DRAW = {"plots"}
 PRINTING = {"rich", "typer", "click", "argparse"}
 MOST_LINES = 500

@@ -192,7 +192,7 @@ def test_a_shape_is_found_from_any_wall_and_its_mirror(name):
         return float(f @ delta[..., 0] @ f)
 
     values = [energy((k + np.arange(n) * m) % n, m) for k in range(n) for m in (1, -1)]
-    np.testing.assert_allclose(values, values[0], rtol=5e-3)  # meshes and tables of joints, 0.2 % each
+    np.testing.assert_allclose(values, values[0], rtol=1e-3)  # symmetric where it was solved, interpolated between
     assert values[0] != 0.0
 
 
@@ -351,3 +351,11 @@ def test_joints_that_nearly_touch_are_flagged():
     found = homogenize(build("square-grid", thickness=np.array([1.0, 6.9, 7.3]), length=10.0, material=PARENT))
     assert [bool(flag & Flag.JOINTS_NEAR) for flag in found.flags] == [False, False, True]  # 10 - t under 0.4 t
     assert ["joints-near" in words for words in evaluate(found)["reasons"]] == [False, False, True]
+
+
+def test_an_impossible_member_asks_for_no_joint():
+    values = {"outer_angle": np.array([30.0, 50.0, 40.0]), "inner_angle": np.array([60.0, 40.0, 40.0])}
+    found = homogenize(FAMILIES["arrowhead"].build({**values, "thickness": 0.5}, PARENT))
+    assert found.model == "joint" and list(found.status) == [0, 1, 1]
+    alone = build("arrowhead", outer_angle=30.0, inner_angle=60.0, thickness=0.5, material=PARENT)
+    assert off(found.stiffness[0], stiffness(alone)) < 1e-12

@@ -85,6 +85,12 @@ class Family:
     rules: tuple[Rule, ...] = ()
     notes: str = ""
 
+    def __reduce__(self) -> tuple[Callable[[str], Family], tuple[str]]:
+        """Travel to another process by name: a family is the same code there."""
+        from homog.families import family
+
+        return family, (self.id,)
+
     def parameter(self, name: str) -> Parameter:
         """Return the parameter of that name, or raise InputError with the nearest names."""
         for parameter in self.parameters:

@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import math
 import re
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -89,6 +89,7 @@ def property_chart(
     material: Material | None = None,
     model: str = "",
     title: str = "",
+    counts: Mapping[str, tuple[int, int]] | None = None,
 ) -> Figure:
     """Return the chart of all candidates by two columns.
 
@@ -107,6 +108,8 @@ def property_chart(
         density and y a Young's modulus.
     model, title : str
         The wall model, named at the foot; the heading.
+    counts : mapping of str to (int, int)
+        Where `table` is a sample: how many candidates each family has in all, and how many of them meet every limit.
 
     Raises
     ------
@@ -152,9 +155,11 @@ def property_chart(
 
     write(figure, 0.2, HEIGHT - 0.16, title or f"{symbol(y)[0]} against {symbol(x)[0]}", fontsize=TITLE,
           fontweight="bold", gid="title")  # fmt: skip
-    write(figure, 0.2, HEIGHT - 0.46, _count(ax, points, len(table), len(names), meets, "meets" in table.columns),
+    counts = counts or {str(name): (int((families == name).sum()), int((meets & (families == name)).sum()))
+                        for name in np.unique(families)}  # fmt: skip
+    write(figure, 0.2, HEIGHT - 0.46, _count(ax, points, len(table), counts, "meets" in table.columns),
           fontsize=PLAIN, color=GREY)  # fmt: skip
-    _side(figure, names, families, meets, "meets" in table.columns, limits, len(shortlist) > 0, bound)
+    _side(figure, names, counts, "meets" in table.columns, limits, len(shortlist) > 0, bound)
     basis = ([f"Model: {model}"] if model else []) + ([f"Parent: {material.name}"] if material else [])
     foot(figure, ". ".join(basis) or "Candidates of a screen")
     return figure
@@ -349,13 +354,16 @@ def _badge(ax: Axes, text: str, at: Array, to: Array) -> None:
             gid="rank", bbox=box)  # fmt: skip
 
 
-def _count(ax: Axes, points: Array, total: int, families: int, meets: Mask, known: bool) -> str:
+def _count(ax: Axes, points: Array, shown: int, counts: Mapping[str, tuple[int, int]], known: bool) -> str:
     place = _inches(ax, points)
     drawn = int(((place >= 0.0) & (place <= np.array(BOX[2:]))).all(axis=1).sum())
+    total, families = sum(count for count, _ in counts.values()), len(counts)
     said = f"{_grouped(total)} candidates of {families} {'families' if families != 1 else 'family'}"
     if known:
-        said += f"; {_grouped(int(meets.sum()))} meet every limit"
-    left = total - drawn
+        said += f"; {_grouped(sum(met for _, met in counts.values()))} meet every limit"
+    if shown < total:
+        said += f"; a sample of {_grouped(shown)} is drawn"
+    left = shown - drawn
     return said + (f"; {_grouped(left)} have no value here or lie outside the axes" if left else "")
 
 
@@ -363,7 +371,7 @@ def _grouped(count: int) -> str:
     return f"{count:,}".replace(",", "\u202f") if count >= 10000 else str(count)
 
 
-def _side(figure: Figure, looks: dict[str, tuple[str, str]], families: NDArray[Any], meets: Mask, known: bool,
+def _side(figure: Figure, looks: dict[str, tuple[str, str]], counts: Mapping[str, tuple[int, int]], known: bool,
           limits: Sequence[Limit], ranked: bool, bound: list[tuple[str, Array, Array]]) -> None:  # fmt: skip
     """Explain families, requirement, bounds and signs beside the axes."""
     ax = axes_at(figure, 0.0, 0.0, WIDTH, HEIGHT, "key")
@@ -385,10 +393,10 @@ def _side(figure: Figure, looks: dict[str, tuple[str, str]], families: NDArray[A
 
     heading("Families")
     for name, (marker, tone) in looks.items():
-        mine = families == name
         ax.plot([SIDE + 0.08], [y - 0.06], ls="", marker=marker, ms=6.0, mfc=tone, mec=tone, gid="family-key")
         line(FAMILIES[name].title if name in FAMILIES else name, 0.25)
-        said = _grouped(int(mine.sum())) + (f", {_grouped(int((mine & meets).sum()))} meet" if known else "")
+        count, met = counts[name]
+        said = _grouped(count) + (f", {_grouped(met)} meet" if known else "")
         line(said, 0.25, GREY)
         y -= 0.04
     if limits:
@@ -399,5 +407,5 @@ def _side(figure: Figure, looks: dict[str, tuple[str, str]], families: NDArray[A
             line(f"and {len(limits) - 12} more")
     heading("Signs")
     signs = ["filled: meets every limit, open: does not"] if known else []
-    signs += ["one marker a neighbourhood, every candidate a dot"] + ["numbers: rank in the shortlist"] * ranked
+    signs += ["one marker a neighbourhood, a dot a candidate"] + ["numbers: rank in the shortlist"] * ranked
     line("; ".join(signs))
