@@ -290,7 +290,8 @@ def evaluate(
     """
     import numpy as np
 
-    from homog.columns import COLUMNS, reason_text
+    from homog.columns import COLUMNS
+    from homog.reasons import reason_text
     from homog.report import WHAT_IT_IS, evaluation, number
 
     parent = _parent(material, modulus, poisson, solid_density, deep, yield_stress)

@@ -16,10 +16,11 @@ from hypothesis import strategies as st
 import homog
 from homog import bands
 from homog.cell import Status
-from homog.columns import evaluate, reason_level, reason_text
+from homog.columns import evaluate
 from homog.effective import Flag
 from homog.families import build
 from homog.materials import Material
+from homog.reasons import reason_level, reason_text
 
 ROOT = Path(__file__).resolve().parent.parent
 DATA = ROOT / "data" / "model_errors.csv"
