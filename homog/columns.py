@@ -81,7 +81,7 @@ def _hexagon_curve(poisson: float, model: str) -> Array:
     x = np.cos(np.pi * (np.arange(HEXAGON_POINTS) + 0.5) / HEXAGON_POINTS)
     tau = (x + 1.0) / 2.0
     parent = Material("hexagon", 1.0, 0.3, 1000.0)
-    cell = FAMILIES["hexagonal-honeycomb"].build({"inclined": 1.0, "vertical": 1.0, "thickness": tau}, parent)
+    cell = FAMILIES["hexagonal-honeycomb"].build({"inclined": 10.0, "vertical": 10.0, "thickness": 10.0 * tau}, parent)
     walls = cell.blocks[0]
     given = {**walls.props, "poisson": np.array([poisson])}  # deep walls may have more than a solid's 0.5
     cell = dataclasses.replace(cell, blocks=(dataclasses.replace(walls, props=given),))
