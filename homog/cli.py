@@ -58,7 +58,15 @@ Deep = Annotated[
     bool, typer.Option("--deep", help="Planar cells deep along axis 3: plane strain instead of plane stress.")
 ]
 Model = Annotated[
-    str, typer.Option("--model", metavar="M", help="joint (condensed joints), timoshenko or euler (walls to a point).")
+    str,
+    typer.Option(
+        "--model",
+        metavar="M",
+        help="joint (condensed joints), timoshenko or euler (walls to a point), solid (true section; planar walls).",
+    ),
+]
+Fillet = Annotated[
+    float, typer.Option("--fillet", metavar="MM", help="Radius of inner corners, mm; model solid only, else sharp.")
 ]
 Overwrite = Annotated[bool, typer.Option("--overwrite", help="Replace a file that is there already.")]
 FIGURES = (".svg", ".png", ".pdf")
@@ -139,8 +147,8 @@ def _assigned(found: Family, words: Sequence[str] | None) -> dict[str, list[Any]
     return given
 
 
-def _one(family_id: str, words: Sequence[str] | None, parent: Material, model: str) -> Effective:
-    """Return one evaluated cell as a batch of one, so that a mechanism is reported and not raised."""
+def _one(family_id: str, words: Sequence[str] | None, parent: Material, model: str, fillet: float = 0.0) -> Effective:
+    """Return one evaluated cell, as a batch of one but for a solid, so that a mechanism is reported and not raised."""
     import numpy as np
 
     from homog.effective import homogenize
@@ -153,6 +161,8 @@ def _one(family_id: str, words: Sequence[str] | None, parent: Material, model: s
             raise InputError(f"Parameter '{name}' has {len(values)} values; give one, or use 'homog sweep'")
         given[name] = values[0]
     cell = found.build(given, parent)  # raises where the cell cannot exist
+    if model == "solid" or fillet != 0.0:
+        return homogenize(cell, model=model, fillet=fillet)
     first = next(p.name for p in found.parameters if not p.choices)
     return homogenize(found.build({**given, first: np.reshape(cell.parameters[first], (1,))}, parent), model=model)
 
@@ -249,6 +259,7 @@ def evaluate(
     solid_density: SolidDensity = None,
     deep: Deep = False,
     model: Model = "joint",
+    fillet: Fillet = 0.0,
     as_json: Annotated[bool, typer.Option("--json", help="Print one JSON object instead of tables.")] = False,
 ) -> int:
     """Evaluate one unit cell: every output quantity, the whole stiffness, the verdict and its reasons.
@@ -261,7 +272,7 @@ def evaluate(
     from homog.report import WHAT_IT_IS, evaluation, number
 
     parent = _parent(material, modulus, poisson, solid_density, deep)
-    effective = _one(id, parameters, parent, model)
+    effective = _one(id, parameters, parent, model, fillet)
     card = evaluation(effective)
     given, quantities, stiffness = card["parameters"], card["columns"], np.array(card["stiffness"], float)
     if as_json:
@@ -277,7 +288,7 @@ def evaluate(
                             for name, value in given.items()))  # fmt: skip
     deep_words = ", walls deep (plane strain)" if parent.deep else ""
     console.print(f"parent {parent.name}: E {parent.modulus_MPa:g} MPa, nu {parent.poisson:g}, "
-                  f"{parent.density_kg_m3:g} kg/m3{deep_words}; model {model}")  # fmt: skip
+                  f"{parent.density_kg_m3:g} kg/m3{deep_words}; model {effective.model}")  # fmt: skip
     table = _table("quantity", "value", "meaning", numeric=("value",))
     for name, value in quantities.items():
         if name in ("verdict", "reasons", "soft_mode") or value is None:

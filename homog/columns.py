@@ -43,6 +43,7 @@ COUPLING_CAUTION = 0.1
 REACH_CAUTION_DEG = 5.0
 SINGULAR_CAUTION = 1e-6
 CELLS_CAUTION = 4.0
+PANEL_POISSON = 0.1
 HEXAGON_POINTS = 32
 
 VOIGT_PAIRS = (("11", 0, 0), ("12", 0, 1), ("16", 0, 2), ("22", 1, 1), ("26", 1, 2), ("66", 2, 2))
@@ -67,6 +68,8 @@ REASONS: Mapping[str, tuple[str, str]] = {
     "ligament-stubby": ("caution", f"the ligament is over {LIGAMENT_CAUTION:g} of its length thick: no flexure strip"),
     "sheet-model": ("caution", "bar-and-hinge model of a folded sheet: signs and ratios are sound, stiffness "
                     "may be off by a factor of 2.6 against a full shell"),
+    "panels-unbraced": ("reject", f"a parent's Poisson's ratio under {PANEL_POISSON:g}: the diagonal bars of a panel, "
+                        "proportional to it, hold hardly any shear; give a larger one"),
     "internal-mechanism": ("caution", "joints can move at no energy, although no uniform strain is free"),
     "near-singular": ("caution", f"the softest strain is under {SINGULAR_CAUTION:g} of the stiffest: flaws decide"),
     "coupled": ("caution", "stretch along the axes comes with shear (eta1_12): a strip must be free to shear"),
@@ -219,6 +222,7 @@ class Results:
         found["joints-near"] = live & ((flags & Flag.JOINTS_NEAR) > 0)
         found["ligament-stubby"] = live & ("hinge" in kinds) & (slenderness > LIGAMENT_CAUTION)
         found["hinge-model"] = live & ("hinge" in kinds)
+        found["panels-unbraced"] = live & ("fold" in kinds) & (self.parent.poisson < PANEL_POISSON)
         found["sheet-model"] = live & ("fold" in kinds)
         found["internal-mechanism"] = live & (self.effective.mechanisms.reshape(-1) > 0)
         found["near-singular"] = live & (self.bounds.stability < SINGULAR_CAUTION)

@@ -101,7 +101,7 @@ class Effective:
         return table(self, columns)
 
 
-def homogenize(cell: UnitCell, *, model: str = DEFAULT_MODEL) -> Effective:
+def homogenize(cell: UnitCell, *, model: str = DEFAULT_MODEL, fillet: float = 0.0) -> Effective:
     """Return the effective stiffness of a periodic cell or of every member of a batch.
 
     Parameters
@@ -111,6 +111,8 @@ def homogenize(cell: UnitCell, *, model: str = DEFAULT_MODEL) -> Effective:
     model : str
         `euler`, `timoshenko`, `joint` or `solid` (see `homog.elements.MODELS`). `solid` needs the extra of that name
         and takes half a second a member.
+    fillet : float
+        Radius of inner corners, mm; only a `solid` has any.
 
     Returns
     -------
@@ -134,7 +136,9 @@ def homogenize(cell: UnitCell, *, model: str = DEFAULT_MODEL) -> Effective:
     check_model(model)
     cell.check()
     if model == "solid":
-        return _solid(cell)
+        return _solid(cell, fillet)
+    if fillet != 0.0:
+        raise InputError(f"Model '{model}' has sharp inner corners, fillet = {fillet:g} mm: use model 'solid'")
     shape = cell.shape
     flat = cell if len(shape) == 1 else cell.at(None) if not shape else _flattened(cell)
     members = flat.shape[0]
@@ -145,7 +149,7 @@ def homogenize(cell: UnitCell, *, model: str = DEFAULT_MODEL) -> Effective:
     condensed = model == "joint" and applies(cell)
     if model == "joint" and not condensed:
         model = "timoshenko"
-    count = 3 * len(cell.blocks[0]) - 2 if condensed else freedoms(flat).count
+    count = 3 * sum(len(block) for block in cell.blocks) - 2 if condensed else freedoms(flat).count
     flags = np.zeros(members, np.int8)
     C = np.empty((members, v, v))
     mechanisms = np.zeros(members, np.int64)
@@ -212,7 +216,7 @@ def _dense_members(
     return schur, upper, null
 
 
-def _solid(cell: UnitCell) -> Effective:
+def _solid(cell: UnitCell, fillet: float) -> Effective:
     """Return what the solid model finds, member by member; its errors are a single cell's, statuses in a batch."""
     shape = cell.shape
     members = int(np.prod(shape))
@@ -222,7 +226,7 @@ def _solid(cell: UnitCell) -> Effective:
     flat = _flattened(cell) if shape else cell.at(None)
     for i in range(members):
         try:
-            found = homogenize_solid(flat.at(i))
+            found = homogenize_solid(flat.at(i), fillet=fillet)
         except GeometryError:
             if not shape:
                 raise

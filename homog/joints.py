@@ -40,6 +40,7 @@ MATCH_TOLERANCE = 1e-9
 NEAR = 0.4
 """Plain wall between the inner corners of neighbouring joints, in thicknesses, below which they feel each other."""
 MOST_ON_DEMAND = 200
+PLAIN_WALL = ("thickness", "modulus", "poisson")
 
 
 # tables ----------------------------------------------------------------------------------------------------------
@@ -50,21 +51,30 @@ class Shape:
     """Joints of one pattern: n walls whose gaps and thicknesses follow from a few coordinates.
 
     `gaps(coordinates (k, ...))` and `thickness` (over that of wall 0) give the joint, `coordinates(gaps, thickness)` is
-    the way back, exact if the joint has the pattern; each coordinate has a range and a number of Chebyshev points.
+    the way back, exact if the joint has the pattern. The range of each coordinate is cut at `edges` into pieces with so
+    many Chebyshev `points` each: where two walls come to lie in line, or another wall becomes the thickest, an inner
+    corner turns into an outer one and the correction has a kink.
     """
 
     name: str
     walls: int
-    low: tuple[float, ...]
-    high: tuple[float, ...]
-    points: tuple[int, ...]
+    edges: tuple[tuple[float, ...], ...]
+    points: tuple[tuple[int, ...], ...]
     gaps: Callable[[Array], list[Any]]
     thickness: Callable[[Array], list[Any]]
     coordinates: Callable[[Array, Array], list[Any]]
 
+    def pieces(self) -> list[tuple[int, ...]]:
+        """Return the number of the piece along each coordinate, of every piece of the table."""
+        return list(itertools.product(*(range(len(points)) for points in self.points)))
+
+    def span(self, piece: tuple[int, ...]) -> list[tuple[float, float, int]]:
+        """Return low and high end and number of points along each coordinate of a piece."""
+        return [(e[i], e[i + 1], p[i]) for e, p, i in zip(self.edges, self.points, piece, strict=True)]
+
     def outside(self, u: Array) -> Mask:
         """Return where coordinates (k, b) are outside the table's range, (b,)."""
-        low, high = (np.array(x)[:, None] for x in (self.low, self.high))
+        low, high = (np.array([edges[i] for edges in self.edges])[:, None] for i in (0, -1))
         return np.asarray(~((u >= low - MATCH_TOLERANCE) & (u <= high + MATCH_TOLERANCE)).all(axis=0))
 
 
@@ -83,36 +93,45 @@ def _span(low_deg: float, high_deg: float) -> tuple[float, float]:
 
 FORK, CROSS, ELBOW = _span(9.0, 176.0), _span(14.0, 90.0), _span(9.0, 178.0)
 NARROW, WIDE = _span(7.0, 80.0), _span(9.0, 162.0)
-RATIO = (float(np.log(1.0 / 2.6)), float(np.log(2.6)))
+RATIO = float(np.log(2.6))
 TURN = 2.0 * np.pi
 
 SHAPES = (
-    # a stem (wall 0) between two equal arms: honeycombs
-    Shape("fork", 3, (FORK[0], RATIO[0]), (FORK[1], RATIO[1]), (26, 12),
+    # a stem (wall 0) between two arms, all equal: honeycombs
+    Shape("even-fork", 3, ((FORK[0], 0.0, FORK[1]),), ((20, 24),),
+          lambda u: [_gap(u[0]), TURN - 2.0 * _gap(u[0]), _gap(u[0])],
+          lambda u: [1.0 + 0.0 * u[0]] * 3, lambda g, t: [_open(g[0])]),
+    # a stem (wall 0) of another thickness between two equal arms
+    Shape("fork", 3, ((FORK[0], 0.0, FORK[1]), (-RATIO, 0.0, RATIO)), ((14, 16), (8, 8)),
           lambda u: [_gap(u[0]), TURN - 2.0 * _gap(u[0]), _gap(u[0])],
           lambda u: [1.0 + 0.0 * u[1], np.exp(u[1]), np.exp(u[1])],
           lambda g, t: [_open(g[0]), np.log(t[1] / t[0])]),
     # two straight walls that cross: square, kagome
-    Shape("cross", 4, CROSS[:1], CROSS[1:], (18,),
+    Shape("cross", 4, (CROSS,), ((18,),),
           lambda u: [_gap(u[0]), np.pi - _gap(u[0])] * 2, lambda u: [1.0 + 0.0 * u[0]] * 4,
           lambda g, t: [_open(g[0])]),
     # six equal walls: triangular
-    Shape("hexad", 6, (), (), (), lambda u: [np.pi / 3.0] * 6, lambda u: [1.0] * 6, lambda g, t: []),
+    Shape("hexad", 6, (), (), lambda u: [np.pi / 3.0] * 6, lambda u: [1.0] * 6, lambda g, t: []),
     # two pairs on one axis: arrowhead
-    Shape("pairs", 4, (NARROW[0], WIDE[0]), (NARROW[1], WIDE[1]), (18, 20),
+    Shape("pairs", 4, (NARROW, WIDE), ((18,), (20,)),
           lambda u: [_gap(u[0]), _gap(u[1]), _gap(u[0]), TURN - 2.0 * _gap(u[0]) - _gap(u[1])],
           lambda u: [1.0 + 0.0 * u[0]] * 4, lambda g, t: [_open(g[0]), _open(g[1])]),
     # two walls at an angle
-    Shape("elbow", 2, ELBOW[:1], ELBOW[1:], (40,), lambda u: [_gap(u[0]), TURN - _gap(u[0])],
+    Shape("elbow", 2, (ELBOW,), ((40,),), lambda u: [_gap(u[0]), TURN - _gap(u[0])],
           lambda u: [1.0 + 0.0 * u[0]] * 2, lambda g, t: [_open(np.minimum(g[0], g[1]))]),
 )  # fmt: skip
 
 
 @functools.cache
-def _table(name: str) -> Array:
-    """Return the Chebyshev coefficients of a shape, (2, s, s, points...): Delta = A + nu B."""
+def _tables() -> dict[str, Array]:
+    """Return the Chebyshev coefficients of every piece, (2, s, s, points...): Delta = A + nu B."""
     with resources.files("homog").joinpath(TABLES).open("rb") as file, np.load(file) as tables:
-        return np.asarray(tables[name])
+        return dict(tables)
+
+
+def table_name(shape: Shape, piece: tuple[int, ...]) -> str:
+    """Return the name of a piece in the file of tables."""
+    return "-".join([shape.name, *map(str, piece)])
 
 
 def chebyshev(u: Array, low: float, high: float, points: int) -> Array:
@@ -128,16 +147,33 @@ def chebyshev(u: Array, low: float, high: float, points: int) -> Array:
 
 def interpolated(shape: Shape, coordinates: Array, poisson: Array) -> Array:
     """Return Delta (s, s, b) of unit thickness of wall 0 at coordinates (k, b) of a shape's table."""
-    C = _table(shape.name)
-    nu = np.asarray(poisson)
-    even = bool((nu == nu.flat[0]).all())
-    parts = [C[0] + nu.flat[0] * C[1]] if even else [C[0], C[1]]
+    members = coordinates.shape[1]
+    nu = np.broadcast_to(poisson, (members,))
+    where = np.zeros((len(shape.edges), members), np.int64)
+    for k, edges in enumerate(shape.edges):
+        where[k] = np.searchsorted(edges[1:-1], coordinates[k])
+    s = 3 * shape.walls - 3
+    out = np.empty((s, s, members))
+    for piece in shape.pieces():
+        here = (where == np.array(piece, np.int64).reshape(-1, 1)).all(axis=0)
+        if here.all():
+            return _polynomial(_tables()[table_name(shape, piece)], shape.span(piece), coordinates, nu)
+        if here.any():
+            part = _tables()[table_name(shape, piece)]
+            out[..., here] = _polynomial(part, shape.span(piece), coordinates[:, here], nu[here])
+    return out
+
+
+def _polynomial(C: Array, spans: list[tuple[float, float, int]], coordinates: Array, nu: Array) -> Array:
+    """Return the sum (s, s, b) of a piece's polynomials with coefficients C (2, s, s, points...)."""
+    even = bool((nu == nu[0]).all())
+    parts = [C[0] + nu[0] * C[1]] if even else [C[0], C[1]]
+    T = [chebyshev(x, *span) for x, span in zip(coordinates, spans, strict=True)]
     values = []
     for part in parts:
-        T = [chebyshev(coordinates[k], shape.low[k], shape.high[k], n) for k, n in enumerate(shape.points)]
         s = len(part)
         if not T:
-            values.append(np.broadcast_to(part[..., None], (s, s, coordinates.shape[1])))
+            values.append(np.repeat(part[..., None], coordinates.shape[1], axis=2))
         elif len(T) == 1:
             values.append((part.reshape(s * s, -1) @ T[0]).reshape(s, s, -1))
         else:
@@ -151,6 +187,7 @@ def matched(gaps: Array, ratio: Array) -> tuple[Shape, Array, NDArray[np.int64],
 
     With it come its coordinates (k, b), the order in which its walls are the shape's, and -1.0 for its mirror image.
     """
+    sound = np.isfinite(gaps).all(axis=0) & np.isfinite(ratio).all(axis=0)
     n, partly = len(gaps), None
     for shape in SHAPES:
         if shape.walls != n:
@@ -163,8 +200,8 @@ def matched(gaps: Array, ratio: Array) -> tuple[Shape, Array, NDArray[np.int64],
                 found = shape.coordinates(g, t)
                 u = np.array([np.broadcast_to(x, gaps.shape[1:]) for x in found]).reshape(len(found), *gaps.shape[1:])
                 off = [np.abs(a - b) for a, b in zip([*shape.gaps(u), *shape.thickness(u)], [*g, *t], strict=True)]
-            if all((x <= MATCH_TOLERANCE).all() for x in off):
-                if not shape.outside(u).any():
+            if all((x <= MATCH_TOLERANCE)[..., sound].all() for x in off):
+                if not shape.outside(u)[sound].any():
                     return shape, u, order, mirror
                 partly = partly or (shape, u, order, mirror)
     return partly
@@ -194,7 +231,8 @@ def corrections(gaps: Array, thickness: Array, poisson: Array) -> tuple[NDArray[
     """
     n, members = gaps.shape
     order, none = np.arange(n), np.zeros(members, bool)
-    if n == 2 and (np.abs(gaps - np.pi) <= MATCH_TOLERANCE).all() and (np.ptp(thickness, axis=0) == 0.0).all():
+    straight = (np.abs(gaps - np.pi) <= MATCH_TOLERANCE) & (np.ptp(thickness, axis=0) == 0.0)
+    if n == 2 and (straight | ~np.isfinite(gaps)).all():
         return order, np.zeros((3, 3, members)), none  # a wall that runs on
     found = matched(gaps, thickness / thickness[0])
     if found is None:
@@ -208,7 +246,9 @@ def corrections(gaps: Array, thickness: Array, poisson: Array) -> tuple[NDArray[
 
 
 def _on_demand(gaps: Array, ratio: Array, poisson: Array) -> Array:
-    keys, where = np.unique(np.round(np.concatenate([gaps, ratio]), 9), axis=1, return_inverse=True)
+    joint = np.round(np.concatenate([gaps, ratio]), 9)
+    sound = np.isfinite(joint).all(axis=0)
+    keys, where = np.unique(joint[:, sound], axis=1, return_inverse=True)
     if keys.shape[1] > MOST_ON_DEMAND:
         raise InputError(
             f"{keys.shape[1]:,} different joints that no table has, at most {MOST_ON_DEMAND} in one batch: "
@@ -217,7 +257,10 @@ def _on_demand(gaps: Array, ratio: Array, poisson: Array) -> Array:
     from homog.joint_solid import cached_correction
 
     n = len(gaps)
-    parts = np.stack([cached_correction(key[:n], key[n:]) for key in keys.T], axis=-1)[..., where.reshape(-1)]
+    parts = np.full((2, 3 * n - 3, 3 * n - 3, joint.shape[1]), np.nan)
+    if len(keys.T):
+        found = np.stack([cached_correction(key[:n], key[n:]) for key in keys.T], axis=-1)
+        parts[..., sound] = found[..., where.reshape(-1)]
     return np.asarray(parts[0] + poisson * parts[1])
 
 
@@ -226,11 +269,13 @@ def _on_demand(gaps: Array, ratio: Array, poisson: Array) -> Array:
 
 def applies(cell: UnitCell) -> bool:
     """Say whether a cell has condensed joints: planar, all straight walls that meet at their points, no end springs."""
-    if cell.kind != "planar" or len(cell.blocks) != 1 or cell.blocks[0].kind != "wall":
+    walls = [block for block in cell.blocks if len(block)]
+    if cell.kind != "planar" or not walls or any(block.kind != "wall" for block in walls):
         return False
-    wall = cell.blocks[0]
-    joined = np.bincount(wall.nodes.ravel(), minlength=cell.n)[wall.nodes].max(axis=1, initial=0) > 1
-    return set(wall.props) <= {"thickness", "modulus", "poisson"} and bool(joined.all())
+    nodes = np.concatenate([block.nodes for block in walls])
+    joined = np.bincount(nodes.ravel(), minlength=cell.n)[nodes].max(axis=1) > 1
+    others = (np.any(value) for block in walls for name, value in block.props.items() if name not in PLAIN_WALL)
+    return not any(others) and bool(joined.all())
 
 
 def with_joints(cell: UnitCell) -> tuple[UnitCell, Mask, Mask]:
@@ -247,22 +292,26 @@ def with_joints(cell: UnitCell) -> tuple[UnitCell, Mask, Mask]:
     outside : ndarray of bool, shape (b,); members with a joint that no table covers
     near : ndarray of bool, shape (b,); members with less than NEAR t of plain wall between two joints
     """
-    wall, (members,) = cell.blocks[0], cell.shape
-    m = len(wall)
-    t, E, nu = (np.broadcast_to(wall.props[name], (members, m)).T for name in ("thickness", "modulus", "poisson"))
-    vectors = element_vectors(cell.points, cell.lattice, wall.nodes, wall.shifts)
-    home = cell.points[..., wall.nodes[:, 0], :] + np.einsum(
-        "mp,...pd->...md", wall.shifts[:, 0].astype(float), cell.lattice
+    blocks, (members,) = [block for block in cell.blocks if len(block)], cell.shape
+    ends_of, shifts_of = (np.concatenate([getattr(b, name) for b in blocks]) for name in ("nodes", "shifts"))
+    m = len(ends_of)
+    t, E, nu = (
+        np.concatenate([np.broadcast_to(b.props[name], (members, len(b))) for b in blocks], axis=1).T
+        for name in PLAIN_WALL
+    )
+    vectors = element_vectors(cell.points, cell.lattice, ends_of, shifts_of)
+    home = cell.points[..., ends_of[:, 0], :] + np.einsum(
+        "mp,...pd->...md", shifts_of[:, 0].astype(float), cell.lattice
     )
     x, y = np.moveaxis(np.broadcast_to(vectors, (members, m, 2)), -1, 0).swapaxes(1, 2)
     lengths, directions = np.hypot(x, y), np.arctan2(y, x)
     plain = lengths.copy()
     outside = np.zeros(members, bool)
-    blocks: dict[int, tuple[list[Any], list[Any], list[NDArray[Any]]]] = {}
+    joints: dict[int, tuple[list[Any], list[Any], list[NDArray[Any]]]] = {}
     sound = int(
         np.argmax(np.isfinite(directions).all(axis=0) & (cell.status == Status.OK))
     )  # it gives the order of walls
-    for arms in arms_of(cell.n, wall.nodes):
+    for arms in arms_of(cell.n, ends_of):
         if len(arms) < 2:  # a free end: half a wall that carries nothing
             continue
         walls, ends = (np.array(part) for part in zip(*arms, strict=True))
@@ -270,7 +319,8 @@ def with_joints(cell: UnitCell) -> tuple[UnitCell, Mask, Mask]:
         first = np.argsort(np.mod(angles[:, sound], TURN), kind="stable")  # the order round a joint is the topology's
         walls, ends, angles = walls[first], ends[first], angles[first]
         gaps = np.mod(np.roll(angles, -1, axis=0) - angles, TURN)
-        gaps = np.where(np.abs(gaps.sum(axis=0) - TURN) < 1e-6, gaps, np.nan)  # another order: no such joint
+        there = (np.abs(gaps.sum(axis=0) - TURN) < 1e-6) & (cell.status == Status.OK)
+        gaps = np.where(there, gaps, np.nan)  # another order, or no cell at all: no such joint
         _swallow(plain, walls, gaps, t[walls])
         order, delta, missed = corrections(gaps, t[walls], nu[walls[0]])
         outside |= missed
@@ -280,8 +330,8 @@ def with_joints(cell: UnitCell) -> tuple[UnitCell, Mask, Mask]:
         tips = half * np.exp(1j * angles)
         R = _turns(angles - np.angle(tips[1] - tips[0]))
         weight = np.linalg.inv(R @ np.moveaxis(F, -1, 0) @ np.swapaxes(R, -1, -2))
-        shifts = -wall.shifts[walls, ends]  # of the wall's middle, seen from this end
-        nodes, images, weights = blocks.setdefault(len(walls), ([], [], []))
+        shifts = -shifts_of[walls, ends]  # of the wall's middle, seen from this end
+        nodes, images, weights = joints.setdefault(len(walls), ([], [], []))
         nodes.append(walls)
         images.append(shifts)
         weights.append(weight)
@@ -290,7 +340,7 @@ def with_joints(cell: UnitCell) -> tuple[UnitCell, Mask, Mask]:
         points=home + vectors / 2.0,
         blocks=tuple(
             Block("joint", np.array(nodes), np.array(images), {"weight": np.stack(weights, axis=1)})
-            for nodes, images, weights in blocks.values()
+            for nodes, images, weights in joints.values()
         ),
     )
     return joined, outside, (plain < NEAR * t).any(axis=0)

@@ -48,6 +48,23 @@ def corner_cut(beta: Array, a: Array, b: Array, disc: Array) -> Array:
     return np.where(meets, foot, np.sqrt(disc**2 - a**2))
 
 
+def poking(beta: Array, a: Array, b: Array, disc: Array) -> tuple[Array, Array]:
+    """Return what the thickest wall (half thickness b) holds beyond the far face of a thin neighbour (a), and its end.
+
+    At a sharp angle a thick wall reaches past the thin one beside it, into the next sector: outside the joint's disc
+    lies the area between its face, the thin wall's far face and the disc, (b s - a (q - w) - b^2 (pi/2 - beta -
+    arcsin(a/b)))/2 with s = (b cos(beta) - a)/sin(beta) along the thick wall, q = (b - a cos(beta))/sin(beta) along
+    the thin one, w = sqrt(b^2 - a^2) (elementary geometry). The end is q, how far the thin wall's far face is
+    swallowed.
+    """
+    with np.errstate(divide="ignore", invalid="ignore"):
+        s, q = (b * np.cos(beta) - a) / np.sin(beta), (b - a * np.cos(beta)) / np.sin(beta)
+        w = np.sqrt(np.clip(b**2 - a**2, 0.0, None))
+        area = (b * s - a * (q - w) - b**2 * (np.pi / 2.0 - beta - np.arcsin(np.minimum(a / b, 1.0)))) / 2.0
+    there = (beta < np.pi / 2.0) & (s > 0.0) & (b >= disc)
+    return np.where(there, area, 0.0), np.where(there, q, 0.0)
+
+
 def arms_of(n: int, nodes: Index) -> list[Sequence[tuple[int, int]]]:
     """Return for each point the (wall, end) pairs that meet there."""
     arms: list[list[tuple[int, int]]] = [[] for _ in range(n)]
@@ -93,8 +110,12 @@ def wall_section(points: Array, lattice: Array, nodes: Index, shifts: Index, thi
         wide = np.take_along_axis(half[..., walls], order, -1)
         after = np.roll(wide, -1, axis=-1)
         disc = np.broadcast_to(wide.max(axis=-1, keepdims=True), wide.shape)
-        area = area + sector_surplus(beta, wide, after, disc).sum(axis=-1)
-        here, there = corner_cut(beta, wide, after, disc), corner_cut(beta, after, wide, disc)
+        open_ = ~_inner_corner(beta, wide, after, disc)[1]  # behind an inner corner there is nothing left to hold
+        over, far = (np.where(np.roll(open_, 1, axis=-1), x, 0.0) for x in poking(beta, wide, after, disc))
+        under, near = (np.where(np.roll(open_, -1, axis=-1), x, 0.0) for x in poking(beta, after, wide, disc))
+        area = area + (sector_surplus(beta, wide, after, disc) + over + under).sum(axis=-1)
+        here = np.maximum(corner_cut(beta, wide, after, disc), np.roll(near, 1, axis=-1))
+        there = np.maximum(corner_cut(beta, after, wide, disc), np.roll(far, -1, axis=-1))
         for arm, (wall, end) in enumerate(arms):
             found = order == arm  # where this arm stands in the counter-clockwise order
             left = np.where(found, here, 0.0).sum(axis=-1)
@@ -136,6 +157,6 @@ def strut_volume(points: Array, lattice: Array, nodes: Index, shifts: Index, dia
                     "...d,...d->...", e3, out[..., j, :]
                 )[..., None] * np.sin(azimuth)
                 cot = np.maximum(cot, towards / (1.0 - cosine))
-            lost = np.where(cot > 0.0, cot, np.where(np.isinf(cot), -1.0, cot / np.sqrt(1.0 + cot**2)))
+            lost = np.where(cot > 0.0, cot, -1.0 / np.sqrt(1.0 + np.minimum(cot, -1e-30) ** -2.0))
             volume = volume - r**3 / 3.0 * 2.0 * np.pi * lost.mean(axis=-1)
     return np.asarray(volume)

@@ -21,7 +21,7 @@ def free_folder(parent, name):
 
 def main():
     steps = Steps(3)
-    venv = prepare(steps)
+    venv = prepare(steps, ["solid"])
     (ROOT / "results").mkdir(exist_ok=True)
     out = free_folder(ROOT / "results", BRIEF.stem)
     arguments = ["screen", str(BRIEF), "--out", str(out.relative_to(ROOT))]

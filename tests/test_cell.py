@@ -180,9 +180,10 @@ def test_a_batch_longer_than_a_chunk(monkeypatch):
     cell = build("reentrant-honeycomb", thickness=thickness)
     found = homogenize(cell)
     for i in (0, 49, 50, 51, 332):
-        np.testing.assert_allclose(found.stiffness[i], homogenize(cell.at(i)).stiffness, rtol=1e-12, atol=1e-18)
+        alone = homogenize(cell.at(i)).stiffness  # coupling is round-off of the joint tables here
+        np.testing.assert_allclose(found.stiffness[i], alone, rtol=1e-12, atol=1e-14 * alone.max())
     lone = homogenize(dataclasses.replace(cell.at(7), status=np.zeros(120, np.int8)))  # nothing but the status differs
-    np.testing.assert_allclose(lone.stiffness, np.broadcast_to(found.stiffness[7], (120, 3, 3)), rtol=1e-12, atol=1e-18)
+    np.testing.assert_allclose(lone.stiffness, np.broadcast_to(found.stiffness[7], (120, 3, 3)), rtol=1e-12, atol=1e-14)
 
 
 def test_an_empty_batch_stays_empty():

@@ -257,6 +257,11 @@ CASES = {
     "ligament-stubby": lambda: evaluate(homogenize(build("rotating-squares", ligament_thickness=[0.6]))),
     "sheet-model": lambda: evaluate(homogenize(build("miura-fold", fold_angle=[30.0]))),
     "internal-mechanism": lambda: evaluate(homogenize(grid("wall", solid=4.0, props=WALLS, extra=(DANGLING,)))),
+    "panels-unbraced": lambda: evaluate(homogenize(build("miura-fold", fold_angle=[30.0],
+                                                         material=PLA.replaced(poisson=0.05)))),
+    "joint-outside": lambda: evaluate(homog.homogenize(build("arrowhead", outer_angle=[12.0], inner_angle=[15.0],
+                                                             thickness=0.05))),
+    "joints-near": lambda: evaluate(homog.homogenize(build("square-grid", thickness=[7.3]))),
     "near-singular": lambda: evaluate(homogenize(build("square-grid", thickness=[0.005]))),
     "coupled": lambda: turned("square-grid", 22.5, thickness=[0.2]),
     "reach-short": lambda: evaluate(homogenize(build("reentrant-honeycomb", angle=[-3.0], thickness=0.4))),
@@ -360,6 +365,7 @@ def test_hashin_shtrikman_is_for_isotropic_cells_only():
 
 RULES = {
     "tips-collide": ("reentrant-honeycomb", {"vertical": 10.0}),
+    "verticals-touch": ("hexagonal-honeycomb", {"angle": 80.0, "vertical_thickness": 4.0}),
     "struts-cross": ("arrowhead", {"outer_angle": 60.0, "inner_angle": 50.0}),
     "nodes-collide": ("anti-tetrachiral", {"node_radius": 4.9}),
     "ring-filled": ("anti-tetrachiral", {"node": "ring", "node_radius": 0.5, "thickness": 0.6}),

@@ -20,7 +20,7 @@ ORDER = [
     "effective",
     *("directional", "bounds"),
     "columns",
-    *("brief", "screening"),
+    *("brief", "recheck", "screening"),
     *("geometry", "plots"),
     "report",
     "__init__",

@@ -183,9 +183,9 @@ def test_joints_are_counted_once():
 def test_a_corner_from_elementary_geometry():
     # right angle: the halves overlap in a square a b; straight on: nothing; a free end: half a disc
     a, b = np.array(0.3), np.array(0.5)
-    assert sector_surplus(np.array(np.pi / 2.0), a, b) == pytest.approx(-a * b, rel=1e-14)
-    assert sector_surplus(np.array(np.pi), a, a) == pytest.approx(0.0, abs=1e-15)
-    assert sector_surplus(np.array(2.0 * np.pi), a, a) == pytest.approx(np.pi * a**2 / 2.0, rel=1e-14)
+    assert sector_surplus(np.array(np.pi / 2.0), a, b, b) == pytest.approx(-a * b, rel=1e-14)
+    assert sector_surplus(np.array(np.pi), a, a, a) == pytest.approx(0.0, abs=1e-15)
+    assert sector_surplus(np.array(2.0 * np.pi), a, a, a) == pytest.approx(np.pi * a**2 / 2.0, rel=1e-14)
 
 
 def test_the_section_of_a_batch_is_a_loop():

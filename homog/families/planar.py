@@ -43,6 +43,16 @@ def _tips_collide(p: Values, material: Material) -> np.ndarray:
     return tips
 
 
+def _verticals_touch(p: Values, material: Material) -> np.ndarray:
+    gap: np.ndarray = 2.0 * p["inclined"] * np.cos(np.radians(p["angle"])) - p["vertical_thickness"]
+    return gap <= 0.0
+
+
+VERTICALS_TOUCH = Rule(
+    "verticals-touch",
+    "the walls along axis 2 are as thick as the cell is wide; 2 inclined cos(angle) must exceed vertical_thickness",
+    _verticals_touch,
+)
 GIBSON = (
     "Gibson, Ashby, Schajer & Robertson 1982, Proc. R. Soc. A 382, 25; Gibson & Ashby, Cellular Solids, 1997, ch. 4"
 )
@@ -91,14 +101,14 @@ def _arrowhead(p: Values, material: Material) -> UnitCell:
 FAMILIES = (
     Family(
         "hexagonal-honeycomb", "Hexagonal honeycomb", "planar", _honeycomb_parameters(1.0, 85.0, 30.0, 10.0),
-        "orthotropic", GIBSON, _honeycomb,
+        "orthotropic", GIBSON, _honeycomb, rules=(VERTICALS_TOUCH,),
         notes="The regular hexagon (vertical = inclined, angle = 30) is isotropic in the plane.",
     ),
     Family(
         "reentrant-honeycomb", "Re-entrant honeycomb", "planar", _honeycomb_parameters(-85.0, -1.0, -30.0, 20.0),
         "orthotropic", GIBSON, _honeycomb,
         rules=(Rule("tips-collide", "opposite tips of the bow-tie touch; vertical must exceed "
-                    "2 inclined sin|angle| plus the wall thickness", _tips_collide),),
+                    "2 inclined sin|angle| plus the wall thickness", _tips_collide), VERTICALS_TOUCH),
         notes="Auxetic along its axes only: nu rises through zero when the load turns off them.",
     ),
     Family(
