@@ -30,6 +30,7 @@ from homog.cell import Block, Status, UnitCell
 from homog.errors import InputError
 from homog.section import arms_of, corner_cuts
 from homog.stars import carried, star_of
+from homog.tensors import inverted
 
 Array = NDArray[np.float64]
 Mask = NDArray[np.bool_]
@@ -383,7 +384,7 @@ def _joint(given: tuple[Array, ...], units: Array) -> _Joint:
     F = star_of(*_turn(units[:, 0], units), l, t[order], E[order[0]], nu[order[0]]) + carried(delta / E[order[0]], l)
     chord = l[1] * units[:, 1] - l[0] * units[:, 0]
     c, s = _turn(chord / np.hypot(*chord), units)
-    W = _inverse(F)
+    W = inverted(F)
     for turned in (W, W.swapaxes(0, 1)):  # rows, then columns, from each wall's frame to the line's
         for i in range(1, len(l)):
             along, across = turned[3 * i - 3], turned[3 * i - 2]
@@ -413,18 +414,6 @@ def _same(known: tuple[Array, ...], given: tuple[Array, ...], sound: int) -> int
         else:
             return start
     return None
-
-
-def _inverse(F: Array) -> Array:
-    """Return the inverse of symmetric positive definite matrices (s, s, b) by sweeping one row after the other."""
-    A = F.copy()
-    product = np.empty_like(A)
-    for k in range(len(A)):
-        column, row = A[:, k].copy(), A[k] / A[k, k]
-        A -= np.multiply(column[:, None], row, out=product)
-        A[k], A[:, k] = row, -column / column[k]
-        A[k, k] = 1.0 / column[k]
-    return A
 
 
 def _swallowed(gaps: Array, thickness: Array) -> Array:

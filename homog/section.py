@@ -109,8 +109,12 @@ def arms_of(n: int, nodes: Index) -> list[Sequence[tuple[int, int]]]:
 
 def element_vectors(points: Array, lattice: Array, nodes: Index, shifts: Index) -> Array:
     """Return the vector from first to second node of each two-node element, ndarray of shape (..., m, d)."""
-    images = points[..., nodes, :] + np.einsum("mkp,...pd->...mkd", shifts.astype(float), lattice)
-    return np.asarray(images[..., 1, :] - images[..., 0, :])
+    first, last = (np.moveaxis(x, (-1, -2), (0, 1)) for x in (points, lattice))  # the batch last: long loops
+    out = np.ascontiguousarray(first)[:, nodes[:, 1]] - np.ascontiguousarray(first)[:, nodes[:, 0]]
+    apart = shifts[:, 1] - shifts[:, 0]
+    if apart.any():
+        out = out + np.einsum("mp,dp...->dm...", apart.astype(float), np.ascontiguousarray(last))
+    return np.asarray(np.moveaxis(out, (0, 1), (-1, -2)))
 
 
 def wall_section(points: Array, lattice: Array, nodes: Index, shifts: Index, thickness: Array) -> tuple[Array, Mask]:

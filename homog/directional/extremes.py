@@ -198,7 +198,8 @@ def _search(plane: _Plane, chi: Array) -> Array:
     w = B1 * cos**2 + B2 * sin**2
     two_over_E = t + w + 2.0 * (b1 * cos + b2 * sin)
     nu = (w - t) / two_over_E
-    degrees = np.degrees(0.5 * (turn + chi)) % 180.0
+    degrees = np.degrees(0.5 * (turn + chi))
+    degrees -= 180.0 * np.floor(degrees / 180.0)
     degrees[degrees == 180.0] = 0.0  # the remainder of a tiny negative angle, rounded
 
     def lowest(values: Array, floor: float) -> tuple[Array, Array]:
@@ -232,12 +233,22 @@ def _by_chunks(rows: Callable[[Array], Array], compliance: ArrayLike, size: int,
     with np.errstate(divide="ignore", over="ignore", invalid="ignore"):
         for start in range(0, len(flat), chunk):
             part = flat[start : start + chunk]
-            bad = ~np.isfinite(part).all(axis=(1, 2))
-            part = np.where(bad[:, None, None], np.eye(size), part)
-            bad |= np.linalg.eigvalsh(part)[:, 0] <= 0.0
+            bad = ~_positive(part)
+            part = part.copy()
             part[bad] = np.eye(size)
             out[:, start : start + chunk] = np.where(bad, np.nan, rows(part))
     return Extremes(*out.reshape(len(out), *S.shape[:-2]))
+
+
+def _positive(S: Array) -> NDArray[np.bool_]:
+    """Where compliances (n, v, v) are finite and positive definite: every pivot is positive."""
+    M = np.moveaxis(S, 0, -1).copy(order="C")
+    good = np.isfinite(M.sum(axis=(0, 1)))
+    for j in range(len(M)):
+        good &= M[j, j] > 0.0
+        for i in range(j + 1, len(M)):
+            M[i, i:] -= M[j, i] / M[j, j] * M[j, i:]
+    return good
 
 
 def space_extremes(compliance: ArrayLike) -> Extremes:
