@@ -19,7 +19,7 @@ import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from homog import tensors
-from homog.directional import frames
+from homog.directional import cubic, frames
 from homog.directional.frames import TIE_TOLERANCE
 from homog.errors import InputError
 from homog.tensors import Array
@@ -254,7 +254,7 @@ def _positive(S: Array) -> NDArray[np.bool_]:
 def space_extremes(compliance: ArrayLike) -> Extremes:
     """Return the extremes over all directions of spatial compliances (..., 6, 6), Mandel, positive definite.
 
-    E over n; nu and G over n and over m across it, by `frames.extremes`. A member that is not finite or not positive
+    E over n; nu and G over n and over m across it, by `frames.extremes`, by `cubic.extremes` where the axes are cubic. A member that is not finite or not positive
     definite gives NaN. Where an extreme is reached along a whole cone of directions, the one reported need not be the
     nearest to axis 1. `auxetic_share` is exact in m and a mean over 1024 directions n.
 
@@ -273,4 +273,12 @@ def space_extremes(compliance: ArrayLike) -> Extremes:
 def _space_rows(S: Array) -> Array:
     """The twelve fields of `Extremes` (12, c) of compliances (c, 6, 6)."""
     reach = [_auxetic(*_spread(S[:, plane][:, :, plane]))[1] for plane in PLANES]
-    return np.concatenate([frames.extremes(S, ZERO_TOLERANCE), [np.minimum(*reach)]])
+    rows = np.empty((12, len(S)))
+    rows[11] = np.minimum(*reach)
+    closed = cubic.is_cubic(S)
+    if closed.any():
+        rows[:10, closed] = cubic.extremes(S[closed])
+        rows[10, closed] = frames.auxetic_share(S[closed], ZERO_TOLERANCE)
+    if not closed.all():
+        rows[:11, ~closed] = frames.extremes(S[~closed], ZERO_TOLERANCE)
+    return rows
