@@ -129,11 +129,14 @@ def strained_blocks(cell: UnitCell, model: str) -> Iterator[Strained]:
 
 
 @cache
-def _places(numbers: tuple[tuple[int, ...], ...], first: int, v: int) -> tuple[list[Any], list[Any], Index]:
-    """Say where an element's freedoms (k, f) go: copies of rows into columns, runs of columns, and their numbers.
+def _places(
+    numbers: tuple[tuple[int, ...], ...], first: int, v: int, strains: tuple[tuple[tuple[int, int], ...], ...]
+) -> tuple[list[Any], list[Any], list[Any]]:
+    """Say where an element's freedoms (k, f) go: copies of rows into columns, runs of columns, and the columns.
 
     Columns are the distinct numbers in order, then the macroscopic strains from `first` on. A copy is (node, freedom,
-    end, column, whether it adds: an element may join a node to its own image), a run (column, end, number).
+    end, column, whether it adds: an element may join a node to its own image), a run (column, end, number), a column
+    (number, first strain, end); `strains` (k, f) says which strains a freedom may move, as first and end.
     """
     live = sorted({number for node in numbers for number in node if number >= 0})
     column = {number: c for c, number in enumerate(live)}
@@ -154,7 +157,16 @@ def _places(numbers: tuple[tuple[int, ...], ...], first: int, v: int) -> tuple[l
     breaks = np.flatnonzero(np.diff(targets) != 1) + 1
     starts = [0, *breaks.tolist()]
     runs = [(a, b, int(targets[a])) for a, b in zip(starts, [*starts[1:], len(targets)], strict=True)]
-    return copies, runs, targets
+    moved: dict[int, list[tuple[int, int]]] = {}
+    for node, spans in zip(numbers, strains, strict=True):
+        for number, span in zip(node, spans, strict=True):
+            moved.setdefault(number, []).append(span)
+    everything = [span for spans in strains for span in spans]
+    columns = []
+    for number in targets.tolist():
+        spans = moved.get(number, everything) if number < first else everything
+        columns.append((number, min(low for low, _ in spans), max(high for _, high in spans)))
+    return copies, runs, columns
 
 
 def dense(cell: UnitCell, model: str, out: Array | None = None) -> Array:
@@ -171,24 +183,27 @@ def dense(cell: UnitCell, model: str, out: Array | None = None) -> Array:
     for part in strained_blocks(cell, model):
         s, k, f, _, b = part.rows.shape
         coupled = not _uncoupled(part.weights)
+        strains = _strains(part.rows)
         room = np.empty((2, s, k * f + v, b))
         for e, nodes in enumerate(part.block.nodes):
-            copies, runs, targets = _places(tuple(map(tuple, free.numbers[nodes, :f].tolist())), free.count, v)
-            B, pull = room[:, :, : len(targets)]
+            numbers = tuple(map(tuple, free.numbers[nodes, :f].tolist()))
+            copies, runs, columns = _places(numbers, free.count, v, strains)
+            B, pull = room[:, :, : len(columns)]
             for node, start, stop, c, adds in copies:
                 if adds:
                     B[:, c : c + stop - start] += part.rows[:, node, start:stop, e]
                 else:
                     B[:, c : c + stop - start] = part.rows[:, node, start:stop, e]
-            B[:, len(targets) - v :] = part.affine[:, :, e]
+            B[:, len(columns) - v :] = part.affine[:, :, e]
             W = part.weights[:, :, e]
             if coupled:
-                np.einsum("ijb,jcb->icb", W, B, out=pull)
+                for c, (_, low, high) in enumerate(columns):
+                    np.einsum("ijb,jb->ib", W[:, low:high], B[low:high, c], out=pull[:, c])
             else:
                 for i in range(s):
                     np.multiply(W[i, i], B[i], out=pull[i])
-            for c, number in enumerate(targets):
-                force = np.einsum("ib,icb->cb", B[:, c], pull[:, c:])
+            for c, (number, low, high) in enumerate(columns):
+                force = np.einsum("ib,icb->cb", B[low:high, c], pull[low:high, c:])
                 for start, stop, first in runs:
                     if stop > c:
                         begin = max(start, c)
@@ -196,10 +211,23 @@ def dense(cell: UnitCell, model: str, out: Array | None = None) -> Array:
     return M
 
 
+def _strains(rows: Array) -> tuple[tuple[tuple[int, int], ...], ...]:
+    """Return first and end of the strains that each freedom of rows (s, k, f, m, b) moves in any element and member."""
+    s, k, f = rows.shape[:3]
+    some = (rows[:, :, :, :1, :1] != 0.0).any(axis=(-2, -1))
+    for index in np.argwhere(~some).tolist():
+        some[tuple(index)] = rows[tuple(index)].any()
+    first, end = some.argmax(axis=0), s - some[::-1].argmax(axis=0)
+    alive = some.any(axis=0)
+    return tuple(
+        tuple((int(first[n, j]), int(end[n, j])) if alive[n, j] else (0, s) for j in range(f)) for n in range(k)
+    )
+
+
 def _uncoupled(W: Array) -> bool:
     """Say whether weights (s, s, m, b) are diagonal in all elements."""
-    off = ~np.eye(len(W), dtype=bool)
-    return not (W[off][:, 0, 0].any() or W[off].any()) if W.size else True
+    s = len(W)
+    return not any(W[i, j].any() for i in range(s) for j in range(s) if i != j)
 
 
 def sparse(cell: UnitCell, model: str) -> tuple[sp.csc_matrix, Array, Array]:

@@ -43,8 +43,8 @@ SPARSE_SHIFT = 1e-15
 """Relative shift of the diagonal by which SuperLU survives an exactly singular matrix."""
 DENSE_LIMIT = 240
 """Largest number of freedoms that goes through the dense batched path."""
-CHUNK_ENTRIES = 2**18
-"""Entries of M in one chunk of the batch: keeps the elimination in cache."""
+CHUNK_ROWS = 20_000
+"""Rows of M in one chunk of the batch: large enough that numpy's calls cost little, small enough for the cache."""
 DEFAULT_MODEL = "joint"
 
 
@@ -155,7 +155,7 @@ def homogenize(cell: UnitCell, *, model: str = DEFAULT_MODEL, fillet: float = 0.
     mechanisms = np.zeros(members, np.int64)
     status = np.full(members, Status.IMPOSSIBLE, np.int8)
     flat = dataclasses.replace(flat, parameters={})
-    step = max(8, CHUNK_ENTRIES // (count + v) ** 2) if count <= DENSE_LIMIT else 1
+    step = max(8, CHUNK_ROWS // (count + v)) if count <= DENSE_LIMIT else 1
     room = np.empty((count + v, count + v, min(step, members))) if count <= DENSE_LIMIT else None
     with np.errstate(all="ignore"):
         for start in range(0, members, step):
