@@ -24,7 +24,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from homog.assembly import dense, freedoms, strained_blocks
+from homog.assembly import energy_parts, freedoms, strained_blocks
 from homog.cell import Status, UnitCell
 from homog.effective import RANK_TOLERANCE, Effective, homogenize
 from homog.errors import InputError
@@ -131,10 +131,9 @@ def held(effective: Effective, index: Index) -> Held:
     cell = whole.at(np.unravel_index(index, whole.shape)) if whole.shape else whole.at(None)
     joined, outside = _jointed(cell, effective.model)
     count = freedoms(joined).count
-    M = np.moveaxis(dense(joined, effective.model), -1, 0)
-    K = np.tril(M[:, :count, :count]) + np.swapaxes(np.tril(M[:, :count, :count], -1), -1, -2)
-    F = np.swapaxes(M[:, count:, :count], -1, -2) @ np.swapaxes(back, -1, -2)
-    u = np.zeros((len(M), count + 1, v))
+    K, F, _ = energy_parts(joined, effective.model)
+    F = F @ np.swapaxes(back, -1, -2)
+    u = np.zeros((len(K), count + 1, v))
     loose = effective.mechanisms.reshape(-1)[index] > 0
     u[~loose, :count] = -np.linalg.solve(K[~loose], F[~loose])
     if loose.any():  # the smallest of the motions that relax it

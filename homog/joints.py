@@ -395,6 +395,7 @@ def _joint(given: tuple[Array, ...], units: Array) -> _Joint:
         for i in range(1, len(l)):
             along, across = turned[3 * i - 3], turned[3 * i - 2]
             turned[3 * i - 3], turned[3 * i - 2] = c[i] * along - s[i] * across, s[i] * along + c[i] * across
+    W = (W + W.swapaxes(0, 1)) / 2.0  # round-off of the stretch counts beside the bending
     return _Joint(given, order, W, _swallowed(gaps, t), outside)
 
 
