@@ -290,7 +290,8 @@ def evaluate(
     """
     import numpy as np
 
-    from homog.columns import COLUMNS, reason_text
+    from homog.columns import COLUMNS
+    from homog.reasons import reason_text
     from homog.report import WHAT_IT_IS, evaluation, number
 
     parent = _parent(material, modulus, poisson, solid_density, deep, yield_stress)
@@ -313,7 +314,7 @@ def evaluate(
                   f"{parent.density_kg_m3:g} kg/m3{deep_words}; model {effective.model}")  # fmt: skip
     table = _table("quantity", "value", "meaning", numeric=("value",))
     for name, value in quantities.items():
-        if name in ("verdict", "reasons", "soft_mode") or value is None:
+        if COLUMNS[name].text or value is None:
             continue
         table.add_row(name, number(value), COLUMNS[name].meaning)
     console.print(table)

@@ -292,8 +292,8 @@ def _head(name: str) -> str:
 
 
 def _show(result: Tuning) -> None:
-    from homog.columns import reason_text
     from homog.problem import words
+    from homog.reasons import reason_text
     from homog.report import WHAT_IT_IS, number
     from homog.screening import records
     from homog.tuning import DISTINCT

@@ -25,6 +25,17 @@ from homog.errors import unknown
 from homog.families import FAMILIES
 from homog.gradient import wall_rates
 from homog.materials import Material
+from homog.reasons import (
+    CELLS_CAUTION,
+    COUPLING_CAUTION,
+    LIGAMENT_CAUTION,
+    PANEL_POISSON,
+    REACH_CAUTION_DEG,
+    SINGULAR_CAUTION,
+    SLENDER_CAUTION,
+    SLENDER_REJECT,
+    reason_level,
+)
 from homog.stress import BEAMS, sections, unit_stresses
 from homog.tensors import compliance_to_voigt, stiffness_to_voigt
 
@@ -41,59 +52,11 @@ SPATIAL: tuple[Kind, ...] = ("spatial",)
 WALLED: tuple[Kind, ...] = ("planar", "spatial")
 ALL: tuple[Kind, ...] = ("planar", "sheet", "spatial")
 
-SLENDER_CAUTION, SLENDER_REJECT = 0.05, 0.25
-LIGAMENT_CAUTION = 0.5
-COUPLING_CAUTION = 0.1
-REACH_CAUTION_DEG = 5.0
-SINGULAR_CAUTION = 1e-6
-CELLS_CAUTION = 4.0
-PANEL_POISSON = 0.1
 HEXAGON_POINTS = 32
 
 FIRST_YIELD = "first yield of a beam's extreme fibre"
 CORNERS = "inner corners of the solid see more"
 VOIGT_PAIRS = (("11", 0, 0), ("12", 0, 1), ("16", 0, 2), ("22", 1, 1), ("26", 1, 2), ("66", 2, 2))
-
-REASONS: Mapping[str, tuple[str, str]] = {
-    "not-finite": ("reject", "a value is not finite"),
-    "walls-merge": ("reject", "the joints run into each other and close the void beside a wall"),
-    "soft-mode": ("reject", "a uniform strain costs no energy: no Poisson's ratio exists, the mode is in soft_mode"),
-    "not-positive": ("reject", "the stiffness is not positive definite: the model is wrong there"),
-    "above-voigt": ("reject", "stiffer than the Voigt bound allows at this density (voigt_ratio over 1): the model or "
-                    "the density is wrong there"),
-    "above-hashin-shtrikman": ("reject", "stiffer than the Hashin-Shtrikman bound allows an isotropic cell "
-                               "(hashin_shtrikman_ratio over 1): the model or the density is wrong there"),
-    "nu-outside-limits": ("reject", "a Poisson's ratio outside what a stable material can have"),
-    "walls-thick": ("reject", f"a wall or strut is thicker than {SLENDER_REJECT:g} of its length: no beam any more; at "
-                    "0.3 a re-entrant cell's E1 comes out 24 to 81 % too low"),
-    "beam-model": ("caution", f"a wall or strut is thicker than {SLENDER_CAUTION:g} of its length, with joints as "
-                   "points: at 0.1 E1 comes out 2 to 14 % too low for a hexagonal cell, 13 to 46 % for a re-entrant "
-                   "one, 38 to 68 % for an arrowhead"),
-    "tangent-nodes": ("caution", "ligaments merge with their nodes along a tangent, which beams do not see: at a "
-                      "thickness of 0.02 of the length E1 comes out 13 to 18 % and G12 34 to 44 % too low, at 0.1 "
-                      "they are 24 to 36 % and 53 to 68 %; use model 'solid'"),
-    "joint-outside": ("caution", "a joint's angle or thickness ratio lies outside its table: taken as a point"),
-    "joints-near": ("caution", "less than 0.4 of a thickness of plain wall is left between two joints: moduli were up "
-                    "to 5 % off"),
-    "joints-overlap": ("reject", "no plain wall is left between two joints: the joint model does not hold; use model "
-                       "'solid'"),
-    "hinge-model": ("caution", "the ligaments are pure hinges: their stretch and the give of the units' corners "
-                    "are left out, so stiffness is an upper estimate"),
-    "ligament-stubby": ("caution", f"the ligament is over {LIGAMENT_CAUTION:g} of its length thick: no flexure strip"),
-    "sheet-model": ("caution", "bar-and-hinge model of a folded sheet: signs and ratios are sound, stiffness "
-                    "may be off by a factor of 2.6 against a full shell"),
-    "panels-unbraced": ("reject", f"a parent's Poisson's ratio under {PANEL_POISSON:g}: the diagonal bars of a panel, "
-                        "proportional to it, hold hardly any shear; give a larger one"),
-    "internal-mechanism": ("caution", "joints can move at no energy, although no uniform strain is free"),
-    "near-singular": ("caution", f"the softest strain is under {SINGULAR_CAUTION:g} of the stiffest: flaws decide"),
-    "coupled": ("caution", "stretch along the axes comes with shear (eta1_12): a strip must be free to shear"),
-    "reach-short": ("caution", f"auxetic only within {REACH_CAUTION_DEG:g} deg of axis 1: alignment decides"),
-    "few-cells": ("caution", f"fewer than {CELLS_CAUTION:g} cells across the part: edges decide"),
-    "band-unknown": ("caution", "no band for E1 and nu12: this family, shape, parent or slenderness was not measured "
-                     "against solids"),
-    "limit-within-band": ("caution", "a limit on E1 or nu12 is met by the value but not by its whole band: confirm by "
-                          "model 'solid' or a test"),
-}  # fmt: skip
 
 
 @functools.cache
@@ -181,10 +144,13 @@ class Results:
     @cached_property
     def bounds(self) -> bounds.Report:
         """Values over bounds."""
-        modulus, poisson = self.parent.modulus_MPa, self.parent.poisson
-        if self.kind == "planar":
-            modulus, poisson = self.parent.wall_modulus_MPa, self.parent.wall_poisson
-        return bounds.report(self.stiffness, self.density, modulus, poisson, sheet=self.kind == "sheet")
+        poisson = self.parent.wall_poisson if self.kind == "planar" else self.parent.poisson
+        return bounds.report(self.stiffness, self.density, self.bound_modulus, poisson, sheet=self.kind == "sheet")
+
+    @property
+    def bound_modulus(self) -> float:
+        """The parent's modulus that bounds are of: in plane strain that of deep walls."""
+        return self.parent.wall_modulus_MPa if self.kind == "planar" else self.parent.modulus_MPa
 
     @cached_property
     def yields(self) -> Array:
@@ -350,22 +316,6 @@ def listed(masks: Mapping[str, Mask], count: int) -> Words:
     return Words(where, tuple(words))
 
 
-def reason_level(code: str) -> str:
-    """Return `reject` or `caution`; a family's own rules reject."""
-    return REASONS[code][0] if code in REASONS else "reject"
-
-
-def reason_text(code: str) -> str:
-    """Return what a reason code means."""
-    if code in REASONS:
-        return REASONS[code][1]
-    for family in FAMILIES.values():
-        for rule in family.rules:
-            if rule.code == code:
-                return rule.words
-    raise unknown("reason", code, REASONS)
-
-
 @dataclass(frozen=True)
 class Column:
     """One output quantity: name with unit, meaning, the kinds of cell that have it, and its function of Results.
@@ -456,7 +406,7 @@ _ALL_COLUMNS = (
     Column("E1_per_hexagon", "E1 over that of the regular hexagonal honeycomb of equal density and parent", ALL,
            lambda r: r.young(0) / r.hexagon),
     Column("E1_per_bound", "E1 over the Voigt bound, relative density times the parent's modulus", ALL,
-           lambda r: r.young(0) / (r.density * r.parent.modulus_MPa)),
+           lambda r: r.young(0) / (r.density * r.bound_modulus)),
     Column("E1_per_hashin_shtrikman", "E1 over the Hashin-Shtrikman bound (isotropic cells only)", ALL,
            lambda r: r.bounds.young_ratio),
     Column("voigt_ratio", "largest stiffness over the Voigt bound, of any strain", ALL, lambda r: r.bounds.voigt_ratio),

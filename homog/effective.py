@@ -202,6 +202,11 @@ def homogenize(cell: UnitCell, *, model: str = DEFAULT_MODEL, fillet: float = 0.
         raise GeometryError(
             f"Cell '{cell.family}' has a value that is not finite or walls of no length; check its parameters"
         )
+    if not shape and status[0] == Status.MECHANISM and flags[0] & (Flag.JOINTS_NEAR | Flag.JOINTS_OVERLAP):
+        raise GeometryError(
+            f"Cell '{cell.family}': its joints run into each other, which the joint model does not hold for; "
+            "use model 'solid' or thinner walls"
+        )
     if not shape and status[0] == Status.MECHANISM:
         mode = soft_mode(effective.stiffness, cell.kind)
         raise MechanismError(

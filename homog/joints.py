@@ -37,7 +37,7 @@ Mask = NDArray[np.bool_]
 TABLES = "joint_tables.npz"
 MATCH_TOLERANCE = 1e-9
 """Gaps (rad) and thickness ratios of a joint that a shape reproduces within this are that shape's."""
-NEAR = 0.4
+NEAR = 0.5
 """Plain wall between the inner corners of neighbouring joints, in thicknesses, below which they feel each other. Below
 none the joints overlap and the model fails: moduli come out wrong by any factor, even negative."""
 MOST_ON_DEMAND = 200
@@ -102,6 +102,10 @@ SHAPES = (
     Shape("even-fork", 3, ((FORK[0], 0.0, FORK[1]),), ((20, 24),),
           lambda u: [_gap(u[0]), TURN - 2.0 * _gap(u[0]), _gap(u[0])],
           lambda u: [1.0 + 0.0 * u[0]] * 3, lambda g, t: [_open(g[0])]),
+    # a stem of twice the arms' thickness; the corners pass its round end at 120 and 150 degrees
+    Shape("double-fork", 3, ((FORK[0], 0.0, *_span(120.0, 150.0), FORK[1]),), ((16, 12, 12, 16),),
+          lambda u: [_gap(u[0]), TURN - 2.0 * _gap(u[0]), _gap(u[0])],
+          lambda u: [1.0 + 0.0 * u[0], 0.5 + 0.0 * u[0], 0.5 + 0.0 * u[0]], lambda g, t: [_open(g[0])]),
     # a stem (wall 0) of another thickness between two equal arms
     Shape("fork", 3, ((FORK[0], 0.0, FORK[1]), (-RATIO, 0.0, RATIO)), ((14, 16), (8, 8)),
           lambda u: [_gap(u[0]), TURN - 2.0 * _gap(u[0]), _gap(u[0])],

@@ -21,13 +21,14 @@ import scipy
 
 from homog.brief import Brief
 from homog.cell import UnitCell
-from homog.columns import COLUMNS, evaluate, reason_level, reason_text
+from homog.columns import COLUMNS, evaluate
 from homog.effective import Effective, homogenize
 from homog.engine import Plan
 from homog.errors import InputError
 from homog.families import FAMILIES
 from homog.files import check_free, whole_file
 from homog.materials import CONFIRM, Material
+from homog.reasons import reason_level, reason_text
 from homog.recheck import SCREENED, given
 from homog.screening import Screening, records
 from homog.store import sha256, write_tables

@@ -32,8 +32,9 @@ COARSE = 1.5
 change between the two was 1.4 to 5 times the error left in the finer one."""
 CONVERGED = 0.005
 """Largest relative change of a modulus between the two meshes that passes for converged."""
-CORNER_STEP_DEG = 22.5
-"""Longest side of the polygon that stands for an outer corner's arc; its area is the arc's."""
+CORNER_STEP_DEG = 7.5
+"""Longest side of the polygon that stands for an outer corner's arc; its area is the arc's. The round end of a thick
+wall between thin ones counts: with 22.5 degrees a hexagon with doubled walls came out up to 1.3 % off."""
 ARC_STEP_DEG = 5.0
 """The same for a curved wall, all across its thickness. With 5 degrees a ring is right within 0.1 %."""
 FILLET_PIECES = 12

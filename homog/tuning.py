@@ -22,11 +22,12 @@ from numpy.typing import NDArray
 
 from homog.brief import Limit
 from homog.cell import Status
-from homog.columns import evaluate, reason_level, reason_text
+from homog.columns import evaluate
 from homog.effective import DEFAULT_MODEL, homogenize
 from homog.errors import InputError
 from homog.materials import UNIT, Material, Process
 from homog.problem import Array, Asked, Problem, meets, posed, words
+from homog.reasons import reason_level, reason_text
 from homog.sensitivity import column_rates
 
 if TYPE_CHECKING:

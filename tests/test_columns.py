@@ -9,21 +9,12 @@ from samples import case_name, cases, possible
 
 import homog
 from homog.cell import Block, Status, UnitCell
-from homog.columns import (
-    COLUMNS,
-    REASONS,
-    column,
-    columns_of,
-    evaluate,
-    listed,
-    reason_level,
-    reason_text,
-    table,
-)
+from homog.columns import COLUMNS, column, columns_of, evaluate, listed, table
 from homog.effective import Effective
 from homog.errors import InputError
 from homog.families import FAMILIES, build, family
 from homog.materials import UNIT, Material, material
+from homog.reasons import REASONS, reason_level, reason_text
 from homog.tensors import isotropic, orthotropic, stiffness_to_voigt
 
 PLA = material("PLA")

@@ -19,7 +19,7 @@ ORDER = [
     *("families", "assembly", "reference"),
     *("effective", "stress", "gradient"),
     *("directional", "bounds", "bands"),
-    "columns",
+    *("reasons", "columns"),
     *("candidates", "brief"),
     *("store", "ranking", "engine", "screening", "recheck"),
     *("sensitivity", "problem", "tuning"),
