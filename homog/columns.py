@@ -37,7 +37,7 @@ from homog.reasons import (
     reason_level,
 )
 from homog.stress import BEAMS, sections, unit_stresses
-from homog.tensors import compliance_to_voigt, stiffness_to_voigt
+from homog.tensors import compliance_to_voigt, inverse, stiffness_to_voigt
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -115,7 +115,7 @@ class Results:
         """Mandel compliance, NaN where there is none: impossible members and soft modes."""
         sound = self.status == Status.OK
         safe = np.where(sound[:, None, None], self.stiffness, np.eye(self.stiffness.shape[-1]))
-        return np.where(sound[:, None, None], np.linalg.inv(safe), np.nan)
+        return np.where(sound[:, None, None], inverse(safe), np.nan)
 
     @cached_property
     def membrane(self) -> Array:

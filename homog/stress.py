@@ -29,7 +29,7 @@ from numpy.typing import ArrayLike, NDArray
 
 from homog.assembly import Strained, dense, freedoms, sparse, strained_blocks
 from homog.cell import Block, Status, UnitCell
-from homog.effective import CHUNK_ENTRIES, DENSE_LIMIT, RANK_TOLERANCE, SPARSE_SHIFT, Effective, homogenize
+from homog.effective import CHUNK_ROWS, DENSE_LIMIT, RANK_TOLERANCE, SPARSE_SHIFT, Effective, homogenize
 from homog.errors import InputError
 from homog.joints import applies, with_joints
 from homog.mesh import Mesh, strain_rows
@@ -150,7 +150,7 @@ def member_forces(effective: Effective) -> tuple[Members, ...]:
     ]
     good = np.flatnonzero(effective.status.reshape(b) == Status.OK)
     size = 3 * sum(len(block) for block in cell.blocks) - 2 if condensed else freedoms(flat).count
-    step = max(8, CHUNK_ENTRIES // (size + v) ** 2) if size <= DENSE_LIMIT else 1
+    step = max(8, CHUNK_ROWS // (size + v)) if size <= DENSE_LIMIT else 1
     for part in (good[i : i + step] for i in range(0, len(good), step)):
         piece = flat.at(part)
         given = with_joints(piece)[0] if condensed else piece
