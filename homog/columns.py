@@ -219,8 +219,11 @@ class Results:
         Bias: every wall is off alike. Scatter: each wall of the cell by itself, added in quadrature; every cell repeats
         it, so that a part of many cells, whose walls all differ, scatters less. NaN without tolerance or derivative.
         """
-        if not self.tolerance > 0.0 or self.effective.model == "solid" or self.cell.family not in FAMILIES:
+        if not self.tolerance > 0.0 or self.cell.family not in FAMILIES:
             return np.full((4, self.count), np.nan)
+        if self.effective.model == "solid":  # a mesh has no derivative; the joints that it agrees with have
+            cell = self.cell if self.shape else self.cell.at(None)
+            return Results(homogenize(cell, model="joint"), tolerance=self.tolerance).tolerances
         together, apart, plain = wall_rates(self.effective)
 
         def changes(rate: Array, S: Array) -> tuple[Array, Array]:
