@@ -18,7 +18,7 @@ from __future__ import annotations
 import dataclasses
 import functools
 import itertools
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from importlib import resources
 from typing import Any, NamedTuple
@@ -90,6 +90,10 @@ def _gap(coordinate: Any) -> Any:
     return 2.0 * np.arctan(np.exp(coordinate))
 
 
+def _forked(gap: Any) -> list[Any]:
+    return [gap, TURN - 2.0 * gap, gap]
+
+
 def _span(low_deg: float, high_deg: float) -> tuple[float, float]:
     return float(_open(np.radians(low_deg))), float(_open(np.radians(high_deg)))
 
@@ -102,11 +106,11 @@ TURN = 2.0 * np.pi
 SHAPES = (
     # a stem (wall 0) between two arms, all equal: honeycombs
     Shape("even-fork", 3, ((FORK[0], 0.0, FORK[1]),), ((20, 24),),
-          lambda u: [_gap(u[0]), TURN - 2.0 * _gap(u[0]), _gap(u[0])],
+          lambda u: _forked(_gap(u[0])),
           lambda u: [1.0 + 0.0 * u[0]] * 3, lambda g, t: [_open(g[0])]),
     # a stem (wall 0) of another thickness between two equal arms
     Shape("fork", 3, ((FORK[0], 0.0, FORK[1]), (-RATIO, 0.0, RATIO)), ((14, 16), (8, 8)),
-          lambda u: [_gap(u[0]), TURN - 2.0 * _gap(u[0]), _gap(u[0])],
+          lambda u: _forked(_gap(u[0])),
           lambda u: [1.0 + 0.0 * u[1], np.exp(u[1]), np.exp(u[1])],
           lambda g, t: [_open(g[0]), np.log(t[1] / t[0])]),
     # two straight walls that cross: square, kagome
@@ -309,10 +313,7 @@ def with_joints(cell: UnitCell) -> tuple[UnitCell, Mask, Mask]:
     blocks, (members,) = [block for block in cell.blocks if len(block)], cell.shape
     ends_of, shifts_of = (np.concatenate([getattr(b, name) for b in blocks]) for name in ("nodes", "shifts"))
     m = len(ends_of)
-    t, E, nu = (
-        np.concatenate([np.broadcast_to(b.props[name], (members, len(b))) for b in blocks], axis=1).T
-        for name in PLAIN_WALL
-    )
+    t, E, nu = (_by_wall([b.props[name] for b in blocks], [len(b) for b in blocks]) for name in PLAIN_WALL)
     points, lattice = (np.ascontiguousarray(np.moveaxis(x, (-1, -2), (0, 1))) for x in (cell.points, cell.lattice))
     reach = np.einsum("mkp,dpb->dkmb", shifts_of.astype(float), lattice)
     home = points[:, ends_of[:, 0]] + reach[:, 0]
@@ -345,7 +346,8 @@ def with_joints(cell: UnitCell) -> tuple[UnitCell, Mask, Mask]:
         if joint is None:
             joint = _joint(given, units[:, walls] * np.where(ends == 0, 1.0, -1.0)[:, None])
             known.append(joint)
-        np.subtract.at(plain, walls, joint.cut)
+        for wall, cut in zip(walls, joint.cut, strict=True):  # both ends of a wall may meet here
+            plain[wall] -= cut
         outside |= joint.outside
         walls, ends = walls[joint.order], ends[joint.order]
         shifts = -shifts_of[walls, ends]  # of the wall's middle, seen from this end
@@ -363,6 +365,14 @@ def with_joints(cell: UnitCell) -> tuple[UnitCell, Mask, Mask]:
         ),
     )  # fmt: skip
     return joined, outside, (plain < NEAR * t).any(axis=0)
+
+
+def _by_wall(values: Sequence[Array], lengths: Sequence[int]) -> Array:
+    """Return a property (..., m) of several blocks, wall by wall: (m, b), or (m, 1) where all members share it."""
+    shared = all(value.ndim == 1 or value.strides[0] == 0 for value in values)
+    rows = [value[None] if value.ndim == 1 else value[:1] if shared else value for value in values]
+    members = max(len(row) for row in rows)
+    return np.concatenate([np.broadcast_to(r, (members, n)).T for r, n in zip(rows, lengths, strict=True)])
 
 
 class _Joint(NamedTuple):
