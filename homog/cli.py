@@ -396,8 +396,7 @@ def sweep(
     plan = Plan(bare_brief(sources, parent, model))
     with started(workers, cluster, parts=len(plan)) as using, progress(count, f"sweeping {id}") as advance:
         tables, whole = sweep_tables(plan, using, progress=advance)
-        about = provenance(__version__, model, parent, family=id, rows=count)
-        stream_table(tables, whole, out, about, overwrite=overwrite)
+        stream_table(tables, whole, out, provenance(__version__, model, parent, family=id, rows=count), overwrite=overwrite)
     print(f"wrote {out}: {count:,} rows")
     return 0
 
