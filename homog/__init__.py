@@ -35,6 +35,8 @@ _HOME = {
     "read_brief": "brief",
     "screen": "screening",
     "run_screen": "screening",
+    "sensitivities": "sensitivity",
+    "tune": "tuning",
     "HomogError": "errors",
     "InputError": "errors",
     "GeometryError": "errors",
@@ -87,3 +89,5 @@ if TYPE_CHECKING:
     from homog.materials import process as process
     from homog.screening import run_screen as run_screen
     from homog.screening import screen as screen
+    from homog.sensitivity import sensitivities as sensitivities
+    from homog.tuning import tune as tune

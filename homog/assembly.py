@@ -15,20 +15,23 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 from dataclasses import dataclass
-from typing import TYPE_CHECKING
+from functools import cache
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 from numpy.typing import NDArray
 
 from homog.cell import Block, Kind, UnitCell
 from homog.elements import check_block, check_model, element, rotations
-from homog.tensors import basis
+from homog.tensors import PAIRS
 
 if TYPE_CHECKING:
     import scipy.sparse as sp
 
 Array = NDArray[np.float64]
 Index = NDArray[np.int64]
+
+HALF = np.sqrt(0.5)
 
 
 @dataclass(frozen=True)
@@ -67,22 +70,27 @@ def _affine_strains(kind: Kind, rows: Array, x: Array, middle: Array) -> Array:
     is a rigid motion, which strains no element, and it keeps round-off small far from the origin.
     """
     d = len(x[0])
-    y = x - x[0]
-    moved = np.einsum("skj...,ki...->sij...", rows[:, :, :d], y)  # strain per unit gradient u_j,i
-    if kind == "planar" or kind == "spatial":
-        return np.asarray(np.einsum("vij,sij...->sv...", basis(d), moved))
-    E = basis(2)
-    out = np.empty((rows.shape[0], 6) + rows.shape[3:])
-    out[:, :3] = np.einsum("vij,sij...->sv...", E, moved[:, :2, :2])
-    turned = np.einsum("vij,kj...->vki...", E, y[:, :2])  # K x
-    u = (x[:, 2] - middle)[:, None] * turned
-    w = -0.5 * np.einsum("vki...,ki...->vk...", turned, y[:, :2])
-    out[:, 3:] = np.einsum("ski...,vki...->sv...", rows[:, :, :2], u) + np.einsum(
-        "sk...,vk...->sv...", rows[:, :, 2], w
-    )
+    y = x[1:] - x[0]
+    rows = rows[:, 1:]
+    out = np.empty((len(rows), strain_count(kind), *rows.shape[3:]))
+
+    def sum_of(*terms: tuple[int, Array]) -> Array:
+        """The strains (s, *) of motions (k - 1, *) of the nodes along or about their freedoms."""
+        strains = [np.einsum("sk...,k...->s...", rows[:, :, f], motion) for f, motion in terms]
+        return np.asarray(sum(strains))
+
+    for v, (i, j) in enumerate(PAIRS[2 if kind == "sheet" else d]):
+        out[:, v] = sum_of((i, y[:, i])) if i == j else sum_of((j, y[:, i]), (i, y[:, j])) * HALF
+    if kind != "sheet":
+        return out
+    (y1, y2), z = (y[:, 0], y[:, 1]), x[1:, 2] - middle
+    out[:, 3] = sum_of((0, z * y1), (2, -0.5 * y1 * y1))
+    out[:, 4] = sum_of((1, z * y2), (2, -0.5 * y2 * y2))
+    out[:, 5] = sum_of((0, z * y2), (1, z * y1), (2, -y1 * y2)) * HALF
     if rows.shape[2] > d:
-        spin = np.stack([-turned[:, :, 1], turned[:, :, 0]], axis=2)
-        out[:, 3:] += np.einsum("ski...,vki...->sv...", rows[:, :, 3:5], spin)
+        out[:, 3] += sum_of((4, y1))
+        out[:, 4] += sum_of((3, -y2))
+        out[:, 5] += sum_of((3, -y1), (4, y2)) * HALF
     return out
 
 
@@ -99,8 +107,9 @@ class Strained:
 def strained_blocks(cell: UnitCell, model: str) -> Iterator[Strained]:
     """Yield every block's rows, weights and affine strains of a flat batch (b,), its last axis the batch."""
     check_model(model)
-    points, lattice = (np.ascontiguousarray(np.moveaxis(x, 0, -1)) for x in (cell.points, cell.lattice))
-    middle = (points[:, -1].min(axis=0) + points[:, -1].max(axis=0)) / 2.0
+    points = np.ascontiguousarray(np.moveaxis(cell.points, (-1, -2), (0, 1)))  # (d, n, b)
+    lattice = np.ascontiguousarray(np.moveaxis(cell.lattice, 0, -1))
+    middle = (points[-1].min(axis=0) + points[-1].max(axis=0)) / 2.0
     for block in cell.blocks:
         if not len(block):
             continue
@@ -110,48 +119,116 @@ def strained_blocks(cell: UnitCell, model: str) -> Iterator[Strained]:
             shared = value[:1] if value.strides[0] == 0 else value  # the same for all members: one is enough
             props[name] = np.ascontiguousarray(np.moveaxis(shared, (0, 1), (-1, -2)))
         check_block(block.kind, cell.d, block.nodes.shape[1], props)
-        x = points[block.nodes] + np.einsum("mkp,pdb->mkdb", block.shifts.astype(float), lattice)
-        x = np.ascontiguousarray(np.moveaxis(x, 0, 2))  # (k, d, m, b)
+        x = np.empty((block.nodes.shape[1], cell.d, len(block), *points.shape[2:]))
+        for k, (nodes, shifts) in enumerate(zip(block.nodes.T, block.shifts.swapaxes(0, 1), strict=True)):
+            np.take(points, nodes, axis=1, out=x[k])
+            away = np.flatnonzero(shifts.any(axis=1))
+            if away.size:
+                x[k][:, away] += np.einsum("mp,pdb->dmb", shifts[away].astype(float), lattice)
         rows = kind.rows(x, props)
         yield Strained(block, rows, kind.weights(x, props, model), _affine_strains(cell.kind, rows, x, middle))
 
 
-def dense(cell: UnitCell, model: str) -> Array:
+@cache
+def _places(
+    numbers: tuple[tuple[int, ...], ...], first: int, v: int, strains: tuple[tuple[tuple[int, int], ...], ...]
+) -> tuple[list[Any], list[Any], list[Any]]:
+    """Say where an element's freedoms (k, f) go: copies of rows into columns, runs of columns, and the columns.
+
+    Columns are the distinct numbers in order, then the macroscopic strains from `first` on. A copy is (node, freedom,
+    end, column, whether it adds: an element may join a node to its own image), a run (column, end, number), a column
+    (number, first strain, end); `strains` (k, f) says which strains a freedom may move, as first and end.
+    """
+    live = sorted({number for node in numbers for number in node if number >= 0})
+    column = {number: c for c, number in enumerate(live)}
+    copies: list[Any] = []
+    filled: set[int] = set()
+    for k, node in enumerate(numbers):
+        for f, number in enumerate(node):
+            if number < 0:
+                continue
+            adds = number in filled
+            last = copies[-1] if copies else None
+            if last and last[0] == k and last[2] == f and last[3] + f - last[1] == column[number] and last[4] == adds:
+                last[2] = f + 1
+            else:
+                copies.append([k, f, f + 1, column[number], adds])
+        filled |= set(node)
+    targets = np.array([*live, *range(first, first + v)])
+    breaks = np.flatnonzero(np.diff(targets) != 1) + 1
+    starts = [0, *breaks.tolist()]
+    runs = [(a, b, int(targets[a])) for a, b in zip(starts, [*starts[1:], len(targets)], strict=True)]
+    moved: dict[int, list[tuple[int, int]]] = {}
+    for node, spans in zip(numbers, strains, strict=True):
+        for number, span in zip(node, spans, strict=True):
+            moved.setdefault(number, []).append(span)
+    everything = [span for spans in strains for span in spans]
+    columns = []
+    for number in targets.tolist():
+        felt = moved.get(number, everything) if number < first else everything
+        columns.append((number, min(low for low, _ in felt), max(high for _, high in felt)))
+    return copies, runs, columns
+
+
+def dense(cell: UnitCell, model: str, out: Array | None = None) -> Array:
     """Return M of every member of a flat batch, ndarray of shape (N + v, N + v, b): freedoms, then macroscopic strains.
 
-    Only the lower triangle is filled. Entries accumulate, so an element may join a node to its own image. Structural
-    zeros of rows and weights are skipped, so a kernel need not say which of its entries vanish.
+    Only the upper triangle is filled. Entries accumulate, so an element may join a node to its own image. `out` is
+    room for M that is used again.
     """
     free = freedoms(cell)
     v = strain_count(cell.kind)
-    M = np.zeros((free.count + v, free.count + v, *cell.shape))
+    M = np.empty((free.count + v, free.count + v, *cell.shape)) if out is None else out
+    for i in range(len(M)):
+        M[i, i:] = 0.0
     for part in strained_blocks(cell, model):
-        rows, W, G = part.rows, part.weights, part.affine
-        s = len(rows)
-        active = ~(np.abs(rows).max(axis=(-2, -1)) == 0.0)  # (s, k, f); what is NaN in one member counts in the others
-        coupled = ~(np.abs(W).max(axis=(-2, -1)) == 0.0)
+        s, k, f, _, b = part.rows.shape
+        coupled = not _uncoupled(part.weights)
+        strains = _strains(part.rows)
+        room = np.empty((2, s, k * f + v, b))
         for e, nodes in enumerate(part.block.nodes):
-            strain: list[dict[int, Array]] = []
-            for i in range(s):
-                row: dict[int, Array] = {}
-                for k, f in zip(*np.nonzero(active[i]), strict=True):
-                    number = int(free.numbers[nodes[k], f])
-                    if number >= 0:
-                        row[number] = row[number] + rows[i, k, f, e] if number in row else rows[i, k, f, e]
-                for j in range(v):
-                    row[free.count + j] = G[i, j, e]
-                strain.append(row)
-            for i in range(s):
-                pull: dict[int, Array] = {}
-                for other in np.flatnonzero(coupled[i]):
-                    for number, value in strain[other].items():
-                        term = W[i, other, e] * value
-                        pull[number] = pull[number] + term if number in pull else term
-                for a, value in strain[i].items():
-                    for b, force in pull.items():
-                        if b <= a:
-                            M[a, b] += value * force
+            numbers = tuple(map(tuple, free.numbers[nodes, :f].tolist()))
+            copies, runs, columns = _places(numbers, free.count, v, strains)
+            B, pull = room[:, :, : len(columns)]
+            for node, start, stop, c, adds in copies:
+                if adds:
+                    B[:, c : c + stop - start] += part.rows[:, node, start:stop, e]
+                else:
+                    B[:, c : c + stop - start] = part.rows[:, node, start:stop, e]
+            B[:, len(columns) - v :] = part.affine[:, :, e]
+            W = part.weights[:, :, e]
+            if coupled:
+                for c, (_, low, high) in enumerate(columns):
+                    np.einsum("ijb,jb->ib", W[:, low:high], B[low:high, c], out=pull[:, c])
+            else:
+                for i in range(s):
+                    np.multiply(W[i, i], B[i], out=pull[i])
+            for c, (number, low, high) in enumerate(columns):
+                force = np.einsum("ib,icb->cb", B[low:high, c], pull[low:high, c:])
+                for start, stop, first in runs:
+                    if stop > c:
+                        begin = max(start, c)
+                        M[number, first + begin - start : first + stop - start] += force[begin - c : stop - c]
     return M
+
+
+def _strains(rows: Array) -> tuple[tuple[tuple[int, int], ...], ...]:
+    """Return first and end of the strains that each freedom of rows (s, k, f, m, b) moves in any element and member."""
+    s, k, f = rows.shape[:3]
+    some = (rows[:, :, :, :1, :1] != 0.0).any(axis=(-2, -1))
+    for index in np.argwhere(~some).tolist():
+        some[tuple(index)] = rows[tuple(index)].any()
+    first, end = some.argmax(axis=0), s - some[::-1].argmax(axis=0)
+    alive = some.any(axis=0)
+    return tuple(
+        tuple((int(first[n, j]), int(end[n, j])) if alive[n, j] else (0, s) for j in range(f)) for n in range(k)
+    )
+
+
+def _uncoupled(W: Array) -> bool:
+    """Say whether weights (s, s, m, b) are diagonal in all elements."""
+    s = len(W)
+    return not any(W[i, j].any() for i in range(s) for j in range(s) if i != j)
 
 
 def sparse(cell: UnitCell, model: str) -> tuple[sp.csc_matrix, Array, Array]:

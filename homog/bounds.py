@@ -15,7 +15,7 @@ import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from homog.errors import InputError
-from homog.tensors import Array
+from homog.tensors import Array, eigenvalues
 
 BOUND_TOLERANCE = 1e-6
 """A bound is exceeded when the value is over it by more than this, relative: round-off and summed joints aside."""
@@ -236,7 +236,7 @@ def _square(stiffness: ArrayLike) -> Array:
     C = np.asarray(stiffness, float)
     if C.ndim < 2 or C.shape[-2:] not in ((3, 3), (6, 6)):
         raise InputError(f"stiffness has shape {C.shape}; it must end in (3, 3) (plane) or (6, 6) (space), Mandel")
-    return np.where(np.isfinite(C).all(axis=(-2, -1))[..., None, None], C, np.nan)
+    return np.where(np.isfinite(C.sum(axis=(-2, -1)))[..., None, None], C, np.nan)
 
 
 def _dimension(C: Array) -> int:
@@ -269,6 +269,9 @@ def _ratio(value: Array, bound: Array) -> Array:
 
 def _ends(M: Array) -> tuple[Array, Array]:
     """Smallest and largest eigenvalue (...) of symmetric matrices (..., v, v), NaN where they are NaN."""
+    if M.shape[-1] == 3:
+        values = eigenvalues(np.ascontiguousarray(np.moveaxis(M, (-2, -1), (0, 1))))
+        return np.asarray(values.min(axis=0)), np.asarray(values.max(axis=0))
     known = ~np.asarray(np.isnan(M).any(axis=(-2, -1)))[..., None]
     values = np.where(known, np.linalg.eigvalsh(np.where(known[..., None], M, np.eye(M.shape[-1]))), np.nan)
     return values[..., 0], values[..., -1]

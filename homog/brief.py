@@ -99,6 +99,12 @@ class Brief:
     text: str = field(repr=False, default="")
 
     @property
+    def known(self) -> dict[str, Any]:
+        """What columns may know of the brief (`columns.quantities`)."""
+        limits = {limit.column: (limit.low, limit.high) for limit in self.limits}
+        return {"part": self.part, "limits": limits, "tolerance": self.process.wall_tolerance_mm}
+
+    @property
     def count(self) -> int:
         """How many candidates the brief describes."""
         return sum(c.count for c in self.candidates)
@@ -219,7 +225,7 @@ class _Reader:
             )
         kinds = {c.family.kind for c in candidates}
         made_by = self._process(tables["process"])
-        limits = self._merged([*self._limits(data.get("limits", {}), kinds), *_process_limits(made_by)])
+        limits = self._merged([*self._limits(data.get("limits", {}), kinds), *process_limits(made_by)])
         goals, front, keep, per_family = self._rank(tables["rank"], kinds)
         return Brief(
             " ".join(self._text(data.get("title", "untitled brief"), "title").split()),
@@ -424,7 +430,7 @@ def _short(value: Any) -> str:
     return words if len(words) <= 60 else words[:57] + "..."
 
 
-def _process_limits(made_by: Process) -> list[Limit]:
+def process_limits(made_by: Process) -> list[Limit]:
     """Return what a process asks of every candidate."""
     limits = []
     if made_by.min_wall_mm > 0.0:

@@ -24,9 +24,11 @@ from homog.errors import HomogError, InputError
 from homog.terminal import Stopped, kept, progress, teller
 
 if TYPE_CHECKING:
+    from pandas import DataFrame
     from rich.console import Console
     from rich.table import Table
 
+    from homog.brief import Brief
     from homog.effective import Effective
     from homog.families import Family
     from homog.materials import Material
@@ -54,6 +56,7 @@ MaterialName = Annotated[
 Modulus = Annotated[str | None, typer.Option("--modulus", metavar="MPA", help="Parent's Young's modulus, MPa.")]
 Poisson = Annotated[str | None, typer.Option("--poisson", metavar="NU", help="Parent's Poisson's ratio.")]
 SolidDensity = Annotated[str | None, typer.Option("--solid-density", metavar="KG_M3", help="Parent's density, kg/m3.")]
+Yield = Annotated[str | None, typer.Option("--yield", metavar="MPA", help="Parent's yield or strength, MPa.")]
 Deep = Annotated[
     bool, typer.Option("--deep", help="Planar cells deep along axis 3: plane strain instead of plane stress.")
 ]
@@ -67,6 +70,9 @@ Model = Annotated[
 ]
 Fillet = Annotated[
     float, typer.Option("--fillet", metavar="MM", help="Radius of inner corners, mm; model solid only, else sharp.")
+]
+Quantity = Annotated[
+    str, typer.Option("--quantity", metavar="Q", help="stiffness (E, nu, G), or yield (first yield of a wall's fibre).")
 ]
 Overwrite = Annotated[bool, typer.Option("--overwrite", help="Replace a file that is there already.")]
 FIGURES = (".svg", ".png", ".pdf")
@@ -95,12 +101,19 @@ def _table(*headers: str, numeric: Sequence[str] = ()) -> Table:
     return table
 
 
-def _parent(name: str | None, modulus: str | None, poisson: str | None, density: str | None, deep: bool) -> Material:
+def _parent(
+    name: str | None,
+    modulus: str | None,
+    poisson: str | None,
+    density: str | None,
+    deep: bool,
+    strength: str | None = None,
+) -> Material:
     from homog.materials import UNIT, material
 
     values: dict[str, Any] = {}
     given = (("modulus_MPa", "--modulus", modulus), ("poisson", "--poisson", poisson),
-             ("density_kg_m3", "--solid-density", density))  # fmt: skip
+             ("density_kg_m3", "--solid-density", density), ("yield_MPa", "--yield", strength))  # fmt: skip
     for key, option, text in given:
         if text is not None:
             values[key] = _number(text, f"Option {option}", "give one number, such as 0.3 or 1600")
@@ -263,6 +276,7 @@ def evaluate(
     modulus: Modulus = None,
     poisson: Poisson = None,
     solid_density: SolidDensity = None,
+    yield_stress: Yield = None,
     deep: Deep = False,
     model: Model = "joint",
     fillet: Fillet = 0.0,
@@ -274,10 +288,11 @@ def evaluate(
     """
     import numpy as np
 
-    from homog.columns import COLUMNS, reason_text
+    from homog.columns import COLUMNS
+    from homog.reasons import reason_text
     from homog.report import WHAT_IT_IS, evaluation, number
 
-    parent = _parent(material, modulus, poisson, solid_density, deep)
+    parent = _parent(material, modulus, poisson, solid_density, deep, yield_stress)
     effective = _one(id, parameters, parent, model, fillet)
     card = evaluation(effective)
     given, quantities, stiffness = card["parameters"], card["columns"], np.array(card["stiffness"], float)
@@ -297,7 +312,7 @@ def evaluate(
                   f"{parent.density_kg_m3:g} kg/m3{deep_words}; model {effective.model}")  # fmt: skip
     table = _table("quantity", "value", "meaning", numeric=("value",))
     for name, value in quantities.items():
-        if name in ("verdict", "reasons", "soft_mode") or value is None:
+        if COLUMNS[name].text or value is None:
             continue
         table.add_row(name, number(value), COLUMNS[name].meaning)
     console.print(table)
@@ -327,11 +342,13 @@ def polar(
     modulus: Modulus = None,
     poisson: Poisson = None,
     solid_density: SolidDensity = None,
+    yield_stress: Yield = None,
     deep: Deep = False,
     model: Model = "joint",
+    quantity: Quantity = "stiffness",
     overwrite: Overwrite = False,
 ) -> int:
-    """Draw E, nu and G of one cell against direction, with the cell beside them.
+    """Draw E, nu and G of one cell, or its first yield, against direction, with the cell beside them.
 
     Example: homog polar reentrant-honeycomb angle=-30 thickness=1 --material PLA --out bow-tie.png
     """
@@ -341,11 +358,11 @@ def polar(
     if out.suffix not in FIGURES:
         raise InputError(f"Figure '{out}' has the suffix '{out.suffix}'; allowed are {', '.join(FIGURES)}")
     check_free(out, overwrite=overwrite)
-    parent = _parent(material, modulus, poisson, solid_density, deep)
+    parent = _parent(material, modulus, poisson, solid_density, deep, yield_stress)
     effective = _one(id, parameters, parent, model)
     from homog import plots
 
-    figure = plots.polar_figure(effective, title=family(id).title)
+    figure = plots.polar_figure(effective, quantity=quantity, title=family(id).title)
     with whole_file(out, overwrite=overwrite) as temporary:
         plots.save(figure, temporary)
     print(f"wrote {out}")
@@ -366,6 +383,7 @@ def sweep(
     modulus: Modulus = None,
     poisson: Poisson = None,
     solid_density: SolidDensity = None,
+    yield_stress: Yield = None,
     deep: Deep = False,
     model: Model = "joint",
     overwrite: Overwrite = False,
@@ -384,7 +402,7 @@ def sweep(
     from homog.screening import sweep_tables
 
     check_table(out, overwrite=overwrite)
-    found, parent = family(id), _parent(material, modulus, poisson, solid_density, deep)
+    found, parent = family(id), _parent(material, modulus, poisson, solid_density, deep, yield_stress)
     given = _assigned(found, parameters)
     words = {name: values for name, values in given.items() if found.parameter(name).choices}
     spans = {name: values for name, values in given.items() if name not in words}
@@ -396,7 +414,8 @@ def sweep(
     plan = Plan(bare_brief(sources, parent, model))
     with started(workers, cluster, parts=len(plan)) as using, progress(count, f"sweeping {id}") as advance:
         tables, whole = sweep_tables(plan, using, progress=advance)
-        stream_table(tables, whole, out, provenance(__version__, model, parent, family=id, rows=count), overwrite=overwrite)
+        about = provenance(__version__, model, parent, family=id, rows=count)
+        stream_table(tables, whole, out, about, overwrite=overwrite)
     print(f"wrote {out}: {count:,} rows")
     return 0
 
@@ -407,6 +426,7 @@ def screen(
     out: Annotated[Path, typer.Option("--out", metavar="FOLDER", help="New folder for tables, figures and summary.")],
     resume: Annotated[bool, typer.Option("--resume", help="Go on with a run into FOLDER that has stopped.")] = False,
     csv: Annotated[bool, typer.Option("--csv", help="Write candidates.csv whatever its size.")] = False,
+    solids: Annotated[bool, typer.Option(help="Look at the best again as solids, and rank by what they say.")] = True,
     workers: Processes = 0,
     cluster: Cluster = "",
 ) -> int:
@@ -416,11 +436,15 @@ def screen(
     polar plot per shortlisted cell, a property chart, summary.md and a copy of the brief. FOLDER appears when all is
     there; until then the run grows in FOLDER.partial, and --resume goes on with it after a stop of any kind.
 
+    Twice as many as are kept, 60 at most, are looked at again as solids of their true section where they are planar
+    walls and the extra `solid` is installed; the shortlist is ranked by the result and shows both numbers.
+
     Exit status 3 if nothing meets the brief: the summary then says what is in the way.
     """
     from homog.brief import read_brief
     from homog.engine import Plan, started
     from homog.files import whole_folder
+    from homog.recheck import MOST, missing_extra, second_look
     from homog.report import write_screening
     from homog.screening import run_screen
     from homog.store import Folder, has_parts
@@ -428,24 +452,35 @@ def screen(
     asked = read_brief(brief)
     with whole_folder(out, resume=resume, worth=has_parts) as place:
         parts = Folder(place, Plan(asked).about())
+        unlooked = "it was not asked for" if not solids else missing_extra() if asked.model != "solid" else ""
+
+        def second(best: DataFrame, asked: Brief) -> DataFrame:
+            with progress(min(len(best), MOST), "solids") as advance:
+                return second_look(best, asked, workers=workers, progress=advance)
+
+        looks = None if unlooked or asked.model == "solid" else second
         with (
             kept(place),
             started(workers, cluster, parts=parts.missing()) as using,
             progress(asked.count, "screening", parts=parts, computing=using.words) as advance,
         ):
-            found = run_screen(asked, parts=parts, using=using, progress=advance)
+            found = run_screen(asked, parts=parts, using=using, progress=advance, second=looks)
         with kept(place):
-            write_screening(found, place, version=__version__, brief_name=brief.name, csv=csv, progress=teller())
-    if found.met:
+            write_screening(found, place, version=__version__, brief_name=brief.name, csv=csv, progress=teller(),
+                            unlooked=unlooked)  # fmt: skip
+    if len(found.shortlist):
         best = found.shortlist.iloc[0]
         print(f"{found.met:,} of {asked.count:,} candidates meet the brief; "
               f"first: {best['family']} (candidate {best['candidate']}).")  # fmt: skip
+    elif found.met:
+        print(f"{found.met:,} of {asked.count:,} candidates meet the brief by the screen's model, none of the best as "
+              "a solid.")  # fmt: skip
     else:
         worst = max(found.falls, key=lambda fall: fall.missed, default=None)
         why = f"most miss: {worst.limit.words}" if worst and worst.missed else "every one is rejected"
         print(f"nothing of {asked.count:,} candidates meets the brief; {why}.")
     print(f"Results: {out / 'summary.md'}")
-    return 0 if found.met else 3
+    return 0 if len(found.shortlist) else 3
 
 
 @app.callback(invoke_without_command=True)
@@ -459,6 +494,8 @@ def _root(
 
 def main(argv: Sequence[str] | None = None) -> int:
     """Run the command line on `argv` (the process's own arguments if None) and return the exit status."""
+    import homog.cli_tune  # noqa: F401  # its commands register themselves
+
     try:
         status = app(args=list(sys.argv[1:] if argv is None else argv), prog_name="homog", standalone_mode=False)
         if status == 130:  # what the parser makes of an interrupt, or else an Abort

@@ -18,64 +18,45 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 from numpy.typing import NDArray
 
-from homog import bounds, directional
+from homog import bands, bounds, directional
 from homog.cell import Kind, Status
 from homog.effective import Effective, Flag, homogenize, soft_mode
 from homog.errors import unknown
 from homog.families import FAMILIES
+from homog.gradient import wall_rates
 from homog.materials import Material
-from homog.tensors import compliance_to_voigt, stiffness_to_voigt
+from homog.reasons import (
+    CELLS_CAUTION,
+    COUPLING_CAUTION,
+    LIGAMENT_CAUTION,
+    PANEL_POISSON,
+    REACH_CAUTION_DEG,
+    SINGULAR_CAUTION,
+    SLENDER_CAUTION,
+    SLENDER_REJECT,
+    reason_level,
+)
+from homog.stress import BEAMS, sections, unit_stresses
+from homog.tensors import compliance_to_voigt, inverse, stiffness_to_voigt
 
 if TYPE_CHECKING:
     import pandas as pd
 
 Array = NDArray[np.float64]
 Mask = NDArray[np.bool_]
+Limits = Mapping[str, tuple[float, float]]
 
 PLANAR: tuple[Kind, ...] = ("planar",)
 SHEET: tuple[Kind, ...] = ("sheet",)
 SPATIAL: tuple[Kind, ...] = ("spatial",)
+WALLED: tuple[Kind, ...] = ("planar", "spatial")
 ALL: tuple[Kind, ...] = ("planar", "sheet", "spatial")
 
-SLENDER_CAUTION, SLENDER_REJECT = 0.05, 0.25
-LIGAMENT_CAUTION = 0.5
-COUPLING_CAUTION = 0.1
-REACH_CAUTION_DEG = 5.0
-SINGULAR_CAUTION = 1e-6
-CELLS_CAUTION = 4.0
-PANEL_POISSON = 0.1
 HEXAGON_POINTS = 32
 
+FIRST_YIELD = "first yield of a beam's extreme fibre"
+CORNERS = "inner corners of the solid see more"
 VOIGT_PAIRS = (("11", 0, 0), ("12", 0, 1), ("16", 0, 2), ("22", 1, 1), ("26", 1, 2), ("66", 2, 2))
-
-REASONS: Mapping[str, tuple[str, str]] = {
-    "not-finite": ("reject", "a value is not finite"),
-    "walls-merge": ("reject", "the joints run into each other and close the void beside a wall"),
-    "soft-mode": ("reject", "a uniform strain costs no energy: no Poisson's ratio exists, the mode is in soft_mode"),
-    "not-positive": ("reject", "the stiffness is not positive definite: the model is wrong there"),
-    "above-voigt": ("reject", "stiffer than the Voigt bound allows at this density (voigt_ratio over 1): the model or "
-                    "the density is wrong there"),
-    "above-hashin-shtrikman": ("reject", "stiffer than the Hashin-Shtrikman bound allows an isotropic cell "
-                               "(hashin_shtrikman_ratio over 1): the model or the density is wrong there"),
-    "nu-outside-limits": ("reject", "a Poisson's ratio outside what a stable material can have"),
-    "walls-thick": ("reject", f"a wall or strut is thicker than {SLENDER_REJECT:g} of its length: no beam any more"),
-    "beam-model": ("caution", f"a wall or strut is thicker than {SLENDER_CAUTION:g} of its length, with joints "
-                   "as points: at 0.1 a re-entrant cell comes out about 24 % too soft, at 0.2 about 45 %"),
-    "joint-outside": ("caution", "a joint's angle or thickness ratio lies outside its table: taken as a point"),
-    "joints-near": ("caution", "hardly any plain wall is left between two joints: stiffness may be a few percent off"),
-    "hinge-model": ("caution", "the ligaments are pure hinges: their stretch and the give of the units' corners "
-                    "are left out, so stiffness is an upper estimate"),
-    "ligament-stubby": ("caution", f"the ligament is over {LIGAMENT_CAUTION:g} of its length thick: no flexure strip"),
-    "sheet-model": ("caution", "bar-and-hinge model of a folded sheet: signs and ratios are sound, stiffness "
-                    "may be off by a factor of 2.6 against a full shell"),
-    "panels-unbraced": ("reject", f"a parent's Poisson's ratio under {PANEL_POISSON:g}: the diagonal bars of a panel, "
-                        "proportional to it, hold hardly any shear; give a larger one"),
-    "internal-mechanism": ("caution", "joints can move at no energy, although no uniform strain is free"),
-    "near-singular": ("caution", f"the softest strain is under {SINGULAR_CAUTION:g} of the stiffest: flaws decide"),
-    "coupled": ("caution", "stretch along the axes comes with shear (eta1_12): a strip must be free to shear"),
-    "reach-short": ("caution", f"auxetic only within {REACH_CAUTION_DEG:g} deg of axis 1: alignment decides"),
-    "few-cells": ("caution", f"fewer than {CELLS_CAUTION:g} cells across the part: edges decide"),
-}  # fmt: skip
 
 
 @functools.cache
@@ -101,10 +82,17 @@ class Results:
         A batch of any shape; everything here is flat, one entry a member in C order.
     part : sequence of float
         Size of the part along axes 1, 2, (3) in mm, if it is known.
+    limits : mapping of str to (float, float)
+        Least and largest value allowed of columns, if they are known, for `limit-within-band`.
+    tolerance : float
+        By how much the process may miss a wall, plus or minus, mm; 0 if it is not known.
     """
 
-    def __init__(self, effective: Effective, part: Sequence[float] = ()) -> None:
+    def __init__(
+        self, effective: Effective, part: Sequence[float] = (), limits: Limits | None = None, tolerance: float = 0.0
+    ) -> None:
         self.effective, self.part = effective, tuple(part)
+        self.limits, self.tolerance = limits or {}, tolerance
         self.cell, self.kind, self.parent = effective.cell, effective.kind, effective.cell.parent
         self.shape = effective.status.shape
         self.count = int(effective.status.size)
@@ -127,7 +115,7 @@ class Results:
         """Mandel compliance, NaN where there is none: impossible members and soft modes."""
         sound = self.status == Status.OK
         safe = np.where(sound[:, None, None], self.stiffness, np.eye(self.stiffness.shape[-1]))
-        return np.where(sound[:, None, None], np.linalg.inv(safe), np.nan)
+        return np.where(sound[:, None, None], inverse(safe), np.nan)
 
     @cached_property
     def membrane(self) -> Array:
@@ -156,16 +144,54 @@ class Results:
     @cached_property
     def bounds(self) -> bounds.Report:
         """Values over bounds."""
-        modulus, poisson = self.parent.modulus_MPa, self.parent.poisson
-        if self.kind == "planar":
-            modulus, poisson = self.parent.wall_modulus_MPa, self.parent.wall_poisson
-        return bounds.report(self.stiffness, self.density, modulus, poisson, sheet=self.kind == "sheet")
+        poisson = self.parent.wall_poisson if self.kind == "planar" else self.parent.poisson
+        return bounds.report(self.stiffness, self.density, self.bound_modulus, poisson, sheet=self.kind == "sheet")
+
+    @property
+    def bound_modulus(self) -> float:
+        """The parent's modulus that bounds are of: in plane strain that of deep walls."""
+        return self.parent.wall_modulus_MPa if self.kind == "planar" else self.parent.modulus_MPa
+
+    @cached_property
+    def yields(self) -> Array:
+        """Stress at first yield of a beam's fibre, MPa, (count, v) in Voigt's order; NaN without yield or sections."""
+        beams = bool(self.cell.blocks) and all(block.kind in BEAMS for block in self.cell.blocks)
+        if self.kind == "sheet" or not beams or np.isnan(self.parent.yield_MPa):
+            return np.full((self.count, self.stiffness.shape[-1]), np.nan)
+        return np.asarray(self.parent.yield_MPa / sections(self.effective).peak(unit_stresses(self.cell.d)))
 
     def young(self, i: int) -> Array:
         return np.asarray(1.0 / self.voigt[:, i, i])
 
     def ratio(self, i: int, j: int) -> Array:
         return np.asarray(-self.voigt[:, j, i] / self.voigt[:, i, i])
+
+    @cached_property
+    def band(self) -> bands.Band:
+        """Where E1 and nu12 of a solid lie: by the measured residual of the model, or by a solid's own estimate."""
+        E1, nu12, flags = self.young(0), self.ratio(0, 1), self.flat(self.effective.flags)
+        if self.effective.model == "solid":
+            return bands.spread(E1, nu12, *(self.flat(self.effective.spread[name]) for name in ("E1", "nu12")))
+        family, parameters = self.cell.family, self.cell.parameters
+        found = bands.band(
+            bands.group(family, parameters), self.effective.model, self.flat(self.cell.slenderness), E1, self.young(1),
+            nu12, outside=(flags & Flag.JOINT_OUTSIDE) > 0, near=(flags & Flag.JOINTS_NEAR) > 0,
+        )  # fmt: skip
+        known = self.flat(bands.measured(family, parameters, self.parent.poisson)) & self._along_axes()
+        known &= (flags & Flag.JOINTS_OVERLAP) == 0
+        return bands.Band(*(np.where(known, end, np.nan) for end in found))
+
+    def _along_axes(self) -> bool:
+        """Say whether the cells lie along their family's axes, as it makes them (one rotation turns a whole batch)."""
+        sound = np.flatnonzero(self.status == Status.OK)[:1]
+        if self.cell.family not in FAMILIES or not len(sound):
+            return False
+        values = self.cell.parameters.items()
+        given = {name: str(v.flat[0]) if v.dtype.kind == "U" else self.flat(v)[sound] for name, v in values}
+        made = FAMILIES[self.cell.family].build(given, self.parent).lattice[0, 0]
+        lattice = self.cell.lattice
+        here = np.broadcast_to(lattice[..., 0, :], self.shape + lattice.shape[-1:]).reshape(self.count, -1)[sound[0]]
+        return bool(np.allclose(here / np.linalg.norm(here), made / np.linalg.norm(made), rtol=0.0, atol=1e-9))
 
     @cached_property
     def hexagon(self) -> Array:
@@ -185,6 +211,24 @@ class Results:
             return np.full(self.count, np.nan)
         axes = min(len(self.part), self.cell.p)
         return np.asarray((np.asarray(self.part[:axes]) / self.size[:, :axes]).min(axis=-1))
+
+    @cached_property
+    def tolerances(self) -> Array:
+        """To first order, share of E1 and change of nu12 that the tolerance brings: bias, then scatter, (4, count).
+
+        Bias: every wall is off alike. Scatter: each wall of the cell by itself, added in quadrature; every cell repeats
+        it, so that a part of many cells, whose walls all differ, scatters less. NaN without tolerance or derivative.
+        """
+        if not self.tolerance > 0.0 or self.effective.model == "solid" or self.cell.family not in FAMILIES:
+            return np.full((4, self.count), np.nan)
+        together, apart, plain = wall_rates(self.effective)
+
+        def changes(rate: Array, S: Array) -> tuple[Array, Array]:
+            stretch = rate[..., 0, 0] / S[:, 0, 0]
+            return np.abs(stretch), np.abs((rate[..., 1, 0] - S[:, 1, 0] * stretch) / S[:, 0, 0])
+
+        scatter = (np.sqrt((change**2).sum(axis=0)) for change in changes(apart, plain))
+        return np.asarray(self.tolerance * np.array([*changes(together, self.compliance), *scatter]))
 
     @cached_property
     def soft_modes(self) -> Words:
@@ -217,10 +261,14 @@ class Results:
         found["nu-outside-limits"] = live & self.bounds.nu_outside
         plain = beams and self.effective.model in ("euler", "timoshenko")
         flags = self.flat(self.effective.flags)
+        tangent = any(set(block.props) & {"start_across", "end_across", "arc"} for block in self.cell.blocks)
         found["walls-thick"] = live & plain & (slenderness > SLENDER_REJECT)
-        found["beam-model"] = live & plain & (slenderness > SLENDER_CAUTION) & (slenderness <= SLENDER_REJECT)
+        thick = (slenderness > SLENDER_CAUTION) & (slenderness <= SLENDER_REJECT)
+        found["beam-model"] = live & plain & thick & (not tangent)
+        found["tangent-nodes"] = live & plain & tangent
         found["joint-outside"] = live & ((flags & Flag.JOINT_OUTSIDE) > 0)
         found["joints-near"] = live & ((flags & Flag.JOINTS_NEAR) > 0)
+        found["joints-overlap"] = live & ((flags & Flag.JOINTS_OVERLAP) > 0)
         found["ligament-stubby"] = live & ("hinge" in kinds) & (slenderness > LIGAMENT_CAUTION)
         found["hinge-model"] = live & ("hinge" in kinds)
         found["panels-unbraced"] = live & ("fold" in kinds) & (self.parent.poisson < PANEL_POISSON)
@@ -232,6 +280,9 @@ class Results:
         found["coupled"] = live & (shear.max(axis=-1) > COUPLING_CAUTION)
         found["reach-short"] = live & (self.ratio(0, 1) < 0.0) & (self.extremes.auxetic_reach_deg < REACH_CAUTION_DEG)
         found["few-cells"] = live & (self.cells_across < CELLS_CAUTION)
+        found["band-unknown"] = live & ~found["joints-overlap"] & ~np.isfinite(self.band.E1_low)
+        values = {"E1_MPa": self.young(0), "nu12": self.ratio(0, 1), **self.band.columns}
+        found["limit-within-band"] = live & bands.within_band(values, self.limits, self.count)
         return found
 
     def worst(self, level: str) -> Mask:
@@ -262,25 +313,12 @@ def listed(masks: Mapping[str, Mask], count: int) -> Words:
     return Words(where, tuple(words))
 
 
-def reason_level(code: str) -> str:
-    """Return `reject` or `caution`; a family's own rules reject."""
-    return REASONS[code][0] if code in REASONS else "reject"
-
-
-def reason_text(code: str) -> str:
-    """Return what a reason code means."""
-    if code in REASONS:
-        return REASONS[code][1]
-    for family in FAMILIES.values():
-        for rule in family.rules:
-            if rule.code == code:
-                return rule.words
-    raise unknown("reason", code, REASONS)
-
-
 @dataclass(frozen=True)
 class Column:
-    """One output quantity: name with unit, meaning, the kinds of cell that have it, and its function of Results."""
+    """One output quantity: name with unit, meaning, the kinds of cell that have it, and its function of Results.
+
+    `text` marks words, `smooth` what has a derivative by the parameters: not words, counts and directions, which jump.
+    """
 
     name: str
     meaning: str
@@ -288,10 +326,15 @@ class Column:
     of: Callable[[Results], NDArray[Any] | Words]
     text: bool = False
     whole: bool = False
+    smooth: bool = True
 
 
 def _extreme(name: str) -> Callable[[Results], Array]:
     return lambda r: np.asarray(getattr(r.extremes, name))
+
+
+def _tolerance(i: int, factor: float = 1.0) -> Callable[[Results], Array]:
+    return lambda r: np.asarray(factor * r.tolerances[i])
 
 
 def _plate(i: int, j: int) -> Callable[[Results], Array]:
@@ -300,6 +343,10 @@ def _plate(i: int, j: int) -> Callable[[Results], Array]:
 
 def _bending(i: int, j: int) -> Callable[[Results], Array]:
     return lambda r: np.asarray(-r.compliance[:, 3 + j, 3 + i] / r.compliance[:, 3 + i, 3 + i])
+
+
+def _yield(i: int) -> Callable[[Results], Array]:
+    return lambda r: np.asarray(r.yields[:, i])
 
 
 def _sheet_coupling(r: Results) -> Array:
@@ -333,14 +380,20 @@ _ALL_COLUMNS = (
     Column("membrane_bending_coupling", "largest |B_ij| / sqrt(A_ii D_jj), z from mid-height", SHEET, _sheet_coupling),
     Column("bending_nu12", "-k2/k1 under a moment along 1: negative a dome, positive a saddle", SHEET, _bending(0, 1)),
     Column("bending_nu21", "-k1/k2 under a moment along 2", SHEET, _bending(1, 0)),
+    Column("E1_low_MPa", "low end of the band in which a solid's E1 was found", ALL,
+           lambda r: r.band.E1_low, smooth=False),
+    Column("E1_high_MPa", "high end of that band", ALL, lambda r: r.band.E1_high, smooth=False),
+    Column("nu12_low", "low end of the band in which a solid's nu12 was found", ALL,
+           lambda r: r.band.nu12_low, smooth=False),
+    Column("nu12_high", "high end of that band", ALL, lambda r: r.band.nu12_high, smooth=False),
     Column("nu_min", "smallest Poisson's ratio of all directions", ALL, _extreme("nu_min")),
-    Column("nu_min_deg", "direction of nu_min from axis 1", ALL, _extreme("nu_min_deg")),
+    Column("nu_min_deg", "direction of nu_min from axis 1", ALL, _extreme("nu_min_deg"), smooth=False),
     Column("nu_max", "largest Poisson's ratio of all directions", ALL, _extreme("nu_max")),
-    Column("nu_max_deg", "direction of nu_max from axis 1", ALL, _extreme("nu_max_deg")),
+    Column("nu_max_deg", "direction of nu_max from axis 1", ALL, _extreme("nu_max_deg"), smooth=False),
     Column("E_min_MPa", "smallest Young's modulus of all directions", ALL, _extreme("E_min")),
-    Column("E_min_deg", "direction of E_min from axis 1", ALL, _extreme("E_min_deg")),
+    Column("E_min_deg", "direction of E_min from axis 1", ALL, _extreme("E_min_deg"), smooth=False),
     Column("E_max_MPa", "largest Young's modulus of all directions", ALL, _extreme("E_max")),
-    Column("E_max_deg", "direction of E_max from axis 1", ALL, _extreme("E_max_deg")),
+    Column("E_max_deg", "direction of E_max from axis 1", ALL, _extreme("E_max_deg"), smooth=False),
     Column("G_min_MPa", "smallest shear modulus of all directions", ALL, _extreme("G_min")),
     Column("G_max_MPa", "largest shear modulus of all directions", ALL, _extreme("G_max")),
     Column("auxetic_share", "share of directions with a negative Poisson's ratio", ALL, _extreme("auxetic_share")),
@@ -350,12 +403,21 @@ _ALL_COLUMNS = (
     Column("E1_per_hexagon", "E1 over that of the regular hexagonal honeycomb of equal density and parent", ALL,
            lambda r: r.young(0) / r.hexagon),
     Column("E1_per_bound", "E1 over the Voigt bound, relative density times the parent's modulus", ALL,
-           lambda r: r.young(0) / (r.density * r.parent.modulus_MPa)),
+           lambda r: r.young(0) / (r.density * r.bound_modulus)),
     Column("E1_per_hashin_shtrikman", "E1 over the Hashin-Shtrikman bound (isotropic cells only)", ALL,
            lambda r: r.bounds.young_ratio),
     Column("voigt_ratio", "largest stiffness over the Voigt bound, of any strain", ALL, lambda r: r.bounds.voigt_ratio),
     Column("hashin_shtrikman_ratio", "largest of K and G over the Hashin-Shtrikman bound (isotropic cells only)", ALL,
            lambda r: r.bounds.hashin_shtrikman_ratio),
+    Column("yield_1_MPa", f"pull along 1 at {FIRST_YIELD} (|N|/A + |M|/W, twist by von Mises, no shear); {CORNERS}",
+           WALLED, _yield(0), smooth=False),
+    Column("yield_2_MPa", f"pull along 2 at {FIRST_YIELD}; {CORNERS}", WALLED, _yield(1), smooth=False),
+    Column("yield_3_MPa", f"pull along 3 at {FIRST_YIELD}; {CORNERS}", SPATIAL, _yield(2), smooth=False),
+    Column("yield_12_MPa", f"shear in the plane 1-2 at {FIRST_YIELD}; {CORNERS}", WALLED, _yield(-1), smooth=False),
+    Column("yield_13_MPa", f"shear in the plane 1-3 at {FIRST_YIELD}; {CORNERS}", SPATIAL, _yield(4), smooth=False),
+    Column("yield_23_MPa", f"shear in the plane 2-3 at {FIRST_YIELD}; {CORNERS}", SPATIAL, _yield(3), smooth=False),
+    Column("yield_strain_1", "strain along 1 at yield_1_MPa", WALLED, lambda r: r.yields[:, 0] / r.young(0),
+           smooth=False),
     Column("slenderness", "largest thickness over length in the cell", ALL, lambda r: r.flat(r.cell.slenderness)),
     Column("thinnest_mm", "thinnest wall, strut, ligament or sheet to be made", ALL, lambda r: r.flat(r.cell.thinnest)),
     Column("cell_1_mm", "repeat along axis 1", ALL, lambda r: r.size[:, 0]),
@@ -364,12 +426,21 @@ _ALL_COLUMNS = (
     Column("largest_cell_mm", "largest repeat", ALL, lambda r: r.size[:, : r.cell.p].max(axis=-1)),
     Column("height_mm", "thickness of the slab that holds the sheet", SHEET, lambda r: r.flat(r.cell.height)),
     Column("cells_across", "fewest repeats across the part, if its size is given", ALL, lambda r: r.cells_across),
+    Column("E1_tolerance_percent", "by how many percent E1 is off where all walls are off by the process's tolerance",
+           ALL, _tolerance(0, 100.0), smooth=False),
+    Column("nu12_tolerance", "by how much nu12 is off there, both to first order", ALL, _tolerance(1), smooth=False),
+    Column("E1_scatter_percent", "the same where each wall of one cell is off by itself; less over many cells",
+           ALL, _tolerance(2, 100.0), smooth=False),
+    Column("nu12_scatter", "by how much nu12 is off there", ALL, _tolerance(3), smooth=False),
     Column("mechanisms", "motions that cost no energy", ALL, lambda r: r.effective.mechanisms.reshape(-1),
-           whole=True),
-    Column("soft_mode", "the uniform strain that costs no energy", ALL, lambda r: r.soft_modes, text=True),
-    Column("verdict", "ok, caution or reject", ALL, _verdict, text=True),
+           whole=True, smooth=False),
+    Column("model", "what the numbers come from: euler, timoshenko, joint or solid", ALL,
+           lambda r: Words(np.zeros(r.count, np.int64), (r.effective.model,)), text=True, smooth=False),
+    Column("soft_mode", "the uniform strain that costs no energy", ALL, lambda r: r.soft_modes, text=True,
+           smooth=False),
+    Column("verdict", "ok, caution or reject", ALL, _verdict, text=True, smooth=False),
     Column("reasons", "codes of what speaks against the cell or its model", ALL,
-           lambda r: listed(r.reasons, r.count), text=True),
+           lambda r: listed(r.reasons, r.count), text=True, smooth=False),
 )  # fmt: skip
 
 COLUMNS: Mapping[str, Column] = MappingProxyType({column.name: column for column in _ALL_COLUMNS})
@@ -399,7 +470,12 @@ def parameter_columns(effective: Effective) -> dict[str, NDArray[Any]]:
 
 
 def quantities(
-    effective: Effective, names: Sequence[str] | None = None, *, part: Sequence[float] = ()
+    effective: Effective,
+    names: Sequence[str] | None = None,
+    *,
+    part: Sequence[float] = (),
+    limits: Limits | None = None,
+    tolerance: float = 0.0,
 ) -> dict[str, NDArray[Any] | Words]:
     """Return family, parameters and output quantities by column name: flat arrays of numbers, text as `Words`.
 
@@ -411,8 +487,12 @@ def quantities(
         Columns wanted, all of the cell's kind if not given; a column that the kind does not have is NaN.
     part : sequence of float
         Size of the part along the axes, mm, for `cells_across`.
+    limits : mapping of str to (float, float)
+        Least and largest value allowed of columns, for the reason `limit-within-band`.
+    tolerance : float
+        Tolerance of the process on a wall, plus or minus mm, for `E1_tolerance_percent` and its like.
     """
-    results = Results(effective, part)
+    results = Results(effective, part, limits, tolerance)
     wanted = columns_of(effective.kind) if names is None else list(names)
     out: dict[str, NDArray[Any] | Words] = {
         "family": Words(np.zeros(results.count, np.int64), (effective.cell.family,))
@@ -426,14 +506,14 @@ def quantities(
     return out
 
 
-def evaluate(effective: Effective, names: Sequence[str] | None = None, *, part: Sequence[float] = ()) -> dict[str, Any]:
-    """Return `quantities` with text spelled out, ndarrays of shape (m,) by column name."""
-    found = quantities(effective, names, part=part)
+def evaluate(effective: Effective, names: Sequence[str] | None = None, **known: Any) -> dict[str, Any]:
+    """Return `quantities`, of what is `known` too, with text spelled out: ndarrays of shape (m,) by column name."""
+    found = quantities(effective, names, **known)
     return {name: values.spelled() if isinstance(values, Words) else values for name, values in found.items()}
 
 
-def table(effective: Effective, names: Sequence[str] | None = None, *, part: Sequence[float] = ()) -> pd.DataFrame:
+def table(effective: Effective, names: Sequence[str] | None = None, **known: Any) -> pd.DataFrame:
     """Return `evaluate` as a DataFrame, one row a member."""
     import pandas as pd
 
-    return pd.DataFrame(evaluate(effective, names, part=part))
+    return pd.DataFrame(evaluate(effective, names, **known))

@@ -9,6 +9,7 @@ that cost nothing: there no Poisson's ratio exists, and the mode is named instea
 
 from __future__ import annotations
 
+import dataclasses
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 from enum import IntFlag
@@ -21,7 +22,7 @@ from homog.assembly import dense, freedoms, sparse, strain_count
 from homog.cell import STRAINS, Kind, Status, UnitCell
 from homog.elements import check_model
 from homog.errors import GeometryError, InputError, MechanismError
-from homog.joints import applies, with_joints
+from homog.joints import NEAR, applies, with_joints
 from homog.solid import homogenize_solid
 from homog.tensors import voigt_factors
 
@@ -42,8 +43,8 @@ SPARSE_SHIFT = 1e-15
 """Relative shift of the diagonal by which SuperLU survives an exactly singular matrix."""
 DENSE_LIMIT = 240
 """Largest number of freedoms that goes through the dense batched path."""
-CHUNK_ENTRIES = 2**18
-"""Entries of M in one chunk of the batch: keeps the elimination in cache."""
+CHUNK_ROWS = 20_000
+"""Rows of M in one chunk of the batch: large enough that numpy's calls cost little, small enough for the cache."""
 DEFAULT_MODEL = "joint"
 
 
@@ -53,6 +54,7 @@ class Flag(IntFlag):
     JOINT_OUTSIDE = 1  # a joint that no table covers was taken as a point
     JOINTS_NEAR = 2  # too little plain wall between two joints
     SOLID_COARSE = 4  # the solid's two meshes differ by more than half a percent
+    JOINTS_OVERLAP = 8  # no plain wall at all between two joints: their corners overlap
 
 
 @dataclass(frozen=True, eq=False)
@@ -142,14 +144,8 @@ def homogenize(cell: UnitCell, *, model: str = DEFAULT_MODEL, fillet: float = 0.
     flat = cell if len(shape) == 1 else cell.at(None) if not shape else _flattened(cell)
     members = flat.shape[0]
     with np.errstate(all="ignore"):
-        volume, density = flat.volume, np.broadcast_to(flat.relative_density, (members,))
-    good = (
-        (flat.status == Status.OK)
-        & np.isfinite(flat.points).all(axis=(-1, -2))
-        & np.isfinite(flat.lattice).all(axis=(-1, -2))
-        & (volume > 0.0)
-    )
-    good = np.asarray(np.broadcast_to(good, (members,)))
+        volume, density = (np.broadcast_to(x, (members,)) for x in (flat.volume, flat.relative_density))
+    good = np.broadcast_to((flat.status == Status.OK) & (volume > 0.0), (members,))
     v = strain_count(cell.kind)
     condensed = model == "joint" and applies(cell)
     if model == "joint" and not condensed:
@@ -157,36 +153,29 @@ def homogenize(cell: UnitCell, *, model: str = DEFAULT_MODEL, fillet: float = 0.
     count = 3 * sum(len(block) for block in cell.blocks) - 2 if condensed else freedoms(flat).count
     flags = np.zeros(members, np.int8)
     C = np.empty((members, v, v))
-    upper = np.empty((members, v))
     mechanisms = np.zeros(members, np.int64)
+    status = np.full(members, Status.IMPOSSIBLE, np.int8)
+    flat = dataclasses.replace(flat, parameters={})
+    step = max(8, CHUNK_ROWS // (count + v)) if count <= DENSE_LIMIT else 1
+    room = np.empty((count + v, count + v, min(step, members))) if count <= DENSE_LIMIT else None
     with np.errstate(all="ignore"):
-        if count <= DENSE_LIMIT:
-            step = max(8, CHUNK_ENTRIES // (count + v) ** 2)
-            for start in range(0, members, step):
-                part = slice(start, min(start + step, members))
-                piece = flat.at(part)
-                if condensed:
-                    piece, flags[part] = _joined(piece)
-                M = dense(piece, model)
-                upper[part] = np.diagonal(M[count:, count:]).copy()
-                mechanisms[part], least = eliminate(M, count)
-                C[part] = np.moveaxis(M[count:, count:], -1, 0)
-                doubtful = np.flatnonzero(good[part] & (least < DOUBTFUL))
-                if len(doubtful):
-                    again = np.moveaxis(dense(piece.at(doubtful), model), -1, 0)
-                    C[start + doubtful], mechanisms[start + doubtful] = ranked(again, count)
-        else:
-            for i in range(members):
-                piece = flat.at([i])
-                if condensed:
-                    piece, flags[i : i + 1] = _joined(piece)
-                C[i], upper[i], mechanisms[i] = _sparse_member(piece.at(0), model)
-        C = np.tril(C) + np.swapaxes(np.tril(C, -1), -1, -2)
-        finite = good & np.isfinite(C).all(axis=(-1, -2))
-        C = np.where(finite[:, None, None], C / volume[..., None, None], np.nan)
-        soft = _null_count(C, upper / volume[..., None])
-    mechanisms = np.where(finite, mechanisms + soft, 0)
-    status = np.where(finite, np.where(soft > 0, Status.MECHANISM, Status.OK), Status.IMPOSSIBLE).astype(np.int8)
+        for start in range(0, members, step):
+            part = slice(start, min(start + step, members))
+            piece = flat.at(part)
+            if condensed:
+                piece, flags[part] = _joined(piece)
+            if room is None:
+                schur, upper, null = (x[..., None] for x in _sparse_member(piece.at(0), model))
+            else:
+                schur, upper, null = _dense_members(piece, model, count, good[part], room[..., : part.stop - start])
+            schur /= volume[part]
+            finite = good[part] & np.isfinite(schur.sum(axis=(0, 1)))
+            schur[:, :, ~finite] = np.nan
+            C[part] = np.moveaxis(schur, -1, 0)
+            soft = _null_count(schur, upper / volume[part])
+            mechanisms[part] = np.where(finite, null + soft, 0)
+            status[part][finite] = np.where(soft > 0, Status.MECHANISM, Status.OK)[finite]
+    finite = status != Status.IMPOSSIBLE
     density = np.where(finite, density, np.nan)
     effective = Effective(
         stiffness=C.reshape(shape + (v, v)),
@@ -201,6 +190,11 @@ def homogenize(cell: UnitCell, *, model: str = DEFAULT_MODEL, fillet: float = 0.
         raise GeometryError(
             f"Cell '{cell.family}' has a value that is not finite or walls of no length; check its parameters"
         )
+    if not shape and status[0] == Status.MECHANISM and flags[0] & (Flag.JOINTS_NEAR | Flag.JOINTS_OVERLAP):
+        raise GeometryError(
+            f"Cell '{cell.family}': its joints run into each other, which the joint model does not hold for; "
+            "use model 'solid' or thinner walls"
+        )
     if not shape and status[0] == Status.MECHANISM:
         mode = soft_mode(effective.stiffness, cell.kind)
         raise MechanismError(
@@ -208,6 +202,24 @@ def homogenize(cell: UnitCell, *, model: str = DEFAULT_MODEL, fillet: float = 0.
             "brace it, stiffen its joints, or read its stiffness from a batch of one"
         )
     return effective
+
+
+def _dense_members(
+    cell: UnitCell, model: str, count: int, good: NDArray[np.bool_], room: Array
+) -> tuple[Array, Array, NDArray[np.int64]]:
+    """Return V C (v, v, b), the affine stiffness' diagonal (v, b) and the number of null pivots (b,) of a chunk."""
+    M = dense(cell, model, room)
+    schur = M[count:, count:]
+    upper = np.diagonal(schur).T.copy()
+    null, least = eliminate(M, count)
+    for i in range(1, len(schur)):
+        schur[i, :i] = schur[:i, i]
+    doubtful = np.flatnonzero(good & (least < DOUBTFUL) & np.isfinite(schur.sum(axis=(0, 1))))
+    if len(doubtful):
+        again = np.moveaxis(dense(cell.at(doubtful), model), -1, 0)
+        whole, null[doubtful] = ranked(again, count)
+        schur[:, :, doubtful] = np.moveaxis(whole, 0, -1)
+    return schur, upper, null
 
 
 def _solid(cell: UnitCell, fillet: float) -> Effective:
@@ -242,8 +254,11 @@ def _solid(cell: UnitCell, fillet: float) -> Effective:
 
 
 def _joined(cell: UnitCell) -> tuple[UnitCell, NDArray[np.int8]]:
-    joined, outside, near = with_joints(cell)
-    return joined, (outside * Flag.JOINT_OUTSIDE + near * Flag.JOINTS_NEAR).astype(np.int8)
+    joined, outside, plain = with_joints(cell)
+    overlap = plain < 0.0
+    near = (plain < NEAR) & ~overlap
+    flags = outside * Flag.JOINT_OUTSIDE + near * Flag.JOINTS_NEAR + overlap * Flag.JOINTS_OVERLAP
+    return joined, flags.astype(np.int8)
 
 
 def _flattened(cell: UnitCell) -> UnitCell:
@@ -254,7 +269,7 @@ def _flattened(cell: UnitCell) -> UnitCell:
 def eliminate(M: Array, count: int) -> tuple[NDArray[np.int64], Array]:
     """Eliminate the first `count` freedoms of symmetric matrices (N, N, b) in place.
 
-    Right-looking LDL' on the lower triangle: afterwards M[count:, count:] holds the Schur complement in its lower
+    Left-looking LDL' on the upper triangle: afterwards M[count:, count:] holds the Schur complement in its upper
     triangle. Positive semi-definite matrices need no pivoting for the result: a null pivot has a null column. The count
     does where a tiny pivot comes first; so the least pivot is returned too, and `ranked` takes the doubtful ones.
 
@@ -263,17 +278,19 @@ def eliminate(M: Array, count: int) -> tuple[NDArray[np.int64], Array]:
     null : ndarray of int of shape (b,), how many pivots were null
     least : ndarray of shape (b,), smallest pivot over its diagonal entry, 1 if there is none
     """
-    size = len(M)
-    dead, least = np.zeros(M.shape[-1], np.int64), np.ones(M.shape[-1])
-    diagonal = np.stack([M[i, i] for i in range(count)]) if count else np.empty((0, M.shape[-1]))
-    for j in range(count):
-        null = ~(M[j, j] > RANK_TOLERANCE * diagonal[j])
-        dead += null
-        np.fmin(least, M[j, j] / diagonal[j], out=least)
-        column = M[j + 1 :, j]
-        factor = column * np.where(null, 0.0, 1.0 / M[j, j])
-        for i in range(size - j - 1):
-            M[j + 1 + i, j + 1 : j + 2 + i] -= factor[i] * column[: i + 1]
+    b = M.shape[-1]
+    dead, least = np.zeros(b, np.int64), np.ones(b)
+    L = np.empty((count, len(M), b))  # L[k, i] is row k's pivot's share in row i
+    for j in range(len(M)):
+        k = min(j, count)
+        diagonal = M[j, j].copy()
+        if k:
+            M[j, j:] -= np.einsum("kb,kib->ib", L[:k, j], M[:k, j:])
+        if j < count:
+            null = ~(M[j, j] > RANK_TOLERANCE * diagonal)
+            dead += null
+            np.fmin(least, M[j, j] / diagonal, out=least)
+            np.multiply(M[j, j + 1 :], np.where(null, 0.0, 1.0 / M[j, j]), out=L[j, j + 1 :])
     return dead, least
 
 
@@ -282,7 +299,7 @@ def ranked(M: Array, count: int) -> tuple[Array, NDArray[np.int64]]:
 
     Slower than `eliminate` and sure of the rank, whatever the order of the freedoms.
     """
-    M = np.tril(M) + np.swapaxes(np.tril(M, -1), -1, -2)
+    M = np.triu(M) + np.swapaxes(np.triu(M, 1), -1, -2)
     K, F, D = M[:, :count, :count], M[:, :count, count:], M[:, count:, count:]
     diagonal = np.diagonal(K, axis1=-2, axis2=-1)
     scale = 1.0 / np.sqrt(np.where(diagonal > 0.0, diagonal, 1.0))
@@ -294,19 +311,20 @@ def ranked(M: Array, count: int) -> tuple[Array, NDArray[np.int64]]:
 
 
 def _null_count(C: Array, upper: Array) -> NDArray[np.int64]:
-    """Return how many uniform strains cost nothing, judged against the affine (upper bound) stiffness."""
-    M = np.moveaxis(C, 0, -1).copy()
+    """Return how many uniform strains cost nothing (b,), stiffness (v, v, b) against the affine upper bound (v, b)."""
+    M = C.copy()
     size = len(M)
-    null = np.zeros(C.shape[0], np.int64)
+    null = np.zeros(C.shape[-1], np.int64)
     for j in range(size):
-        soft = ~(M[j, j] > RANK_TOLERANCE * upper[:, j])
+        soft = ~(M[j, j] > RANK_TOLERANCE * upper[j])
         null += soft
-        factor = M[j + 1 :, j] * np.where(soft, 0.0, 1.0 / M[j, j])
-        M[j + 1 :, j + 1 :] -= factor[:, None] * M[j + 1 :, j]
+        factor = M[j, j + 1 :] * np.where(soft, 0.0, 1.0 / M[j, j])
+        for i in range(j + 1, size):
+            M[i, i:] -= factor[i - j - 1] * M[j, i:]
     return null
 
 
-def _sparse_member(cell: UnitCell, model: str) -> tuple[Array, Array, int]:
+def _sparse_member(cell: UnitCell, model: str) -> tuple[Array, Array, NDArray[np.int64]]:
     """Return V C, the affine stiffness' diagonal and the number of null pivots of one large cell."""
     import scipy.sparse as sp
     from scipy.sparse.linalg import splu
@@ -315,16 +333,16 @@ def _sparse_member(cell: UnitCell, model: str) -> tuple[Array, Array, int]:
     diagonal = K.diagonal()
     scale = 1.0 / np.sqrt(np.where(diagonal > 0.0, diagonal, 1.0))
     if not (np.isfinite(diagonal).all() and np.isfinite(D).all()):
-        return np.full_like(D, np.nan), np.diagonal(D), 0
+        return np.full_like(D, np.nan), np.diagonal(D), np.array(0)
     unit = sp.diags(scale) @ K @ sp.diags(scale) + SPARSE_SHIFT * sp.identity(len(scale))
     factor = splu(unit.tocsc(), permc_spec="MMD_AT_PLUS_A", diag_pivot_thresh=0.0, options={"SymmetricMode": True})
     pivots = np.abs(factor.U.diagonal())
     if pivots.min() < DOUBTFUL and len(scale) <= SURE_LIMIT:
         whole, null_count = ranked(np.block([[K.toarray(), F], [F.T, D]])[None], len(scale))
-        return whole[0], np.diagonal(D), int(null_count[0])
+        return whole[0], np.diagonal(D), null_count[0]
     null = pivots < SPARSE_RANK_TOLERANCE
     right = F * scale[:, None]
-    return D - right.T @ factor.solve(right), np.diagonal(D), int(null.sum())
+    return D - right.T @ factor.solve(right), np.diagonal(D), np.array(null.sum())
 
 
 def soft_mode(stiffness: Array, kind: Kind) -> str:

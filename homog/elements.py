@@ -222,7 +222,8 @@ def _wall_weights(x: Array, props: Props, model: str) -> Array:
     """
     E, t = props["modulus"], props["thickness"]
     length = _norm(_wall_chord(x, props))
-    EA, EI = E * t, E * t**3 / 12.0
+    EA = E * t
+    EI = EA * t * t / 12.0
     shear = 0.0 if model == "euler" else 1.0
     GA = WALL_SHEAR * EA / (2.0 * (1.0 + props["poisson"]))
     W = np.zeros((3, 3) + x.shape[2:])
@@ -233,21 +234,21 @@ def _wall_weights(x: Array, props: Props, model: str) -> Array:
     f = np.zeros((3, 3) + x.shape[2:])
     arc = np.where(np.abs(props.get("arc", np.zeros(1))) < 1e-9, 1e-9, props.get("arc", np.zeros(1)))
     radius = length / (2.0 * np.sin(arc / 2.0))
+    sq, cq = np.sin(arc / 4.0), np.cos(arc / 4.0)
     points, gauss = np.polynomial.legendre.leggauss(ARC_POINTS)
-    for point, share in zip(points, gauss, strict=True):
-        a = point * arc / 2.0
-        ds = share * radius * arc / 2.0
-        along, height = radius * np.sin(a), 2.0 * radius * np.sin(arc / 4.0 + a / 2.0) * np.sin(arc / 4.0 - a / 2.0)
-        one, none = np.ones_like(along), np.zeros_like(along)
-        # internal moment, axial and shear force of unit stretching force, symmetric and antisymmetric end moments
-        for force, stiffness in (
-            ((height, one, along / length), EI),
-            ((np.cos(a), none, np.sin(a) / length), EA),
-            ((np.sin(a), none, -np.cos(a) / length), GA / shear if shear else np.inf),
-        ):
-            for i in range(3):
-                for j in range(3):
-                    f[i, j] += force[i] * force[j] / stiffness * ds
+    for point, share in zip(points[ARC_POINTS // 2 :], gauss[ARC_POINTS // 2 :], strict=True):  # both halves are alike
+        sh, ch = np.sin(point * arc / 4.0), np.cos(point * arc / 4.0)
+        sine, cosine = 2.0 * sh * ch, 1.0 - 2.0 * sh * sh  # of the angle from the middle
+        along, height = radius * sine / length, 2.0 * radius * (sq * ch + cq * sh) * (sq * ch - cq * sh)
+        ds = share * radius * arc
+        # internal moment, axial and shear force of unit stretching force: height, cosine, sine; of unit symmetric end
+        # moments: one, none, none; of antisymmetric ones: along, sine/length, -cosine/length, odd about the middle
+        bend, pull, shift = ds / EI, ds / EA, ds / GA * shear
+        f[0, 0] += height * height * bend + cosine * cosine * pull + sine * sine * shift
+        f[0, 1] += height * bend
+        f[1, 1] += bend
+        f[2, 2] += along * along * bend + (sine * sine * pull + cosine * cosine * shift) / length**2
+    f[1, 0] = f[0, 1]
     c1, c2 = props.get("start_compliance", np.zeros(1)), props.get("end_compliance", np.zeros(1))
     f[1, 1] += c1 + c2
     f[2, 2] += (c1 + c2) / 4.0

@@ -123,7 +123,7 @@ def rows(brief: Brief, part: Part) -> dict[str, Any]:
     """Return all columns of a part's candidates, with `meets`, `misses` and the miss of each limit, by name."""
     given = _batched(part.source, part.source.take(part.start, part.stop))
     cell = part.source.family.build(given, brief.material)
-    out: dict[str, Any] = quantities(homogenize(cell, model=brief.model), part=brief.part)
+    out: dict[str, Any] = quantities(homogenize(cell, model=brief.model), **brief.known)
     count = part.stop - part.start
     missed = {}
     for limit in brief.limits:
@@ -248,7 +248,7 @@ def started(count: int = 0, cluster: str = "", *, parts: int) -> Iterator[Worker
 def _in_processes(count: int) -> Iterator[Workers]:
     before = set(multiprocessing.active_children())
     # fresh processes: a fork of one that has threads may hang
-    pool = ProcessPoolExecutor(count, multiprocessing.get_context("spawn"), initializer=_start_worker)
+    pool = ProcessPoolExecutor(count, multiprocessing.get_context("spawn"), initializer=start_worker)
     try:
         with _held_interrupts():
             for _ in range(count):
@@ -266,7 +266,7 @@ def _ready() -> None:
     """Do nothing: a task that makes the pool start a worker."""
 
 
-def _start_worker() -> None:
+def start_worker() -> None:
     """Leave interrupts to the main process, and end with it, however it ends."""
     signal.signal(signal.SIGINT, signal.SIG_IGN)
     parent = multiprocessing.parent_process()

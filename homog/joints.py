@@ -21,15 +21,16 @@ import itertools
 from collections.abc import Callable
 from dataclasses import dataclass
 from importlib import resources
-from typing import Any
+from typing import Any, NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
 
 from homog.cell import Block, Status, UnitCell
 from homog.errors import InputError
-from homog.section import arms_of, corner_cut, element_vectors
-from homog.stars import carried, star_flexibility
+from homog.section import arms_of, corner_cuts
+from homog.stars import carried, star_of
+from homog.tensors import inverted
 
 Array = NDArray[np.float64]
 Mask = NDArray[np.bool_]
@@ -37,8 +38,11 @@ Mask = NDArray[np.bool_]
 TABLES = "joint_tables.npz"
 MATCH_TOLERANCE = 1e-9
 """Gaps (rad) and thickness ratios of a joint that a shape reproduces within this are that shape's."""
-NEAR = 0.4
-"""Plain wall between the inner corners of neighbouring joints, in thicknesses, below which they feel each other."""
+SAME = 1e-12
+"""Joints whose gaps, thicknesses, lengths and moduli agree within this (relative) are computed once."""
+NEAR = 0.5
+"""Plain wall between the inner corners of neighbouring joints, in thicknesses, below which they feel each other. Below
+none the joints overlap and the model fails: moduli come out wrong by any factor, even negative."""
 MOST_ON_DEMAND = 200
 PLAIN_WALL = ("thickness", "modulus", "poisson")
 
@@ -101,6 +105,10 @@ SHAPES = (
     Shape("even-fork", 3, ((FORK[0], 0.0, FORK[1]),), ((20, 24),),
           lambda u: [_gap(u[0]), TURN - 2.0 * _gap(u[0]), _gap(u[0])],
           lambda u: [1.0 + 0.0 * u[0]] * 3, lambda g, t: [_open(g[0])]),
+    # a stem of twice the arms' thickness; the corners pass its round end at 120 and 150 degrees
+    Shape("double-fork", 3, ((FORK[0], 0.0, *_span(120.0, 150.0), FORK[1]),), ((16, 12, 12, 16),),
+          lambda u: [_gap(u[0]), TURN - 2.0 * _gap(u[0]), _gap(u[0])],
+          lambda u: [1.0 + 0.0 * u[0], 0.5 + 0.0 * u[0], 0.5 + 0.0 * u[0]], lambda g, t: [_open(g[0])]),
     # a stem (wall 0) of another thickness between two equal arms
     Shape("fork", 3, ((FORK[0], 0.0, FORK[1]), (-RATIO, 0.0, RATIO)), ((14, 16), (8, 8)),
           lambda u: [_gap(u[0]), TURN - 2.0 * _gap(u[0]), _gap(u[0])],
@@ -188,23 +196,33 @@ def matched(gaps: Array, ratio: Array) -> tuple[Shape, Array, NDArray[np.int64],
     With it come its coordinates (k, b), the order in which its walls are the shape's, and -1.0 for its mirror image.
     """
     sound = np.isfinite(gaps).all(axis=0) & np.isfinite(ratio).all(axis=0)
+    one = np.flatnonzero(sound)[:1]  # a pattern that this member has not need not be tried on the others
     n, partly = len(gaps), None
     for shape in SHAPES:
         if shape.walls != n:
             continue
         for mirror, start in itertools.product((1.0, -1.0), range(n)):
             order = (start + np.arange(n) * int(mirror)) % n
-            g = gaps[order] if mirror > 0.0 else gaps[(order - 1) % n]
-            t = ratio[order] / ratio[order[0]]
-            with np.errstate(all="ignore"):
-                found = shape.coordinates(g, t)
-                u = np.array([np.broadcast_to(x, gaps.shape[1:]) for x in found]).reshape(len(found), *gaps.shape[1:])
-                off = [np.abs(a - b) for a, b in zip([*shape.gaps(u), *shape.thickness(u)], [*g, *t], strict=True)]
-            if all((x <= MATCH_TOLERANCE)[..., sound].all() for x in off):
-                if not shape.outside(u)[sound].any():
-                    return shape, u, order, mirror
-                partly = partly or (shape, u, order, mirror)
+            turned = order if mirror > 0.0 else (order - 1) % n
+            if _fit(shape, gaps[turned[:, None], one], ratio[order[:, None], one])[1].all():
+                u, fits = _fit(shape, gaps[turned], ratio[order])
+                if fits[sound].all():
+                    if not shape.outside(u)[sound].any():
+                        return shape, u, order, mirror
+                    partly = partly or (shape, u, order, mirror)
     return partly
+
+
+def _fit(shape: Shape, gaps: Array, ratio: Array) -> tuple[Array, Mask]:
+    """Return the coordinates (k, b) that a shape gives joints (n, b), and where they reproduce them, (b,)."""
+    t = ratio / ratio[0]
+    with np.errstate(all="ignore"):
+        found = shape.coordinates(gaps, t)
+        u = np.array([np.broadcast_to(x, gaps.shape[1:]) for x in found]).reshape(len(found), *gaps.shape[1:])
+        fits = np.ones(gaps.shape[1:], bool)
+        for made, given in zip([*shape.gaps(u), *shape.thickness(u)], [*gaps, *t], strict=True):
+            fits &= np.abs(made - given) <= MATCH_TOLERANCE
+    return u, fits
 
 
 def corrections(gaps: Array, thickness: Array, poisson: Array) -> tuple[NDArray[np.int64], Array, Mask]:
@@ -231,9 +249,10 @@ def corrections(gaps: Array, thickness: Array, poisson: Array) -> tuple[NDArray[
     """
     n, members = gaps.shape
     order, none = np.arange(n), np.zeros(members, bool)
-    straight = (np.abs(gaps - np.pi) <= MATCH_TOLERANCE) & (np.ptp(thickness, axis=0) == 0.0)
-    if n == 2 and (straight | ~np.isfinite(gaps)).all():
-        return order, np.zeros((3, 3, members)), none  # a wall that runs on
+    if n == 2:
+        straight = (np.abs(gaps - np.pi) <= MATCH_TOLERANCE) & (np.ptp(thickness, axis=0) == 0.0)
+        if (straight | ~np.isfinite(gaps)).all():
+            return order, np.zeros((3, 3, members)), none  # a wall that runs on
     found = matched(gaps, thickness / thickness[0])
     if found is None:
         delta, outside, mirror = _on_demand(gaps, thickness / thickness[0], poisson), none, 1.0
@@ -278,7 +297,7 @@ def applies(cell: UnitCell) -> bool:
     return not any(others) and bool(joined.all())
 
 
-def with_joints(cell: UnitCell) -> tuple[UnitCell, Mask, Mask]:
+def with_joints(cell: UnitCell) -> tuple[UnitCell, Mask, Array]:
     """Return a cell of straight walls as joints with half walls: its points are the middles of the walls.
 
     Parameters
@@ -290,7 +309,8 @@ def with_joints(cell: UnitCell) -> tuple[UnitCell, Mask, Mask]:
     -------
     joined : UnitCell
     outside : ndarray of bool, shape (b,); members with a joint that no table covers
-    near : ndarray of bool, shape (b,); members with less than NEAR t of plain wall between two joints
+    plain : ndarray of shape (b,); least plain wall between two joints, in thicknesses of the wall; negative where the
+        inner corners of two joints overlap: no such pair of joints exists
     """
     blocks, (members,) = [block for block in cell.blocks if len(block)], cell.shape
     ends_of, shifts_of = (np.concatenate([getattr(b, name) for b in blocks]) for name in ("nodes", "shifts"))
@@ -299,18 +319,19 @@ def with_joints(cell: UnitCell) -> tuple[UnitCell, Mask, Mask]:
         np.concatenate([np.broadcast_to(b.props[name], (members, len(b))) for b in blocks], axis=1).T
         for name in PLAIN_WALL
     )
-    vectors = element_vectors(cell.points, cell.lattice, ends_of, shifts_of)
-    home = cell.points[..., ends_of[:, 0], :] + np.einsum(
-        "mp,...pd->...md", shifts_of[:, 0].astype(float), cell.lattice
-    )
-    x, y = np.moveaxis(np.broadcast_to(vectors, (members, m, 2)), -1, 0).swapaxes(1, 2)
-    lengths, directions = np.hypot(x, y), np.arctan2(y, x)
+    points, lattice = (np.ascontiguousarray(np.moveaxis(x, (-1, -2), (0, 1))) for x in (cell.points, cell.lattice))
+    reach = np.einsum("mkp,dpb->dkmb", shifts_of.astype(float), lattice)
+    home = points[:, ends_of[:, 0]] + reach[:, 0]
+    vectors = np.broadcast_to(points[:, ends_of[:, 1]] + reach[:, 1] - home, (2, m, members))
+    lengths, directions = np.hypot(*vectors), np.arctan2(vectors[1], vectors[0])
+    units = vectors / lengths
     plain = lengths.copy()
     outside = np.zeros(members, bool)
     joints: dict[int, tuple[list[Any], list[Any], list[NDArray[Any]]]] = {}
     sound = int(
         np.argmax(np.isfinite(directions).all(axis=0) & (cell.status == Status.OK))
     )  # it gives the order of walls
+    known: list[_Joint] = []
     for arms in arms_of(cell.n, ends_of):
         if len(arms) < 2:  # a free end: half a wall that carries nothing
             continue
@@ -318,48 +339,92 @@ def with_joints(cell: UnitCell) -> tuple[UnitCell, Mask, Mask]:
         angles = directions[walls] + np.where(ends == 0, 0.0, np.pi)[:, None]
         first = np.argsort(np.mod(angles[:, sound], TURN), kind="stable")  # the order round a joint is the topology's
         walls, ends, angles = walls[first], ends[first], angles[first]
-        gaps = np.mod(np.roll(angles, -1, axis=0) - angles, TURN)
+        gaps = np.roll(angles, -1, axis=0) - angles
+        gaps -= TURN * np.floor(gaps / TURN)
         there = (np.abs(gaps.sum(axis=0) - TURN) < 1e-6) & (cell.status == Status.OK)
-        gaps = np.where(there, gaps, np.nan)  # another order, or no cell at all: no such joint
-        _swallow(plain, walls, gaps, t[walls])
-        order, delta, missed = corrections(gaps, t[walls], nu[walls[0]])
-        outside |= missed
-        walls, ends, angles = walls[order], ends[order], angles[order]
-        half = lengths[walls] / 2.0
-        F = star_flexibility(angles, half, t[walls], E[walls[0]], nu[walls[0]]) + carried(delta / E[walls[0]], half)
-        tips = half * np.exp(1j * angles)
-        R = _turns(angles - np.angle(tips[1] - tips[0]))
-        weight = np.linalg.inv(R @ np.moveaxis(F, -1, 0) @ np.swapaxes(R, -1, -2))
+        gaps[:, ~there] = np.nan  # another order, or no cell at all: no such joint
+        given = (gaps, t[walls], lengths[walls] / 2.0, E[walls], nu[walls])
+        start, joint = next(
+            ((start, joint) for joint in known if (start := _same(joint.given, given, sound)) is not None), (0, None)
+        )
+        walls, ends = (np.roll(part, -start) for part in (walls, ends))
+        if joint is None:
+            joint = _joint(given, units[:, walls] * np.where(ends == 0, 1.0, -1.0)[:, None])
+            known.append(joint)
+        np.subtract.at(plain, walls, joint.cut)
+        outside |= joint.outside
+        walls, ends = walls[joint.order], ends[joint.order]
         shifts = -shifts_of[walls, ends]  # of the wall's middle, seen from this end
         nodes, images, weights = joints.setdefault(len(walls), ([], [], []))
         nodes.append(walls)
         images.append(shifts)
-        weights.append(weight)
+        weights.append(joint.weight)
     joined = dataclasses.replace(
         cell,
-        points=home + vectors / 2.0,
+        points=np.moveaxis(home + vectors / 2.0, (0, 1), (-1, -2)),
         blocks=tuple(
-            Block("joint", np.array(nodes), np.array(images), {"weight": np.stack(weights, axis=1)})
+            Block("joint", np.array(nodes), np.array(images),
+                  {"weight": np.moveaxis(np.stack(weights, axis=2), (-1, -2), (0, 1))})
             for nodes, images, weights in joints.values()
         ),
-    )
-    return joined, outside, (plain < NEAR * t).any(axis=0)
+    )  # fmt: skip
+    return joined, outside, np.asarray((plain / t).min(axis=0))
 
 
-def _swallow(plain: Array, walls: NDArray[np.int64], gaps: Array, thickness: Array) -> None:
-    """Take from the plain lengths (m, b) what the corners of one joint swallow of its walls."""
+class _Joint(NamedTuple):
+    """What one joint is given, (n, b) each, and what follows from it; weight (s, s, b), cut (n, b), outside (b,)."""
+
+    given: tuple[Array, ...]
+    order: NDArray[np.int64]
+    weight: Array
+    cut: Array
+    outside: Mask
+
+
+def _joint(given: tuple[Array, ...], units: Array) -> _Joint:
+    """Return the joint of walls with gaps, thickness, half lengths, modulus and Poisson's ratio (n, b), and directions
+    (2, n, b) outwards: weights in the frame of the line from the first to the second tip."""
+    gaps, t, half, E, nu = given
+    order, delta, outside = corrections(gaps, t, nu[0])
+    units, l = units[:, order], half[order]
+    F = star_of(*_turn(units[:, 0], units), l, t[order], E[order[0]], nu[order[0]]) + carried(delta / E[order[0]], l)
+    chord = l[1] * units[:, 1] - l[0] * units[:, 0]
+    c, s = _turn(chord / np.hypot(*chord), units)
+    W = inverted(F)
+    for turned in (W, W.swapaxes(0, 1)):  # rows, then columns, from each wall's frame to the line's
+        for i in range(1, len(l)):
+            along, across = turned[3 * i - 3], turned[3 * i - 2]
+            turned[3 * i - 3], turned[3 * i - 2] = c[i] * along - s[i] * across, s[i] * along + c[i] * across
+    return _Joint(given, order, W, _swallowed(gaps, t), outside)
+
+
+def _turn(first: Array, second: Array) -> tuple[Array, Array]:
+    """Return cosine and sine (n, b) of the angle from a unit vector (2, b) to others (2, n, b)."""
+    return first[0] * second[0] + first[1] * second[1], first[0] * second[1] - first[1] * second[0]
+
+
+def _same(known: tuple[Array, ...], given: tuple[Array, ...], sound: int) -> int | None:
+    """Return by how many walls a joint must be turned to be the known one in every sound member, None if it is not."""
+    n = len(given[0])
+    if len(known[0]) != n:
+        return None
+    there = np.isfinite(given[0][0]) & np.isfinite(known[0][0])
+    for start in range(n):
+        turned = (np.arange(n) + start) % n
+        for members in (slice(sound, sound + 1), slice(None)):
+            if any(
+                ((np.abs(a[turned, members] - b[:, members]) > SAME * b[:, members]) & there[members]).any()
+                for a, b in zip(given, known, strict=True)
+            ):
+                break
+        else:
+            return start
+    return None
+
+
+def _swallowed(gaps: Array, thickness: Array) -> Array:
+    """Return how much of each wall's plain length (n, b) the corners of one joint swallow."""
     half = thickness / 2.0
     disc = half.max(axis=0)
-    after, before = np.roll(half, -1, axis=0), np.roll(half, 1, axis=0)
-    cut = np.maximum(corner_cut(gaps, half, after, disc), corner_cut(np.roll(gaps, 1, axis=0), half, before, disc))
-    np.subtract.at(plain, walls, cut)
-
-
-def _turns(angles: Array) -> Array:
-    """Return the matrices (b, s, s) that turn the freedoms of walls 1 to n - 1 by angles (n, b)."""
-    n, members = angles.shape
-    R = np.zeros((members, 3 * n - 3, 3 * n - 3))
-    for i in range(1, n):
-        c, s, k = np.cos(angles[i]), np.sin(angles[i]), 3 * i - 3
-        R[:, k, k], R[:, k, k + 1], R[:, k + 1, k], R[:, k + 1, k + 1], R[:, k + 2, k + 2] = c, -s, s, c, 1.0
-    return R
+    here, there = corner_cuts(gaps, half, np.roll(half, -1, axis=0), disc)
+    return np.maximum(here, np.roll(there, 1, axis=0))

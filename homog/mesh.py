@@ -12,8 +12,9 @@ Polygons and arrays only: nothing here knows a cell.
 
 from __future__ import annotations
 
+import signal
 from collections.abc import Iterator, Sequence
-from contextlib import contextmanager
+from contextlib import contextmanager, suppress
 from typing import Any, NamedTuple
 
 import numpy as np
@@ -284,6 +285,8 @@ def _mesher() -> Iterator[Any]:
         raise MissingExtra("The solid model", "solid") from fault
     if not gmsh.isInitialized():
         gmsh.initialize(interruptible=False)
+        with suppress(AttributeError, ValueError):  # it lets a broken pipe end the process, which is not its to say
+            signal.signal(signal.SIGPIPE, signal.getsignal(signal.SIGPIPE))
     before = {name: gmsh.option.getNumber(name) for name in OPTIONS}
     current = gmsh.model.getCurrent()
     for name, value in OPTIONS.items():

@@ -21,13 +21,15 @@ import scipy
 
 from homog.brief import Brief
 from homog.cell import UnitCell
-from homog.columns import COLUMNS, evaluate, reason_level, reason_text
+from homog.columns import COLUMNS, evaluate
 from homog.effective import Effective, homogenize
 from homog.engine import Plan
 from homog.errors import InputError
 from homog.families import FAMILIES
 from homog.files import check_free, whole_file
 from homog.materials import CONFIRM, Material
+from homog.reasons import reason_level, reason_text
+from homog.recheck import SCREENED, given
 from homog.screening import Screening, records
 from homog.store import sha256, write_tables
 from homog.tensors import stiffness_to_voigt
@@ -76,17 +78,18 @@ def evaluation(effective: Effective) -> dict[str, Any]:
     cell = effective.cell
     return {
         "family": cell.family,
-        "parameters": {name: _plain(values.reshape(-1)[0]) for name, values in cell.parameters.items()},
-        "material": {key: _plain(value) for key, value in dataclasses.asdict(cell.parent).items()},
+        "parameters": {name: plain(values.reshape(-1)[0]) for name, values in cell.parameters.items()},
+        "material": {key: plain(value) for key, value in dataclasses.asdict(cell.parent).items()},
         "model": effective.model,
-        "relative_density": _plain(row["relative_density"]),
+        "relative_density": plain(row["relative_density"]),
         "mechanisms": int(row["mechanisms"]),
-        "stiffness": [[_plain(x) for x in line] for line in stiffness],
-        "columns": {name: _plain(row[name]) for name in COLUMNS if name in row},
+        "stiffness": [[plain(x) for x in line] for line in stiffness],
+        "columns": {name: plain(row[name]) for name in COLUMNS if name in row},
     }
 
 
-def _plain(value: Any) -> Any:
+def plain(value: Any) -> Any:
+    """Return a number or word of a table as a plain JSON value, no value (NaN) as None."""
     if isinstance(value, str):
         return str(value)
     if isinstance(value, bool | np.bool_):
@@ -130,13 +133,13 @@ def stream_table(
 
 def write_screening(
     screening: Screening, place: Path, *, version: str, brief_name: str = "brief.toml", csv: bool = False,
-    progress: Callable[[str], None] = lambda step: None,
+    progress: Callable[[str], None] = lambda step: None, unlooked: str = "",
 ) -> None:  # fmt: skip
     """Write tables, a polar plot per shortlisted cell, the property chart, the summary and the brief.
 
     `place` is a folder that exists, usually that of `whole_folder`; what a stopped run left there is replaced. The
     candidates are in its parts; up to MOST_CSV of them, or with `csv`, also in candidates.csv. `progress` is told what
-    is being written.
+    is being written; `unlooked` says why nothing was looked at again as a solid.
     """
     from homog import plots
 
@@ -167,7 +170,7 @@ def write_screening(
         rank, family = row["rank"], FAMILIES[row["family"]]
         progress(f"polar plot {rank} of {len(screening.shortlist)}")
         figure = plots.polar_figure(
-            homogenize(rebuilt(row, brief), model=brief.model),
+            homogenize(rebuilt(row, brief), model=row["model"]),
             limits=brief.limits, title=f"{rank}. {family.title}, candidate {row['candidate']}",
         )  # fmt: skip
         stem = f"polar-{rank:02d}-{family.id}"
@@ -175,14 +178,15 @@ def write_screening(
             plots.save(figure, place / f"{stem}{suffix}")
         figures.append(f"{stem}.png")
     progress("summary")
-    (place / "summary.md").write_text(summary(screening, figures=figures, version=version), encoding="utf-8")
+    (place / "summary.md").write_text(
+        summary(screening, figures=figures, version=version, unlooked=unlooked), encoding="utf-8"
+    )
     progress("")
 
 
 def rebuilt(row: Mapping[str, Any], brief: Brief) -> UnitCell:
     """Return the cell of one row of a table."""
-    family = FAMILIES[row["family"]]
-    return family.build({p.name: row[p.column] for p in family.parameters}, brief.material)
+    return FAMILIES[row["family"]].build(given(row), brief.material)
 
 
 def parameter_words(row: Mapping[str, Any]) -> str:
@@ -298,7 +302,54 @@ def _tolerance(screening: Screening) -> str:
     )
 
 
-def summary(screening: Screening, *, figures: Sequence[str], version: str) -> str:
+def _second(screening: Screening, unlooked: str) -> str:
+    """Return what the second look found: both numbers of each candidate, and where the two models part."""
+    table = screening.looked
+    head = "## The second look, as solids\n\n"
+    if table is None:
+        return f"{head}Nothing was looked at again: {unlooked}.\n" if unlooked else ""
+    again = table[table["model"] == "solid"]
+    lines = []
+    for row in records(again):
+        pairs = [f"{number(row[f'screened_{name}'])} -> {number(row[name])}" for name in SCREENED]
+        what = "meets" if row["meets"] else f"misses {row['misses']}" if row["misses"] else "rejected"
+        lines.append([str(row["rank"]), str(row["candidate"]), str(row["family"]), *pairs, what])
+    words = (
+        f"Of the {len(table)} best of the screen, the {len(again)} that are planar walls were looked at again, each as "
+        "the two-dimensional solid of its true section, meshed twice. The shortlist is judged and ranked by the solids "
+        "where there are any. Both numbers, the screen's first:\n\n"
+    )
+    gone = again[~again["meets"]]
+    after = [f"{len(gone)} of them no longer meet the brief." if len(gone) else "All of them still meet the brief."]
+    for model, group in again.groupby(again["candidate"].map(_screen_models(screening)), sort=True):
+        off = [(group[n] / group[f"screened_{n}"] - 1.0).abs().max() for n in SCREENED if not n.startswith("nu")]
+        nu = max(float((group[n] - group[f"screened_{n}"]).abs().max()) for n in SCREENED if n.startswith("nu"))
+        after.append(
+            f"Of the {len(group)} that the screen took by the model `{model}`, stiffness was off by {max(off):.2%} at "
+            f"most, Poisson's ratio by {nu:.4f}."
+        )
+    notes = [f"- candidate {row['candidate']}: {row['note']}" for row in records(table[table["note"] != ""])]
+    header = ["was", "no.", "family", *SCREENED, "now"]
+    return head + words + markdown(header, lines) + "\n" + " ".join(after) + "\n" + "\n".join([*notes, ""])
+
+
+def _screen_models(screening: Screening) -> Callable[[int], str]:
+    """Return the model that the screen used for a candidate: what it asked for, or what that falls back to."""
+    assert screening.looked is not None
+    families = dict(zip(screening.looked["candidate"], screening.looked["family"], strict=True))
+    fallen: dict[str, str] = {}
+
+    def model(candidate: int) -> str:
+        name = families[candidate]
+        if name not in fallen:
+            cell = FAMILIES[name].build({}, screening.brief.material)
+            fallen[name] = homogenize(cell, model=screening.brief.model).model
+        return fallen[name]
+
+    return model
+
+
+def summary(screening: Screening, *, figures: Sequence[str], version: str, unlooked: str = "") -> str:
     """Return the summary of a screening in Markdown: asked, found, fallen, and what the numbers are and are not."""
     brief, met = screening.brief, screening.met
     parts = [f"# {brief.title}\n"]
@@ -314,6 +365,7 @@ def summary(screening: Screening, *, figures: Sequence[str], version: str) -> st
             "## What was found\n",
             _cells(screening.shortlist, brief, misses=False),
             "![property chart](chart.png)\n",
+            _second(screening, unlooked),
         ]
         reasons = screening.shortlist["reasons"]
     else:

@@ -41,6 +41,8 @@ class Screening:
     tally: Tally
     sample: pd.DataFrame
     parts: Parts
+    looked: pd.DataFrame | None = None
+    """What a second look made of the best, in the screen's order; those that no longer meet the brief too."""
 
     @property
     def met(self) -> int:
@@ -108,11 +110,12 @@ def run_screen(
             if progress is not None:
                 progress(done.rows)
     found = ranking.result()
-    best = shortlist(frame(found.best[0]), brief, times=looks)
+    best, looked = shortlist(frame(found.best[0]), brief, times=looks), None
     if second is not None and len(best):
-        again = second(best, brief)
-        best = shortlist(again[again["meets"]].drop(columns="rank"), brief)
-    return Screening(brief, best, frame(found.near[0]), ranking.falls(), found.tally, sample_frame(found), parts)
+        looked = second(best, brief)
+        best = shortlist(looked[looked["meets"]].drop(columns="rank"), brief)
+    near, sample = frame(found.near[0]), sample_frame(found)
+    return Screening(brief, best, near, ranking.falls(), found.tally, sample, parts, looked)
 
 
 def _others(plan: Plan, there: list[int]) -> Iterator[int]:

@@ -32,8 +32,9 @@ COARSE = 1.5
 change between the two was 1.4 to 5 times the error left in the finer one."""
 CONVERGED = 0.005
 """Largest relative change of a modulus between the two meshes that passes for converged."""
-CORNER_STEP_DEG = 22.5
-"""Longest side of the polygon that stands for an outer corner's arc; its area is the arc's."""
+CORNER_STEP_DEG = 7.5
+"""Longest side of the polygon that stands for an outer corner's arc; its area is the arc's. The round end of a thick
+wall between thin ones counts: with 22.5 degrees a hexagon with doubled walls came out up to 1.3 % off."""
 ARC_STEP_DEG = 5.0
 """The same for a curved wall, all across its thickness. With 5 degrees a ring is right within 0.1 %."""
 FILLET_PIECES = 12
@@ -126,7 +127,7 @@ def homogenize_solid(cell: UnitCell, *, fillet: float = 0.0, size: float = 1.0) 
     >>> round(result.relative_density, 6)  # 1 - 0.9^2
     0.19
     """
-    E, nu = _material(cell)
+    E, nu = wall_material(cell)
     if not (fillet >= 0.0 and np.isfinite(fillet) and 0.0 < size < np.inf):
         raise InputError(f"Solid model with fillet {fillet:g} mm, size {size:g}: give fillet >= 0 and size > 0")
     section = cell_section(cell, fillet=fillet)
@@ -206,7 +207,7 @@ def _constants(C: Array) -> dict[str, float]:
 # from the cell to its section --------------------------------------------------------------------------------------
 
 
-def _material(cell: UnitCell) -> tuple[float, float]:
+def wall_material(cell: UnitCell) -> tuple[float, float]:
     """Return modulus and Poisson's ratio of the walls, or raise InputError where the cell is none for this model."""
     if cell.kind != "planar":
         raise InputError(f"The solid model takes planar cells; '{cell.family}' is {cell.kind}: use another model")
@@ -235,8 +236,10 @@ def _material(cell: UnitCell) -> tuple[float, float]:
     return values[0], values[1]
 
 
-def cell_section(cell: UnitCell, *, fillet: float = 0.0, cut: ArrayLike | None = None) -> Section:
-    """Return one period of the true section of a planar wall cell.
+def cell_section(
+    cell: UnitCell, *, fillet: float = 0.0, pieces: int = FILLET_PIECES, cut: ArrayLike | None = None
+) -> Section:
+    """Return one period of the true section of a planar wall cell, its fillets in `pieces` for a quarter turn.
 
     `cut` are the fractional coordinates (2,) of the period's corner, by the shortest lattice vectors; by default the
     cut lines lie within the widest gaps between the corners of the section.
@@ -263,7 +266,7 @@ def cell_section(cell: UnitCell, *, fillet: float = 0.0, cut: ArrayLike | None =
     whole = shapely.union_all(np.concatenate(shapes))
     tidy = TIDY * min(float(block.props["thickness"].min()) for block in cell.blocks)
     if fillet > 0.0:
-        whole = shapely.union_all([whole, *_fillets(whole, fillet, tidy)])
+        whole = shapely.union_all([whole, *_fillets(whole, fillet, pieces, tidy)])
     whole = shapely.simplify(whole, tidy)
     corners = shapely.get_coordinates(whole) @ to_fraction
     corners = corners[(np.abs(corners - 1.0) <= 0.5 + TIDY).all(axis=1)]  # of one period, those on its rim twice
@@ -280,7 +283,7 @@ def cell_section(cell: UnitCell, *, fillet: float = 0.0, cut: ArrayLike | None =
     return Section(polygon, origin, lattice)
 
 
-def _fillets(whole: Any, radius: float, overlap: float) -> Any:
+def _fillets(whole: Any, radius: float, pieces: int, overlap: float) -> Any:
     """Return polygons that fill the inner corners of a section to a radius, with a hair's overlap.
 
     Grown with sharp corners and shrunk with round ones, only inner corners change; those of a polygon that stands for
@@ -290,7 +293,7 @@ def _fillets(whole: Any, radius: float, overlap: float) -> Any:
 
     with np.errstate(all="ignore"):  # the overlay library divides by zero on the way, to no harm
         grown = whole.buffer(radius, join_style="mitre", mitre_limit=1e6)
-        filled = grown.buffer(-radius, quad_segs=FILLET_PIECES)
+        filled = grown.buffer(-radius, quad_segs=pieces)
     added = shapely.get_parts(filled.difference(whole))
     half = np.radians(CORNER_DEG) / 2.0
     added = added[shapely.area(added) > radius**2 * (np.tan(half) - half)]

@@ -19,6 +19,8 @@ from numpy.typing import ArrayLike, NDArray
 Array = NDArray[np.float64]
 
 SQRT2 = np.sqrt(2.0)
+SWEEPS = 12
+"""Most rounds of rotations for eigenvalues; 3 x 3 takes about four."""
 PAIRS = {2: ((0, 0), (1, 1), (0, 1)), 3: ((0, 0), (1, 1), (2, 2), (1, 2), (0, 2), (0, 1))}
 
 
@@ -61,6 +63,64 @@ def stiffness_from_voigt(stiffness: ArrayLike, *, sheet: bool = False) -> Array:
 def compliance_to_voigt(compliance: ArrayLike, *, sheet: bool = False) -> Array:
     """Return the Voigt compliance (..., v, v) for engineering shear of a Mandel compliance (..., v, v)."""
     return stiffness_from_voigt(compliance, sheet=sheet)
+
+
+def inverse(matrix: ArrayLike) -> Array:
+    """Return the inverse (..., v, v) of symmetric positive definite matrices (..., v, v); not checked.
+
+    >>> inverse(np.diag([2.0, 4.0]))
+    array([[0.5 , 0.  ],
+           [0.  , 0.25]])
+    """
+    M = np.ascontiguousarray(np.moveaxis(np.asarray(matrix, float), (-2, -1), (0, 1)))
+    return np.ascontiguousarray(np.moveaxis(inverted(M), (0, 1), (-2, -1)))
+
+
+def inverted(M: Array) -> Array:
+    """Return the inverse of symmetric positive definite matrices (v, v, ...), row after row swept: no pivoting."""
+    A = M.copy()
+    product = np.empty_like(A)
+    for k in range(len(A)):
+        column, row = A[:, k].copy(), A[k] / A[k, k]
+        A -= np.multiply(column[:, None], row, out=product)
+        A[k], A[:, k] = row, -column / column[k]
+        A[k, k] = 1.0 / column[k]
+    return A
+
+
+def eigenvalues(M: Array) -> Array:
+    """Return the eigenvalues (v, ...) of symmetric matrices (v, v, ...) in no order, NaN where a matrix is.
+
+    Cyclic Jacobi rotations (Jacobi 1846), each member until its own entries are diagonal to the last digit, so that
+    small eigenvalues of positive definite matrices are as exact as large ones.
+    """
+    A = np.array(M)
+    tiny = np.finfo(float).eps / 4.0
+    pairs = [(p, q) for p in range(len(A)) for q in range(p + 1, len(A))]
+    with np.errstate(all="ignore"):
+        for _ in range(SWEEPS):
+            turned = False
+            for p, q in pairs:
+                d = A[q, q] - A[p, p]
+                open_ = A[p, q] ** 2 > tiny**2 * np.abs(A[p, p] * A[q, q])
+                if not open_.any():
+                    continue
+                turned = True
+                twice = 2.0 * A[p, q]
+                t = np.where(open_, twice / (d + np.copysign(np.hypot(d, twice), d)), 0.0)
+                c = 1.0 / np.sqrt(1.0 + t * t)
+                s = t * c
+                shift = t * A[p, q]
+                A[p, p] -= shift
+                A[q, q] += shift
+                A[p, q] = A[q, p] = np.where(open_, 0.0, A[p, q])
+                for r in range(len(A)):
+                    if r not in (p, q):
+                        A[r, p], A[r, q] = c * A[r, p] - s * A[r, q], s * A[r, p] + c * A[r, q]
+                        A[p, r], A[q, r] = A[r, p], A[r, q]
+            if not turned:
+                break
+    return np.array([A[i, i] for i in range(len(A))])
 
 
 def fourth_order(matrix: ArrayLike) -> Array:

@@ -175,7 +175,7 @@ def test_at_picks_members():
 
 
 def test_a_batch_longer_than_a_chunk(monkeypatch):
-    monkeypatch.setattr(effective, "CHUNK_ENTRIES", 50 * 49)
+    monkeypatch.setattr(effective, "CHUNK_ROWS", 50 * 10)
     thickness = np.linspace(0.3, 2.0, 333)
     cell = build("reentrant-honeycomb", thickness=thickness)
     found = homogenize(cell)

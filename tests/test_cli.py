@@ -19,10 +19,11 @@ import homog
 from homog import cli, engine, files, plots, report, terminal
 from homog.cell import STRAINS
 from homog.cli import main
-from homog.columns import COLUMNS, columns_of, reason_text
+from homog.columns import COLUMNS, columns_of
 from homog.elements import MODELS
 from homog.families import FAMILIES
 from homog.materials import materials, processes
+from homog.reasons import reason_text
 
 ROOT = Path(__file__).resolve().parent.parent
 

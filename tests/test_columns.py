@@ -9,21 +9,12 @@ from samples import case_name, cases, possible
 
 import homog
 from homog.cell import Block, Status, UnitCell
-from homog.columns import (
-    COLUMNS,
-    REASONS,
-    column,
-    columns_of,
-    evaluate,
-    listed,
-    reason_level,
-    reason_text,
-    table,
-)
+from homog.columns import COLUMNS, column, columns_of, evaluate, listed, table
 from homog.effective import Effective
 from homog.errors import InputError
 from homog.families import FAMILIES, build, family
 from homog.materials import UNIT, Material, material
+from homog.reasons import REASONS, reason_level, reason_text
 from homog.tensors import isotropic, orthotropic, stiffness_to_voigt
 
 PLA = material("PLA")
@@ -53,14 +44,18 @@ def codes(row):
 def test_every_column_has_a_value_wherever_it_should(case):
     given = possible(case, 6, np.random.default_rng(90210), PLA)
     effective = homogenize(family(case[0]).build(given, PLA))
-    out = evaluate(effective, part=PART)
+    out = evaluate(effective, part=PART, tolerance=0.01)
     assert list(out) == ["family", *(p.column for p in family(case[0]).parameters), *columns_of(effective.kind)]
     live = effective.status == Status.OK
     assert live.any()
     isotropic_only = {"E1_per_hashin_shtrikman", "hashin_shtrikman_ratio"}
-    may_be_nan = {"voigt_ratio", *isotropic_only} if effective.kind == "sheet" else set()
+    scatter = {"E1_scatter_percent", "nu12_scatter"}
+    may_be_nan = {"voigt_ratio", *isotropic_only, *scatter} if effective.kind == "sheet" else set()
+    may_be_nan |= {"E1_low_MPa", "E1_high_MPa", "nu12_low", "nu12_high"}  # where nothing was measured: test_bands
     if family(case[0]).symmetry != "isotropic":
         may_be_nan |= isotropic_only
+    if {block.kind for block in effective.cell.blocks} & {"hinge", "bar", "fold"}:  # no cross section, no yield
+        may_be_nan |= {name for name in COLUMNS if name.startswith("yield")}
     for name in columns_of(effective.kind):
         if COLUMNS[name].text:
             assert all(isinstance(word, str) for word in out[name]), name
@@ -239,6 +234,11 @@ def grid(kind, *, extra=(), solid=1.0, props=None):
     return UnitCell(points, 10.0 * np.eye(2), blocks, solid=np.array([solid]), slenderness=np.array([0.02]))
 
 
+def sharp(outer, inner, thickness):
+    cell = build("arrowhead", outer_angle=[outer], inner_angle=inner, thickness=thickness)
+    return evaluate(homogenize(cell, model="joint"))
+
+
 WALLS = {"thickness": np.array([[0.2]]), "modulus": np.array([1.0]), "poisson": np.array([0.3])}
 DANGLING = Block("bar", np.array([[0, 1]]), np.zeros((1, 2, 2)), {"rigidity": np.array([1.0])})
 
@@ -259,13 +259,18 @@ CASES = {
     "internal-mechanism": lambda: evaluate(homogenize(grid("wall", solid=4.0, props=WALLS, extra=(DANGLING,)))),
     "panels-unbraced": lambda: evaluate(homogenize(build("miura-fold", fold_angle=[30.0],
                                                          material=PLA.replaced(poisson=0.05)))),
-    "joint-outside": lambda: evaluate(homog.homogenize(build("arrowhead", outer_angle=[12.0], inner_angle=[15.0],
-                                                             thickness=0.05))),
-    "joints-near": lambda: evaluate(homog.homogenize(build("square-grid", thickness=[7.3]))),
     "near-singular": lambda: evaluate(homogenize(build("square-grid", thickness=[0.005]))),
     "coupled": lambda: turned("square-grid", 22.5, thickness=[0.2]),
     "reach-short": lambda: evaluate(homogenize(build("reentrant-honeycomb", angle=[-3.0], thickness=0.4))),
     "few-cells": lambda: evaluate(homogenize(build("square-grid", thickness=[0.2])), part=(39.0, 100.0)),
+    "joint-outside": lambda: sharp(12.0, 15.0, 0.05),
+    "joints-near": lambda: sharp(20.0, 40.0, 2.65),
+    "joints-overlap": lambda: sharp(20.0, 40.0, 3.2),
+    "band-unknown": lambda: evaluate(homogenize(build("octet", diameter=[0.2]))),
+    "limit-within-band": lambda: evaluate(
+        homogenize(build("hexagonal-honeycomb", thickness=[0.4])), limits={"E1_MPa": (0.0, 1.6e-4)}
+    ),
+    "tangent-nodes": lambda: evaluate(homogenize(build("anti-tetrachiral", thickness=[0.4]))),
 }  # fmt: skip
 
 

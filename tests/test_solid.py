@@ -12,6 +12,7 @@ Two-dimensional finite elements of the re-entrant honeycomb by two independent c
 """
 
 import dataclasses
+import os
 
 import numpy as np
 import pytest
@@ -483,6 +484,15 @@ def test_energy_of_the_motion_is_the_stiffness():
     apart = result.motion[:, :, 1] - result.motion[owner][:, :, 1]
     period = points - points[owner]
     np.testing.assert_allclose(apart, period * [0.0, 1.0], rtol=0.0, atol=1e-10 * np.abs(u).max())
+
+
+def test_a_broken_pipe_is_no_end_of_the_process():
+    homogenize_solid(reentrant(1.0), size=3.0)
+    read, write = os.pipe()
+    os.close(read)
+    with pytest.raises(BrokenPipeError):  # and not the silent end by a signal that the mesher had put back
+        os.write(write, b"x")
+    os.close(write)
 
 
 def test_a_table_of_the_result():

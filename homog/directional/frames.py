@@ -82,9 +82,8 @@ def extremes(S: Array, zero: float) -> Array:
     ndarray of shape (11, c)
         Angles in degrees between n and axis 1, 0 to 90; the share of pairs (n, m) with nu < 0, exact in m.
     """
-    _, weights = _grid()
-    values = (S[:, *UPPER] @ weights.reshape(len(UPPER[0]), -1)).reshape(len(S), 7, -1).transpose(1, 0, 2)
-    stretch, mean, half, mixed, g_mean, g_half, g_mixed = values
+    stretch, *values = _on_grid(S, slice(None))
+    mean, half, mixed, g_mean, g_half, g_mixed = values
     none = np.broadcast_to(0.0, stretch.shape)
     fields = (
         _Field(stretch, none, none, none),
@@ -93,14 +92,32 @@ def extremes(S: Array, zero: float) -> Array:
     )
     best, angle = _seek(S, stretch, fields)
 
-    above = (mean - zero * stretch.max(axis=1)[:, None])[:, :-1]
-    swing = fields[CROSS].swing[:, :-1]
-    cosine = np.clip(np.where(swing > 0.0, -above / swing, -np.sign(above)), -1.0, 1.0)
-    share = (np.arccos(cosine) / np.pi).mean(axis=1)
-
+    share = _share(stretch, mean, fields[CROSS].swing, zero)
     nu_min, nu_max, soft, stiff, g_soft, g_stiff = best * [[-1.0], [1.0], [1.0], [-1.0], [1.0], [-1.0]]
     nu = (nu_min, angle[0], nu_max, angle[1])
     return np.array([*nu, 1.0 / soft, angle[2], 1.0 / stiff, angle[3], 0.25 / g_soft, 0.25 / g_stiff, share])
+
+
+def auxetic_share(S: Array, zero: float) -> Array:
+    """Return the share of pairs (n, m) with nu < 0 alone, (c,), the last row of `extremes`."""
+    stretch, mean, half, mixed = _on_grid(S, slice(0, 4))
+    return _share(stretch, mean, np.sqrt(half**2 + mixed**2), zero)
+
+
+def _on_grid(S: Array, which: slice) -> Array:
+    """Return the values (k, c, g) at the grid's directions of the components that `_grid` names."""
+    weights = _grid()[1][:, which]
+    found = S[:, *UPPER] @ weights.reshape(len(UPPER[0]), -1)
+    return np.asarray(found.reshape(len(S), weights.shape[1], -1).transpose(1, 0, 2))
+
+
+def _share(stretch: Array, mean: Array, swing: Array, zero: float) -> Array:
+    above = (mean - zero * stretch.max(axis=1)[:, None])[:, :-1]
+    swing = swing[:, :-1]
+    share = np.where(above > 0.0, 1.0, np.where(above < 0.0, 0.0, 0.5))
+    cut = np.abs(above) < swing  # elsewhere the sign is the same for every m
+    share[cut] = np.arccos(-above[cut] / swing[cut]) / np.pi
+    return np.asarray(share.mean(axis=1))
 
 
 class _Field(NamedTuple):

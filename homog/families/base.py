@@ -230,13 +230,13 @@ def wall_cell(
     """Return a planar cell of straight walls, thickness (..., m), with its true area and slenderness."""
     nodes, shifts = topology(elements)
     area, merged = wall_section(points, lattice, nodes, shifts, thickness)
-    lengths = np.linalg.norm(element_vectors(points, lattice, nodes, shifts), axis=-1)
+    x, y = np.moveaxis(element_vectors(points, lattice, nodes, shifts), -1, 0)
     return UnitCell(
         points=points,
         lattice=lattice,
         blocks=(Block("wall", nodes, shifts, wall_props(thickness, material)),),
         parent=material,
         solid=area,
-        slenderness=(thickness / lengths).max(axis=-1),
+        slenderness=(thickness / np.hypot(x, y)).max(axis=-1),
         status=np.where(merged, Status.IMPOSSIBLE, Status.OK).astype(np.int8),
     )

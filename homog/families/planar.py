@@ -33,7 +33,7 @@ def _honeycomb_parameters(low: float, high: float, default: float, vertical: flo
         Parameter("angle", "deg", low, high, default, "angle of the inclined walls from axis 1"),
         THICKNESS,
         Parameter("vertical_thickness", "mm", 0.001, 200.0, "thickness",
-                  "thickness of the walls along axis 2 (doubled in expanded foil)", made=True),
+                  "thickness of the walls along axis 2, each one wall with a round end", made=True),
     )  # fmt: skip
 
 

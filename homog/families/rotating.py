@@ -114,11 +114,11 @@ NOTES = "Rigid units give nu = -1; what the units themselves give way raises it.
 
 FAMILIES = (
     Family(
-        "rotating-squares", "Rotating squares", "planar", _parameters(89.0, 30.0), "square",
+        "rotating-squares", "Rotating squares", "planar", _parameters(89.0, 20.0), "square",
         "Grima & Evans 2000, J. Mater. Sci. Lett. 19, 1563 (from memory)", _squares, rules=RULES, notes=NOTES,
     ),
     Family(
-        "rotating-triangles", "Rotating triangles", "planar", _parameters(119.0, 60.0), "isotropic",
+        "rotating-triangles", "Rotating triangles", "planar", _parameters(119.0, 20.0), "isotropic",
         "Grima & Evans 2006, J. Mater. Sci. 41, 3193 (from memory)", _triangles, rules=RULES, notes=NOTES,
     ),
 )  # fmt: skip

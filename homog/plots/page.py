@@ -1,4 +1,7 @@
-"""The page of one cell: dials of nu, E and G, its shape at scale with axes and a bar, and what its columns say."""
+"""The page of one cell: three dials, its shape at scale with axes and a bar, and what its columns say.
+
+The dials show nu, E and G (`stiffness`), or stress and strain at first yield (`yield`).
+"""
 
 from __future__ import annotations
 
@@ -11,11 +14,11 @@ import numpy as np
 from numpy.typing import NDArray
 
 from homog import directional
-from homog.cell import Kind, Status
+from homog.cell import Status
 from homog.columns import Results, column, evaluate
 from homog.directional import Extremes
 from homog.effective import Effective, soft_mode
-from homog.errors import InputError
+from homog.errors import InputError, unknown
 from homog.families import FAMILIES
 from homog.plots import paint
 from homog.plots.dial import TURN, Panel, Scale, draw_panel
@@ -36,6 +39,8 @@ from homog.plots.style import (
     wrapped,
     write,
 )
+from homog.stress import sections
+from homog.tensors import vector
 
 if TYPE_CHECKING:
     from matplotlib.figure import Figure
@@ -48,8 +53,17 @@ LINE = 0.15
 """From one small line to the next, inches."""
 SAME = 1e-3
 """Two curves that differ less than this share are drawn as one."""
+SLANTED = (math.sqrt(0.5), math.sqrt(0.5))
+"""Axes 2 and 3 of the second plane of a spatial cell."""
 FIRST = "all in the plane 1-2"
 SECOND = "dashed: the plane of axis 1 and the 45° line between 2 and 3"
+QUANTITIES = ("stiffness", "yield")
+"""What a page's dials may show."""
+FIRST_YIELD = "first yield of a beam's extreme fibre; inner corners of the solid see more"
+STRENGTH = ("relative_density", "density_kg_m3", "yield_1_MPa", "yield_2_MPa", "yield_12_MPa", "yield_strain_1",
+            "E1_MPa", "E2_MPa", "G12_MPa", "nu12", "nu21", "slenderness", "thinnest_mm", "cell_1_mm",
+            "cell_2_mm")  # fmt: skip
+"""What stands beside the cell on a page of first yield."""
 READINGS = {
     "planar": ("relative_density", "density_kg_m3", "E1_MPa", "E2_MPa", "G12_MPa", "nu12", "nu21", "eta1_12", "nu_min",
                "nu_max", "auxetic_share", "auxetic_reach_deg", "anisotropy", "slenderness", "cell_1_mm", "cell_2_mm"),
@@ -64,14 +78,21 @@ READINGS = {
 
 @one_at_a_time
 def polar_figure(
-    effective: Effective, *, limits: Sequence[Limit] = (), title: str = "", cell_label: str = ""
+    effective: Effective,
+    *,
+    quantity: str = "stiffness",
+    limits: Sequence[Limit] = (),
+    title: str = "",
+    cell_label: str = "",
 ) -> Figure:
-    """Return the page of one cell: E, nu and G against direction, its shape at scale, and its main columns.
+    """Return the page of one cell: E, nu and G or first yield against direction, its shape at scale, its main columns.
 
     Parameters
     ----------
     effective : Effective
         One cell: batch shape () or a batch of one.
+    quantity : str
+        `stiffness`: nu, E and G; `yield`: stress at first yield under a pull and in shear, and strain under the pull.
     limits : sequence of Limit
         Requirements. Those on E, nu, G and the reach are drawn, with hairs on the side that is out; all are listed
         with what the cell has.
@@ -87,8 +108,11 @@ def polar_figure(
     Raises
     ------
     InputError
-        More cells than one; a cell that cannot exist or is a mechanism; a limit on an unknown column.
+        More cells than one; a cell that cannot exist or is a mechanism; a limit on an unknown column; for `yield`, a
+        parent without yield or elements without a cross section.
     """
+    if quantity not in QUANTITIES:
+        raise unknown("quantity", quantity, QUANTITIES)
     results = Results(effective)
     family = effective.cell.family
     if results.count != 1:
@@ -102,8 +126,12 @@ def polar_figure(
         raise InputError(f"Cell '{family}' has no polar plot: it cannot exist or be inverted; check its parameters")
     for limit in limits:
         column(limit.column)
-    panels = {"planar": _plane_panels, "sheet": _sheet_panels, "spatial": _space_panels}[effective.kind](results)
-    names = dict.fromkeys((*READINGS[effective.kind], "verdict", "reasons", *(limit.column for limit in limits)))
+    readings: tuple[str, ...] = READINGS[effective.kind]
+    if quantity == "yield":
+        panels, readings = _yield_panels(results), STRENGTH
+    else:
+        panels = {"planar": _plane_panels, "sheet": _sheet_panels, "spatial": _space_panels}[effective.kind](results)
+    names = dict.fromkeys((*readings, "verdict", "reasons", *(limit.column for limit in limits)))
     values = {name: value[0] for name, value in evaluate(effective, list(names)).items()}
 
     figure = blank_figure(WIDTH, HEIGHT)
@@ -114,7 +142,7 @@ def polar_figure(
     for panel, listed, (x, y, width) in zip(panels, drawn, places, strict=True):
         _place(figure, panel, x, y, width, limits, listed, values)
     _shape(figure, effective)
-    _readings(figure, effective.kind, values)
+    _readings(figure, readings, values)
     foot(figure, f"Model: {effective.model}. Parent: {effective.cell.parent.name}")
     return figure
 
@@ -139,7 +167,7 @@ def _panels(C: Array, e: Extremes, reach: float, others: Sequence[tuple[Array, A
 
 def _first(curve: Array) -> float:
     """The smallest direction, degrees, at which a curve over TURN is highest."""
-    return float(np.degrees(TURN[np.argmax(curve >= curve.max() - SAME**2 * np.abs(curve).max())]))
+    return float(np.degrees(TURN[_least(-curve)]))
 
 
 def _auxetic_words(e: Extremes, reach: float) -> tuple[str, ...]:
@@ -171,13 +199,60 @@ def _sheet_panels(results: Results) -> list[Panel]:
     return [nu, below, E]
 
 
+def _turned(up: Sequence[float]) -> tuple[Array, Array]:
+    """The directions over TURN, and those a quarter turn on, in the plane of axis 1 and the unit vector `up` (d,)."""
+    y, x = np.asarray(up, float), np.eye(len(up))[0]
+    c, s = np.cos(TURN)[:, None], np.sin(TURN)[:, None]
+    return c * x + s * y, c * y - s * x
+
+
+def _yield_panels(results: Results) -> list[Panel]:
+    parent = results.parent
+    if np.isnan(parent.yield_MPa):
+        raise InputError(f"Parent '{parent.name}' has no yield, so nothing yields first; give it one, take another "
+                         "parent ('homog materials' lists them), or draw the stiffness")  # fmt: skip
+    found = sections(results.effective)
+    planar = results.kind == "planar"
+    curves = []
+    for up in [[0.0, 1.0]] if planar else [[0.0, 1.0, 0.0], [0.0, *SLANTED]]:
+        n, m = _turned(up)
+        pull, shear = vector(_dyads(n, n)), vector(_dyads(n, m) + _dyads(m, n))
+        stress, across = (parent.yield_MPa / found.peak(load)[0] for load in (pull, shear))
+        E = directional.young(results.stiffness[0], **({"angle": TURN} if planar else {"direction": n}))
+        curves.append((stress, across, stress / E))
+    parent_words = f"the parent yields at {number(parent.yield_MPa, 'MPa')}; a push does what a pull does, no buckling"
+    notes: tuple[str, ...] = (FIRST_YIELD, parent_words)
+    if not planar:
+        same = all(np.abs(a - b).max() <= SAME * a.max() for a, b in zip(*curves, strict=True))
+        notes = (FIRST if same else f"{FIRST}; {SECOND}", *notes)
+        curves = curves[:1] if same else curves
+
+    def panel(k: int, name: str, title: str, unit: str, on_axis: dict[str, float], notes: tuple[str, ...]) -> Panel:
+        curve = curves[0][k]
+        low, high = ((float(curve[i]), float(np.degrees(TURN[i]))) for i in (_least(curve), _least(-curve)))
+        return Panel(name, title, unit, tuple(c[k] for c in curves), on_axis, (), low, high, notes=notes)
+
+    return [
+        panel(0, "yield", "Pull at first yield", "MPa", {"yield_1_MPa": 0.0, "yield_2_MPa": 90.0}, notes),
+        panel(1, "yield_shear", "Shear at first yield", "MPa", {"yield_12_MPa": 0.0}, ()),
+        panel(2, "yield_strain", "Strain at first yield", "", {"yield_strain_1": 0.0}, ("along the pull",)),
+    ]
+
+
+def _dyads(a: Array, b: Array) -> Array:
+    return a[:, :, None] * b[:, None, :]
+
+
+def _least(curve: Array) -> int:
+    """The first place over TURN at which a curve is lowest."""
+    return int(np.argmax(curve <= curve.min() + SAME**2 * abs(curve.min())))
+
+
 def _space_panels(results: Results) -> list[Panel]:
     S, C = results.compliance[0], results.stiffness[0]
     keep = [0, 1, 5]
     e = directional.plane_extremes(S[np.ix_(keep, keep)])
-    q, along = np.array([0.0, 1.0, 1.0]) / math.sqrt(2.0), np.array([1.0, 0.0, 0.0])
-    n = np.cos(TURN)[:, None] * along + np.sin(TURN)[:, None] * q
-    m = np.cos(TURN)[:, None] * q - np.sin(TURN)[:, None] * along
+    n, m = _turned([0.0, *SLANTED])
     slanted = (directional.poisson(C, direction=n, across=m), directional.young(C, direction=n),
                directional.shear(C, direction=n, across=m))  # fmt: skip
     reach = float(e.auxetic_reach_deg)
@@ -270,9 +345,9 @@ def _shape(figure: Figure, effective: Effective) -> None:
         paint.draw_space(axes_at(figure, x, y, width, height, "cell"), cell)
 
 
-def _readings(figure: Figure, kind: Kind, values: dict[str, Any]) -> None:
+def _readings(figure: Figure, readings: Sequence[str], values: dict[str, Any]) -> None:
     left, right, y = 8.3, WIDTH - 0.2, HEIGHT - 0.88
-    for name in READINGS[kind]:
+    for name in readings:
         write(figure, left, y, symbol(name)[0], color=GREY)
         write(figure, right, y, value_of(name, float(values[name])), ha="right")
         y -= LINE + 0.005
