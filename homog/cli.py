@@ -145,10 +145,9 @@ def _assigned(found: Family, words: Sequence[str] | None) -> dict[str, Any]:
             raise InputError(f"Parameter '{name}' is given twice; give it once")
         what, remedy = f"Parameter '{name}'", f"write {name}=VALUE, in a sweep also LOW:HIGH:COUNT or A,B,C"
         if found.parameter(name).choices:
-            choices = text.split(",")
-            for choice in choices:
+            given[name] = text.split(",")
+            for choice in given[name]:
                 found.values({name: choice})
-            given[name] = choices
             continue
         if ":" in text:
             parts = text.split(":")
@@ -171,16 +170,15 @@ def _one(family_id: str, words: Sequence[str] | None, parent: Material, model: s
     """Return one evaluated cell, as a batch of one but for a solid, so that a mechanism is reported and not raised."""
     import numpy as np
 
-    from homog.candidates import Span
     from homog.effective import homogenize
     from homog.families import family
 
     found = family(family_id)
-    given: dict[str, Any] = {}
+    given = {}
     for name, values in _assigned(found, words).items():
         if len(values) > 1:
             raise InputError(f"Parameter '{name}' has {len(values)} values; give one, or use 'homog sweep'")
-        given[name] = values.low if isinstance(values, Span) else values[0]
+        given[name] = values[0]
     cell = found.build(given, parent)  # raises where the cell cannot exist
     if model == "solid" or fillet != 0.0:
         return homogenize(cell, model=model, fillet=fillet)
@@ -398,18 +396,17 @@ def sweep(
     """
     from homog.brief import MOST_CANDIDATES, bare_brief
     from homog.candidates import Candidates
-    from homog.engine import Plan
-    from homog.engine import workers as started
+    from homog.engine import Plan, started
     from homog.families import family
-    from homog.report import check_table, provenance, write_table
+    from homog.report import check_table, provenance, stream_table
     from homog.screening import sweep_tables
 
     check_table(out, overwrite=overwrite)
     found, parent = family(id), _parent(material, modulus, poisson, solid_density, deep, yield_stress)
     given = _assigned(found, parameters)
     words = {name: values for name, values in given.items() if found.parameter(name).choices}
-    spans: dict[str, Any] = {name: values for name, values in given.items() if name not in words}
-    choices = [dict(zip(words, choice, strict=True)) for choice in product(*words.values())]
+    spans = {name: values for name, values in given.items() if name not in words}
+    choices = (dict(zip(words, choice, strict=True)) for choice in product(*words.values()))
     sources = [Candidates(found, choice, spans, {}) for choice in choices]
     count = sum(source.count for source in sources)
     if count > MOST_CANDIDATES:
@@ -417,7 +414,8 @@ def sweep(
     plan = Plan(bare_brief(sources, parent, model))
     with started(workers, cluster, parts=len(plan)) as using, progress(count, f"sweeping {id}") as advance:
         tables, whole = sweep_tables(plan, using, progress=advance)
-        write_table(tables, whole, out, provenance(__version__, model, parent, family=id), overwrite=overwrite)
+        about = provenance(__version__, model, parent, family=id, rows=count)
+        stream_table(tables, whole, out, about, overwrite=overwrite)
     print(f"wrote {out}: {count:,} rows")
     return 0
 
@@ -444,8 +442,7 @@ def screen(
     Exit status 3 if nothing meets the brief: the summary then says what is in the way.
     """
     from homog.brief import read_brief
-    from homog.engine import Plan
-    from homog.engine import workers as started
+    from homog.engine import Plan, started
     from homog.files import whole_folder
     from homog.recheck import MOST, missing_extra, second_look
     from homog.report import write_screening
@@ -453,9 +450,8 @@ def screen(
     from homog.store import Folder, has_parts
 
     asked = read_brief(brief)
-    with kept(out), whole_folder(out, resume=resume, worth=has_parts) as place:
-        plan = Plan(asked)
-        parts = Folder(place, plan.about())
+    with whole_folder(out, resume=resume, worth=has_parts) as place:
+        parts = Folder(place, Plan(asked).about())
         unlooked = "it was not asked for" if not solids else missing_extra() if asked.model != "solid" else ""
 
         def second(best: DataFrame, asked: Brief) -> DataFrame:
@@ -463,16 +459,15 @@ def screen(
                 return second_look(best, asked, workers=workers, progress=advance)
 
         looks = None if unlooked or asked.model == "solid" else second
-        there = len(parts.done())
         with (
-            started(workers, cluster, parts=len(plan) - there) as using,
+            kept(place),
+            started(workers, cluster, parts=parts.missing()) as using,
             progress(asked.count, "screening", parts=parts, computing=using.words) as advance,
         ):
             found = run_screen(asked, parts=parts, using=using, progress=advance, second=looks)
-        tell = teller()
-        write_screening(found, place, version=__version__, brief_name=brief.name, csv=csv, progress=tell,
-                        unlooked=unlooked)  # fmt: skip
-        tell("")
+        with kept(place):
+            write_screening(found, place, version=__version__, brief_name=brief.name, csv=csv, progress=teller(),
+                            unlooked=unlooked)  # fmt: skip
     if len(found.shortlist):
         best = found.shortlist.iloc[0]
         print(f"{found.met:,} of {asked.count:,} candidates meet the brief; "

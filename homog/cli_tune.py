@@ -157,7 +157,6 @@ def tune(
     Example: homog tune reentrant-honeycomb --target nu12=-0.8 --target E1_MPa=3: --limit "density_kg_m3<200"
     --material "PA12 laser-sintered" --process "powder-bed polymer"
     """
-    import pyarrow as pa
 
     from homog.families import family
     from homog.materials import Process
@@ -189,8 +188,7 @@ def tune(
     if out is not None and len(result.found):
         asked = [words(one) for one in result.problem.limits]
         meta = provenance(__version__, model, parent, family=id, asked=asked, starts=result.starts, seed=seed)
-        table = pa.Table.from_pandas(result.found, preserve_index=False)
-        write_table([table], table.schema, out, meta, overwrite=overwrite)
+        write_table(result.found, out, meta, overwrite=overwrite)
         if not as_json:
             print(f"wrote {out}: {len(result.found)} rows")
     return 0 if len(result.found) else 3

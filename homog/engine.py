@@ -142,19 +142,14 @@ def rows(brief: Brief, part: Part) -> dict[str, Any]:
 
 @dataclass(frozen=True, eq=False)
 class Job:
-    """What a worker has to know: the brief, and how deep the ranking of each family goes."""
+    """What a worker has to know: the brief in its parts, and how deep the ranking of each family goes."""
 
-    brief: Brief
+    plan: Plan
     depth: int
-
-    @cached_property
-    def plan(self) -> Plan:
-        """The brief's parts."""
-        return Plan(self.brief)
 
     def part(self, number: int) -> pa.Table:
         """Compute one part."""
-        return tabled(rows(self.brief, self.plan[number]), self.plan.schema)
+        return tabled(rows(self.plan.brief, self.plan[number]), self.plan.schema)
 
 
 @dataclass(frozen=True, eq=False)
@@ -173,7 +168,7 @@ def compute(packed: bytes, number: int, version: str = __version__) -> Done:
         raise HomogError(f"A worker has homog-cells {__version__}, this is {version}; install the same there")
     job = _unpacked(packed)
     table = job.part(number)
-    return Done(number, len(table), encoded(table), digest(table, job.brief, job.depth))
+    return Done(number, len(table), encoded(table), digest(table, job.plan.brief, job.depth))
 
 
 @functools.lru_cache(maxsize=4)
@@ -219,7 +214,7 @@ def cores() -> int:
 
 
 @contextmanager
-def workers(count: int = 0, cluster: str = "", *, parts: int) -> Iterator[Workers]:
+def started(count: int = 0, cluster: str = "", *, parts: int) -> Iterator[Workers]:
     """Yield what computes parts: this process, processes beside it, or a cluster.
 
     Parameters

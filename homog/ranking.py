@@ -29,6 +29,8 @@ Index = NDArray[np.int64]
 NEAREST = 5
 SAMPLE = 50_000
 """Candidates kept for the chart of those that meet the brief, and as many of those that do not."""
+LOOSE = 1000
+"""Rows of the best, or of the nearest, that gather before they are merged."""
 CHARTED = ("density_kg_m3", "E1_MPa")
 BLOCK = 256
 
@@ -155,7 +157,8 @@ def tally(table: pa.Table, brief: Brief) -> Tally:
         for code in entry["values"].as_py().split():
             reasons[code] += entry["counts"].as_py()
     columns = [limit.column for limit in brief.limits]
-    missed = np.array([~(number_column(table, f"miss_{name}") == 0.0) for name in columns]).reshape(-1, len(table))
+    misses = [~(number_column(table, f"miss_{name}") == 0.0) for name in columns]
+    missed = np.array(misses, bool).reshape(len(columns), len(table))
     alone = missed & (missed.sum(axis=0) == 1)
     counts = (Counter(dict(zip(columns, mask.sum(axis=1).tolist(), strict=True))) for mask in (missed, alone))
     return Tally(families, reasons, *counts)
@@ -203,9 +206,9 @@ class Ranking:
 
     def _settle(self, kept: Digest, *, now: bool = False) -> None:
         """Merge what has gathered, once it is as much again as what was kept: the work stays in proportion."""
-        if now or _loose(kept.best) > max(1000, len(kept.best[0])):
+        if now or _loose(kept.best) > max(LOOSE, len(kept.best[0])):
             kept.best = [ranked(_joined(kept.best), self.brief, self.depth)]
-        if now or _loose(kept.near) > 100 * NEAREST:
+        if now or _loose(kept.near) > LOOSE:
             kept.near = [nearest(_joined(kept.near), self.brief)]
         if now or _loose(kept.sample) > SAMPLE:
             kept.sample = [sampled(_joined(kept.sample), SAMPLE)]

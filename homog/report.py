@@ -109,23 +109,26 @@ def check_table(path: Path, *, overwrite: bool = False) -> Path:
     return beside
 
 
-def write_table(
-    tables: Iterable[pa.Table], whole: pa.Schema, path: Path, meta: Mapping[str, Any], *, overwrite: bool = False
-) -> int:
-    """Write tables of one schema into one file, CSV or Parquet by its suffix, and their provenance to NAME.meta.json.
-
-    All of it or nothing; `rows` is added to the provenance, and returned.
+def write_table(table: pd.DataFrame, path: Path, meta: Mapping[str, Any], *, overwrite: bool = False) -> None:
+    """Write a table as CSV or Parquet by its suffix, whole or not at all, and its provenance to NAME.meta.json.
 
     Raises
     ------
     InputError
         For another suffix, or a file that is there already.
     """
+    whole = pa.Table.from_pandas(table, preserve_index=False)
+    stream_table([whole], whole.schema, path, meta, overwrite=overwrite)
+
+
+def stream_table(
+    tables: Iterable[pa.Table], whole: pa.Schema, path: Path, meta: Mapping[str, Any], *, overwrite: bool = False
+) -> None:
+    """Write tables of one schema, one after the other as they come, into one file; otherwise as `write_table`."""
     beside = check_table(path, overwrite=overwrite)
-    with whole_file(beside, overwrite=overwrite) as meta_file:
-        rows = write_tables(tables, whole, path, overwrite=overwrite)
-        meta_file.write_text(json.dumps({**meta, "rows": rows}, indent=2, ensure_ascii=False) + "\n", encoding="utf-8")
-    return rows
+    with whole_file(path, overwrite=overwrite) as temporary, whole_file(beside, overwrite=overwrite) as meta_file:
+        meta_file.write_text(json.dumps(meta, indent=2, ensure_ascii=False) + "\n", encoding="utf-8")
+        write_tables(tables, whole, temporary)
 
 
 def write_screening(
@@ -140,17 +143,17 @@ def write_screening(
     """
     from homog import plots
 
-    brief, whole = screening.brief, Plan(screening.brief).schema
+    brief = screening.brief
     meta = provenance(
         version, brief.model, brief.material, title=brief.title, brief_sha256=sha256(brief.text),
         candidates=brief.count, meeting=screening.met, seeds=sorted({c.seed for c in brief.candidates if c.sampled}),
     )  # fmt: skip
     if csv or brief.count <= MOST_CSV:
         progress("candidates.csv")
-        write_table(screening.tables(), whole, place / "candidates.csv", meta, overwrite=True)
+        whole = Plan(brief).schema
+        stream_table(screening.tables(), whole, place / "candidates.csv", meta, overwrite=True)
     progress("shortlist.csv")
-    short = pa.Table.from_pandas(screening.shortlist, preserve_index=False)
-    write_table([short], short.schema, place / "shortlist.csv", meta, overwrite=True)
+    write_table(screening.shortlist, place / "shortlist.csv", meta, overwrite=True)
     copy = place / (brief_name if brief_name.endswith(".toml") else "brief.toml")
     copy.write_bytes(brief.text.encode())
     shown = screening.shortlist if screening.met else screening.nearest
@@ -178,6 +181,7 @@ def write_screening(
     (place / "summary.md").write_text(
         summary(screening, figures=figures, version=version, unlooked=unlooked), encoding="utf-8"
     )
+    progress("")
 
 
 def rebuilt(row: Mapping[str, Any], brief: Brief) -> UnitCell:

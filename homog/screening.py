@@ -17,7 +17,7 @@ import pyarrow as pa
 
 from homog.brief import Brief
 from homog.columns import columns_of
-from homog.engine import Job, Plan, Workers, results, workers
+from homog.engine import Job, Plan, Workers, results, started
 from homog.ranking import Fall, Ranking, Tally, check_goals, digest, sample_frame, shortlist
 from homog.store import Memory, Nowhere, Parts, decoded, frame
 
@@ -83,7 +83,7 @@ def run_screen(
         Where the candidates go: `store.Memory()` unless given, a `store.Folder`, or `store.Nowhere()`. Parts that are
         there already are not computed again.
     using : Workers, optional
-        What computes (`engine.workers`); this process unless given.
+        What computes (`engine.started`); this process unless given.
     progress : callable, optional
         Called with the number of candidates done since the last call.
     second : callable, optional
@@ -92,7 +92,7 @@ def run_screen(
     """
     parts = Memory() if parts is None else parts
     looks = 1 if second is None else LOOKS
-    job = Job(brief, looks * min(brief.per_family, brief.keep))
+    job = Job(Plan(brief), looks * min(brief.per_family, brief.keep))
     check_goals(job.plan.schema.names, brief)
     ranking = Ranking(brief, job.depth)
     there = parts.done()
@@ -102,7 +102,7 @@ def run_screen(
         if progress is not None:
             progress(len(table))
     missing = _others(job.plan, there)
-    context = workers(1, parts=len(job.plan)) if using is None else nullcontext(using)
+    context = started(1, parts=len(job.plan)) if using is None else nullcontext(using)
     with context as ready:
         for done in results(job, missing, ready):
             parts.put(done.number, done.data)
@@ -131,7 +131,7 @@ def sweep_tables(
     names = ["family", *(p.column for p in first.parameters), *columns_of(first.kind)]
 
     def tables() -> Iterator[pa.Table]:
-        for done in results(Job(plan.brief, 1), range(len(plan)), using, in_order=True):
+        for done in results(Job(plan, 1), range(len(plan)), using, in_order=True):
             yield decoded(done.data).select(names)
             if progress is not None:
                 progress(done.rows)

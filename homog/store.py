@@ -185,6 +185,10 @@ class Folder:
             found.append(int(path.stem.split("-")[1]))
         return [number for number in found if number < self.parts]
 
+    def missing(self) -> int:
+        """Return how many parts are not there yet."""
+        return self.parts - len(self.done())
+
     def put(self, number: int, data: bytes) -> None:
         path = self.path(number)
         temporary = path.with_suffix(".tmp")
@@ -232,17 +236,8 @@ def table_writer(path: Path, whole: pa.Schema, suffix: str) -> Iterator[Any]:
             yield writer.write_table
 
 
-def write_tables(tables: Iterable[pa.Table], whole: pa.Schema, path: Path, *, overwrite: bool = False) -> int:
-    """Write tables one after the other into one file, CSV or Parquet by its suffix, whole or not at all.
-
-    Returns
-    -------
-    int
-        How many rows were written.
-    """
-    rows = 0
-    with whole_file(path, overwrite=overwrite) as temporary, table_writer(temporary, whole, path.suffix) as append:
+def write_tables(tables: Iterable[pa.Table], whole: pa.Schema, path: Path) -> None:
+    """Write tables one after the other into one file, CSV or Parquet by its suffix."""
+    with table_writer(path, whole, path.suffix) as append:
         for table in tables:
             append(table)
-            rows += len(table)
-    return rows

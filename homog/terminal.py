@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import os
 import shutil
 import sys
 import time
@@ -18,6 +17,8 @@ if TYPE_CHECKING:
 
 LARGE = 1_000_000
 """Candidates from which an estimate of time and room is told."""
+TELL_AFTER = 10.0
+"""Seconds that a rate is measured for before anything is estimated from it."""
 TELL_EVERY = 60.0
 """Seconds between lines of progress where there is no terminal."""
 
@@ -31,16 +32,14 @@ class Stopped(Exception):  # noqa: N818, being told to stop is no error
 
 
 @contextmanager
-def kept(out: Path) -> Iterator[None]:
-    """Say what a run leaves, and how to go on with it, if it is stopped or fails."""
-    from homog.files import partial
+def kept(place: Path) -> Iterator[None]:
+    """Say what a run leaves in its place, and how to go on with it, if it is stopped or fails."""
     from homog.store import has_parts
 
     def words(why: str) -> str:
-        place = partial(Path(os.path.abspath(out)))
-        if not has_parts(place):
-            return f"{why}; nothing was written" if why == "stopped" else why
-        return f"{why}; what is done is kept in '{place}': give the same command with --resume to go on"
+        if has_parts(place):
+            return f"{why}; what is done is kept in '{place}': give the same command with --resume to go on"
+        return f"{why}; nothing was written" if why == "stopped" else why
 
     try:
         yield
@@ -49,8 +48,6 @@ def kept(out: Path) -> Iterator[None]:
     except SystemExit as stop:
         raise Stopped(words("stopped"), int(stop.code or 0)) from None
     except HomogError as error:
-        if "--resume" in str(error):
-            raise
         raise HomogError(words(str(error))) from error
     except Exception as error:
         error.add_note(words("The run has failed"))
@@ -75,7 +72,7 @@ def progress(
 
     def estimate(say: Callable[[str], None]) -> None:
         nonlocal estimated
-        if estimated or parts is None or time.monotonic() - started < 5.0 or not fresh:
+        if estimated or parts is None or time.monotonic() - started < TELL_AFTER or not fresh:
             return
         estimated = True
         size, free = parts.size() * total / done, shutil.disk_usage(parts.place).free
@@ -84,10 +81,13 @@ def progress(
             f"({free / 1e9:.0f} GB free); Ctrl-C stops, --resume goes on")  # fmt: skip
 
     def count(number: int) -> None:
-        nonlocal done, fresh, there
+        nonlocal done, fresh, there, started, told
         done += number
-        fresh += number * (there <= 0)  # what was read and not computed tells nothing about the time left
-        there -= 1
+        if there >= 0:  # what was read and not computed, and the first, which waited for workers, tell no rate
+            there -= 1
+            started = told = time.monotonic()
+        else:
+            fresh += number
 
     if not sys.stderr.isatty():
 

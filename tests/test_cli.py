@@ -16,7 +16,7 @@ import pytest
 from samples import case_name, cases
 
 import homog
-from homog import cli, plots, report, screening
+from homog import cli, engine, files, plots, report, terminal
 from homog.cell import STRAINS
 from homog.cli import main
 from homog.columns import COLUMNS, columns_of
@@ -130,7 +130,7 @@ BAD = {
     "sweep octet length=2:1:3 --out x.csv": "an empty range, 2 is above 1; swap them",
     "sweep octet length=1:nan:3 --out x.csv": "is not finite",
     "sweep octet length=1:5000:3 --out x.csv": "outside its range for 'octet'",
-    "sweep octet length=1:2:2000 diameter=0.1:0.2:2000 --out x.csv": "4,000,000 combinations; at most",
+    "sweep octet length=1:2:40000 diameter=0.1:0.2:40000 --out x.csv": "1,600,000,000 combinations; at most",
     "sweep anti-tetrachiral node=rigid,round --out x.csv": "Parameter 'node' = 'round'",
     # places
     "polar octet": "Missing option '--out'; try 'homog polar --help'",
@@ -411,11 +411,22 @@ def test_a_sweep_keeps_impossible_cells_as_rejects(place, capsys):
     assert table["E1_MPa"].isna().tolist() == [True, False, False, False] and table["reasons"][0] == "tips-collide"
 
 
-def test_the_size_of_a_chunk_changes_no_sweep(place, capsys, monkeypatch):
+def parts_of(rows, monkeypatch):
+    monkeypatch.setattr(engine, "LEAST_ROWS", rows)
+    monkeypatch.setattr(engine, "MOST_ROWS", rows)
+
+
+def test_neither_the_size_of_a_part_nor_workers_nor_the_format_change_a_sweep(place, capsys, monkeypatch):
     run("sweep square-grid thickness=0.1:2:11 --out a.csv", capsys)
-    monkeypatch.setattr(screening, "CHUNK", 4)
+    parts_of(4, monkeypatch)
     run("sweep square-grid thickness=0.1:2:11 --out b.csv", capsys)
-    pd.testing.assert_frame_equal(pd.read_csv("a.csv"), pd.read_csv("b.csv"), rtol=1e-6)
+    assert run("sweep square-grid thickness=0.1:2:11 --out c.parquet --workers 2", capsys)[0] == 0
+    one, other, exact = pd.read_csv("a.csv"), pd.read_csv("b.csv"), pd.read_parquet("c.parquet")
+    pd.testing.assert_frame_equal(one, other, rtol=1e-6)
+    assert list(exact.columns) == list(one.columns)
+    np.testing.assert_allclose(exact["E1_MPa"], one["E1_MPa"], rtol=1e-7)
+    np.testing.assert_array_equal(exact["thickness_mm"], np.linspace(0.1, 2.0, 11))
+    assert strict((place / "c.meta.json").read_text())["rows"] == 11
 
 
 # ----------------------------------------------------------------------------------------- polar and screen
@@ -471,22 +482,95 @@ def test_a_title_is_plain_text_everywhere(place, capsys):
     assert (place / "x" / "summary.md").read_text().startswith(f"# {title}\n")
 
 
-@pytest.mark.parametrize(("stop", "status"), [(KeyboardInterrupt, 130), (RuntimeError("a bug"), 1)])
-@pytest.mark.parametrize("where", ["screening", "figures"])
-def test_stopped_in_the_middle_leaves_nothing(stop, status, where, place, capsys, monkeypatch):
+STOPS = [
+    (KeyboardInterrupt, 130),
+    (SystemExit(143), 143),
+    (RuntimeError("a bug"), 1),
+    (homog.InputError("bad luck"), 2),
+]
+
+
+@pytest.mark.parametrize(("stop", "status"), STOPS)
+def test_stopped_before_anything_is_done_leaves_nothing(stop, status, place, capsys, monkeypatch):
     def stopping(*args, **kwargs):
         raise stop
 
-    if where == "screening":
-        monkeypatch.setattr(screening, "rows", stopping)
-    else:
-        monkeypatch.setattr(plots, "polar_figure", stopping)
+    monkeypatch.setattr(engine, "rows", stopping)
     before = contents(place)
     found, out, err = run("screen b.toml --out deep/out", capsys)
     assert (found, out) == (status, "") and contents(place) == before
-    last = err.strip().splitlines()[-1]
-    assert last == ("homog: stopped; nothing was written" if status == 130 else
-                    "homog: internal fault: RuntimeError: a bug; please report it with the command")  # fmt: skip
+    assert err.strip().splitlines()[-1] == {
+        1: "homog: internal fault: RuntimeError: a bug; please report it with the command", 2: "homog: bad"
+    }.get(status, "homog: stopped; nothing was written")  # fmt: skip
+
+
+@pytest.mark.parametrize(("stop", "status"), STOPS)
+@pytest.mark.parametrize("where", ["screening", "figures"])
+@pytest.mark.parametrize("out", ["deep/out", "empty"])
+def test_stopped_in_the_middle_can_be_gone_on_with(stop, status, where, out, place, capsys, monkeypatch):
+    monkeypatch.setattr(plots, "save", lambda figure, path: path.write_text("figure"))
+    parts_of(1, monkeypatch)
+    before = contents(place)
+    real, done = engine.rows, []
+
+    def stopping(*args, **kwargs):
+        done.append(1)
+        if where == "figures" or len(done) == 2:
+            raise stop
+        return real(*args, **kwargs)
+
+    with monkeypatch.context() as stopped:
+        stopped.setattr(*((engine, "rows") if where == "screening" else (plots, "polar_figure")), stopping)
+        found, printed, err = run(f"screen b.toml --out {out}", capsys)
+    kept = place / (f"{out}.partial" if out == "deep/out" else "empty/.partial")
+    assert (found, printed) == (status, "")
+    assert f"what is done is kept in '{kept}': give the same command with --resume to go on" in err
+    assert len(list(kept.glob("candidates/*.parquet"))) == (1 if where == "screening" else 2)
+    found, printed, err = run(f"screen b.toml --out {out}", capsys)
+    assert found == 2 and "has stopped; go on with --resume, or remove '" in err and err.count("\n") == 1
+    (place / "other.toml").write_text(BRIEF + "# changed")
+    found, printed, err = run(f"screen other.toml --out {out} --resume", capsys)
+    assert found == 2 and "of another brief" in err and err.count("\n") == 1 and "same command" not in err
+    found, printed, err = run(f"screen b.toml --out {out} --resume", capsys)
+    assert (found, err) == (0, "") and printed.startswith("2 of 2 candidates meet the brief")
+    assert not kept.exists() and (place / out / "summary.md").exists()
+    assert len(pd.read_csv(place / out / "candidates.csv")) == 2
+    again = contents(place)
+    for more in ("", "--resume"):
+        assert run(f"screen b.toml --out {out} {more}", capsys)[0] == 2
+    assert contents(place) == again and before.items() <= again.items()
+
+
+def test_resume_without_a_run_to_go_on_with_begins_one(place, capsys, monkeypatch):
+    monkeypatch.setattr(plots, "save", lambda figure, path: path.write_text("figure"))
+    assert run("screen b.toml --out x --resume", capsys)[0] == 0 and (place / "x" / "summary.md").exists()
+
+
+def test_a_large_screen_writes_its_csv_only_if_asked(place, capsys, monkeypatch):
+    monkeypatch.setattr(plots, "save", lambda figure, path: path.write_text("figure"))
+    monkeypatch.setattr(report, "MOST_CSV", 1)
+    assert run("screen b.toml --out x", capsys)[0] == 0 and not (place / "x" / "candidates.csv").exists()
+    assert run("screen b.toml --out y --csv", capsys)[0] == 0 and len(pd.read_csv(place / "y" / "candidates.csv")) == 2
+    assert len(pd.read_parquet(place / "x" / "candidates")) == 2
+
+
+def test_a_long_run_in_a_pipe_tells_rate_room_and_time_left(place, capsys, monkeypatch):
+    monkeypatch.setattr(plots, "save", lambda figure, path: path.write_text("figure"))
+    parts_of(1, monkeypatch)
+    for name, value in (("LARGE", 2), ("TELL_AFTER", 0.0), ("TELL_EVERY", 0.0)):
+        monkeypatch.setattr(terminal, name, value)
+    status, _, err = run("screen b.toml --out x", capsys)
+    first, second = err.splitlines()
+    assert status == 0
+    assert re.fullmatch(r"homog: 2 candidates, in this process: about 0 s and 0\.0 GB \(\d+ GB free\); "
+                        "Ctrl-C stops, --resume goes on", first)  # fmt: skip
+    assert re.fullmatch(r"homog: screening: 2 of 2, [\d,]+ a second, 0 s left", second)
+
+
+@pytest.mark.parametrize(("seconds", "words"), [(0.4, "0 s"), (80, "80 s"), (100, "1.7 min"), (3000, "50 min"),
+                                                (7200, "2.0 h"), (90000, "25 h"), (10**6, "12 days")])  # fmt: skip
+def test_a_time_is_told_in_its_unit(seconds, words):
+    assert terminal._duration(seconds) == words
 
 
 def test_a_terminal_sees_progress(place, monkeypatch):
@@ -535,6 +619,6 @@ def test_being_told_to_stop_leaves_nothing(tmp_path, monkeypatch):
     assert ended.value.code == 0
     ((number, handler),) = told
     assert number == signal.SIGTERM
-    with pytest.raises(SystemExit) as ended, report.whole_folder(tmp_path / "x"):
+    with pytest.raises(SystemExit) as ended, files.whole_folder(tmp_path / "x"):
         handler(number, None)
     assert ended.value.code == 143 and list(tmp_path.iterdir()) == []

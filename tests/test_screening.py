@@ -1,7 +1,6 @@
 """The screen: who meets the brief, who misses what, the ranking against brute force, the same whatever the chunk."""
 
 import dataclasses
-import functools
 import math
 import re
 
@@ -12,10 +11,12 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 import homog
-from homog import screening
+from homog import engine, screening
 from homog.brief import Goal, parse_brief
+from homog.engine import Plan
+from homog.ranking import NEAREST, pareto, shortlist
 from homog.report import rebuilt
-from homog.screening import NEAREST, chunks, pareto, run_screen, shortlist
+from homog.screening import run_screen
 
 GRID = """
 material = {{ modulus_MPa = 1000.0, poisson = 0.3, density_kg_m3 = 1000.0 }}
@@ -134,10 +135,11 @@ def test_a_mix_of_kinds_is_one_table():
 
 
 @pytest.mark.parametrize("size", [1, 2, 7, 34, 35, 10_000])
-def test_the_size_of_a_chunk_changes_nothing(size, monkeypatch):
+def test_the_size_of_a_part_changes_nothing(size, monkeypatch):
     brief = parse_brief(MIXED)
     expected = run_screen(brief)
-    monkeypatch.setattr(screening, "chunks", functools.partial(chunks, size=size))
+    monkeypatch.setattr(engine, "LEAST_ROWS", size)
+    monkeypatch.setattr(engine, "MOST_ROWS", size)
     counts = []
     found = run_screen(brief, progress=counts.append)
     assert sum(counts) == 78 and max(counts) <= size
@@ -152,12 +154,13 @@ def test_the_size_of_a_chunk_changes_nothing(size, monkeypatch):
     assert [dataclasses.astuple(f) for f in found.falls] == [dataclasses.astuple(f) for f in expected.falls]
 
 
-def test_chunks_are_numbered_through():
-    brief = parse_brief(MIXED)
-    numbers = [(number, len(next(v for v in given.values() if not isinstance(v, str))))
-               for number, _, given in chunks(brief, 10)]  # fmt: skip
-    assert [number for number, _ in numbers] == [1, 11, 21, 31, 36, 46, 53, 63, 70, 76]
-    assert sum(count for _, count in numbers) == 78
+def test_parts_are_numbered_through(monkeypatch):
+    monkeypatch.setattr(engine, "LEAST_ROWS", 10)
+    monkeypatch.setattr(engine, "MOST_ROWS", 10)
+    parts = list(Plan(parse_brief(MIXED)))
+    assert [part.first for part in parts] == [1, 11, 21, 31, 36, 46, 53, 63, 70, 76]
+    assert sum(part.stop - part.start for part in parts) == 78
+    assert [part.source.family.id for part in parts[3:5]] == ["reentrant-honeycomb", "anti-tetrachiral"]
 
 
 def test_a_row_makes_its_cell_again():
