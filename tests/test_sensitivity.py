@@ -11,7 +11,7 @@ from samples import case_name, cases, numeric, possible, repeated, with_props
 
 from homog import columns, gradient
 from homog.cell import Block
-from homog.columns import COLUMNS, Results, columns_of, evaluate
+from homog.columns import COLUMNS, columns_of, evaluate
 from homog.directional import plane_extremes, poisson
 from homog.effective import Flag, homogenize
 from homog.errors import InputError
@@ -19,6 +19,7 @@ from homog.families import FAMILIES, build
 from homog.gradient import _walls, sizes, tensor_rates, wall_rates
 from homog.joints import applies
 from homog.materials import UNIT, material
+from homog.results import Results
 from homog.sensitivity import column_rates, elasticities, sensitivities, smooth_columns
 
 SEED = 90217

@@ -16,12 +16,13 @@ from samples import case_name, cases, possible, random_cell, with_props
 from homog import columns, stress
 from homog.assembly import freedoms
 from homog.cell import STRAINS, Block, Status, UnitCell
-from homog.columns import COLUMNS, Results, evaluate
+from homog.columns import COLUMNS, evaluate
 from homog.effective import DENSE_LIMIT, homogenize
 from homog.errors import InputError
 from homog.families import build
 from homog.joints import applies
 from homog.materials import UNIT, Material, material
+from homog.results import Results
 from homog.stress import ARC_SECTIONS, BEAMS, member_forces, sections, unit_stresses
 from homog.tensors import basis, mandel_rotation, rotation
 
