@@ -27,7 +27,6 @@ ORDER = [
     "report",
     "__init__",
     *("terminal", "cli"),
-    "cli_tune",
     "__main__",
 ]
 
@@ -43,10 +42,9 @@ NEVER = {
 # (importer, imported): reason. Only lazily.
 ALLOWED = {
     ("effective", "columns"): "Effective.table is the data model's door to the columns",
-    ("cli", "cli_tune"): "its commands register themselves when the command line runs",
 }
 
-MAY_PRINT = {"cli", "cli_tune", "terminal", "__main__"}
+MAY_PRINT = {"cli", "terminal", "__main__"}
 MAY_DRAW = {"plots"}
 PRINTING = {"rich", "typer", "click", "argparse"}
 MOST_LINES = 500

@@ -13,7 +13,7 @@ import numpy as np
 import pytest
 from samples import case_name, cases, possible, random_cell, with_props
 
-from homog import columns, stress
+from homog import results, stress
 from homog.assembly import freedoms
 from homog.cell import STRAINS, Block, Status, UnitCell
 from homog.columns import COLUMNS, evaluate
@@ -415,7 +415,7 @@ def test_nothing_is_solved_again_unless_asked_for(monkeypatch):
     def never(effective):
         raise AssertionError("sections were asked for")
 
-    monkeypatch.setattr(columns, "sections", never)
+    monkeypatch.setattr(results, "sections", never)
     found = homogenize(build("kagome-grid", material=PLA), model="timoshenko")
     evaluate(found, [name for name in COLUMNS if name not in YIELDS])
     assert np.isnan(Results(homogenize(build("kagome-grid"), model="timoshenko")).yields).all()  # no yield, no solve

@@ -11,9 +11,8 @@ from hypothesis import strategies as st
 from scipy.optimize import brentq
 
 import homog
-from homog import cli_tune
 from homog.brief import Limit
-from homog.cli import main
+from homog.cli import design, main
 from homog.columns import evaluate
 from homog.effective import homogenize
 from homog.errors import InputError
@@ -375,7 +374,7 @@ def test_the_sensitivity_command_shows_what_the_library_finds(capsys):
 
 def test_the_commands_show_their_progress(monkeypatch, capsys):
     told = []
-    monkeypatch.setattr(cli_tune, "teller", lambda: told.append)
+    monkeypatch.setattr(design, "teller", lambda: told.append)
     assert main(shlex.split("tune square-grid --target E1_MPa=0.05 --starts 4 --model euler")) == 0
     capsys.readouterr()
     assert told[0] == "step 0: 4 searches" and told[-1] == ""

@@ -11,7 +11,7 @@ from typing import TYPE_CHECKING, Annotated, Any
 import typer
 
 from homog import __version__
-from homog.cli import (
+from homog.cli.options import (
     Assignments,
     Deep,
     FamilyId,
@@ -21,12 +21,12 @@ from homog.cli import (
     Overwrite,
     Poisson,
     SolidDensity,
-    _console,
-    _number,
-    _one,
-    _parent,
-    _table,
     app,
+    console_,
+    number_of,
+    one_cell,
+    parent_of,
+    table_,
 )
 from homog.errors import InputError
 from homog.terminal import teller
@@ -72,9 +72,9 @@ def sensitivity(
     from homog.report import WHAT_IT_IS, number, plain
     from homog.sensitivity import column_rates, elasticities, smooth_columns
 
-    found, parent = family(id), _parent(material, modulus, poisson, solid_density, deep)
+    found, parent = family(id), parent_of(material, modulus, poisson, solid_density, deep)
     names = [known(name).name for name in column] if column else smooth_columns(found.kind)
-    effective = _one(id, parameters, parent, model)
+    effective = one_cell(id, parameters, parent, model)
     values = evaluate(effective, names)
     rates = column_rates(effective, names)
     rates_now = np.stack([rates[name] for name in names])
@@ -90,12 +90,12 @@ def sensitivity(
         print(json.dumps({"family": id, "parameters": now, "material": parent.name, "model": effective.model,
                           "relative": relative, "columns": entries}, indent=2, allow_nan=False))  # fmt: skip
         return 0
-    console = _console()
+    console = console_()
     console.print(f"{found.title}  ({id}), model {effective.model}", style="bold")
     now_words = (f"{p} {effective.cell.parameters[p].reshape(-1)[0]:g} {found.parameter(p).unit}" for p in by)
     console.print(", ".join(now_words))
     heads = [f"{p} {'%/%' if relative else f'per {found.parameter(p).unit}'}" for p in by]
-    table = _table("quantity", "value", *heads, numeric=("value", *heads))
+    table = table_("quantity", "value", *heads, numeric=("value", *heads))
     for name, row in zip(names, rates_now[..., 0], strict=True):
         value = str(values[name][0]) if COLUMNS[name].text else number(values[name][0])
         if column or not np.isnan(row).all():
@@ -167,11 +167,11 @@ def tune(
 
     if out is not None:
         check_table(out, overwrite=overwrite)
-    found, parent = family(id), _parent(material, modulus, poisson, solid_density, deep)
+    found, parent = family(id), parent_of(material, modulus, poisson, solid_density, deep)
     made_by = named(process) if process is not None else Process("given limits")
     for key, option, text in (("min_wall_mm", "--min-wall", min_wall), ("max_cell_mm", "--max-cell", max_cell)):
         if text is not None:
-            made_by = made_by.replaced(**{key: _number(text, f"Option {option}", "give one number of mm")})
+            made_by = made_by.replaced(**{key: number_of(text, f"Option {option}", "give one number of mm")})
     column, _, better = rank.partition("=")
     tell = teller()
     result = search(
@@ -211,7 +211,7 @@ def _range(what: str, text: str) -> tuple[float | None, float | None]:
     """Return LOW:HIGH, LOW: or :HIGH as two numbers, None for an open end."""
     low, _, high = text.partition(":")
     remedy = "write LOW:HIGH, LOW: or :HIGH"
-    ends = tuple(_number(end, what, remedy) if end.strip() else None for end in (low, high))
+    ends = tuple(number_of(end, what, remedy) if end.strip() else None for end in (low, high))
     return ends[0], ends[1]
 
 
@@ -219,7 +219,7 @@ def _targets(given: Sequence[str]) -> dict[str, Asked]:
     out: dict[str, Asked] = {}
     for name, text in _pairs("--target", given, "COLUMN=VALUE, COLUMN=LOW:HIGH, COLUMN=LOW: or COLUMN=:HIGH").items():
         what = f"Target '{name}'"
-        out[name] = _range(what, text) if ":" in text else _number(text, what, "give a value, or LOW:HIGH")
+        out[name] = _range(what, text) if ":" in text else number_of(text, what, "give a value, or LOW:HIGH")
     return out
 
 
@@ -234,7 +234,7 @@ def _limits(given: Sequence[str]) -> dict[str, Asked]:
         pair = ends.setdefault(name, [None, None])
         if pair[side] is not None:
             raise InputError(f"--limit on '{name}' is given twice with '{sign}'; give it once")
-        pair[side] = _number(text, f"Limit on '{name}'", "give one number")
+        pair[side] = number_of(text, f"Limit on '{name}'", "give one number")
     return {name: (low, high) for name, (low, high) in ends.items()}
 
 
@@ -244,7 +244,7 @@ def _fixed(found: Family, given: Sequence[str]) -> dict[str, Any]:
         if found.parameter(name).choices:
             out[name] = text
         else:
-            out[name] = _number(text, f"Parameter '{name}'", "give one value; --within takes a range")
+            out[name] = number_of(text, f"Parameter '{name}'", "give one value; --within takes a range")
     return out
 
 
@@ -296,7 +296,7 @@ def _show(result: Tuning) -> None:
     from homog.screening import records
     from homog.tuning import DISTINCT
 
-    problem, console = result.problem, _console()
+    problem, console = result.problem, console_()
     console.print(f"{problem.family.title}  ({problem.family.id}), {problem.material.name}, model {problem.model}",
                   style="bold")  # fmt: skip
     console.print("asked: " + "; ".join(f"{words(one)} ({one.origin})" for one in problem.limits))
@@ -317,7 +317,7 @@ def _show(result: Tuning) -> None:
     columns = list(dict.fromkeys([*(one.column for one in problem.limits), *(g.column for g in problem.goals), *MAIN]))
     columns = [name for name in columns if name != "thinnest_mm"]  # the thicknesses stand beside it
     heads = [*(f"{_head(name)}\n{problem.family.parameter(name).unit}" for name in names), *map(_head, columns)]
-    table = _table("", *heads, "cautions", numeric=heads)
+    table = table_("", *heads, "cautions", numeric=heads)
     for i, row in enumerate(records(shown), 1):
         values = [number(row[problem.family.parameter(name).column]) for name in names]
         table.add_row(str(i), *values, *(number(row[name]) for name in columns), row["reasons"])
