@@ -212,6 +212,14 @@ def dense(cell: UnitCell, model: str, out: Array | None = None) -> Array:
     return M
 
 
+def energy_parts(cell: UnitCell, model: str) -> tuple[Array, Array, Array]:
+    """Return K (b, N, N), F (b, N, v) and D (b, v, v) of every member of a flat batch, whole and symmetric."""
+    count = freedoms(cell).count
+    M = np.moveaxis(dense(cell, model), -1, 0)
+    M = np.triu(M) + np.swapaxes(np.triu(M, 1), -1, -2)
+    return M[:, :count, :count], M[:, :count, count:], M[:, count:, count:]
+
+
 def _strains(rows: Array) -> tuple[tuple[tuple[int, int], ...], ...]:
     """Return first and end of the strains that each freedom of rows (s, k, f, m, b) moves in any element and member."""
     s, k, f = rows.shape[:3]

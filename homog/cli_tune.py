@@ -303,13 +303,15 @@ def _show(result: Tuning) -> None:
     shown = result.found if len(result.found) else result.nearest
     names = [v.name for v in problem.variables]
     fixed = [f"{name} {value if isinstance(value, str) else f'{value:g}'}" for name, value in problem.fixed.items()]
-    tied = [f"{name} as {v.name}" for v in problem.variables for name in v.move if name != v.name]
+    tied = [f"{p.name} as {p.default}" for p in problem.family.parameters
+            if isinstance(p.default, str) and not p.choices and p.name not in {*names, *problem.fixed}]  # fmt: skip
     if fixed or tied:
         console.print("held: " + ", ".join([*fixed, *tied]))
     if len(result.found):
         first = "smallest" if problem.goals[0].better == "min" else "largest"
-        console.print(f"{result.met} of {result.starts} searches met everything; {len(shown)} shapes that differ by "
-                      f"over {DISTINCT:.0%}, {first} {problem.goals[0].column} first:")  # fmt: skip
+        count = f"{len(shown)} different shapes (by over {DISTINCT:.0%})" if len(shown) > 1 else "all of one shape"
+        console.print(f"{result.met} of {result.starts} searches met everything, {count}; {first} "
+                      f"{problem.goals[0].column} first:")  # fmt: skip
     else:
         console.print(f"None of {result.starts} searches met everything. The nearest:")
     columns = list(dict.fromkeys([*(one.column for one in problem.limits), *(g.column for g in problem.goals), *MAIN]))

@@ -37,10 +37,11 @@ from threadpoolctl import threadpool_limits
 from homog.assembly import freedoms, strain_count
 from homog.brief import Brief
 from homog.candidates import Candidates
-from homog.columns import Words, listed, quantities
+from homog.columns import quantities
 from homog.effective import DENSE_LIMIT, homogenize
 from homog.errors import HomogError, InputError, MissingExtra
 from homog.ranking import Digest, digest
+from homog.results import Words, listed
 from homog.store import SCHEMA, encoded, schema, sha256, tabled
 from homog.version import __version__
 

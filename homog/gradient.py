@@ -24,7 +24,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from homog.assembly import dense, freedoms, strained_blocks
+from homog.assembly import energy_parts, freedoms, strained_blocks
 from homog.cell import Status, UnitCell
 from homog.effective import RANK_TOLERANCE, Effective, homogenize
 from homog.errors import InputError
@@ -131,10 +131,9 @@ def held(effective: Effective, index: Index) -> Held:
     cell = whole.at(np.unravel_index(index, whole.shape)) if whole.shape else whole.at(None)
     joined, outside = _jointed(cell, effective.model)
     count = freedoms(joined).count
-    M = np.moveaxis(dense(joined, effective.model), -1, 0)
-    K = np.tril(M[:, :count, :count]) + np.swapaxes(np.tril(M[:, :count, :count], -1), -1, -2)
-    F = np.swapaxes(M[:, count:, :count], -1, -2) @ np.swapaxes(back, -1, -2)
-    u = np.zeros((len(M), count + 1, v))
+    K, F, _ = energy_parts(joined, effective.model)
+    F = F @ np.swapaxes(back, -1, -2)
+    u = np.zeros((len(K), count + 1, v))
     loose = effective.mechanisms.reshape(-1)[index] > 0
     u[~loose, :count] = -np.linalg.solve(K[~loose], F[~loose])
     if loose.any():  # the smallest of the motions that relax it
@@ -190,17 +189,25 @@ def tensor_rates(effective: Effective, moves: Sequence[Move]) -> tuple[Array, Ar
     for start in range(0, len(good), size):
         index = good[start : start + size]
         still = held(effective, index)
-        h = STEP * sizes(FAMILIES[effective.cell.family], parameters_of(effective.cell, index), moves)
-        near = moved(effective.cell, index, moves, STENCIL[0][:, None] * h[:, None])
-        joined, missed = _jointed(near, effective.model)
-        total = sum(energy.sum(axis=2) for _, _, energy in energies(joined, effective.model, still))
-        total = (total / near.volume.reshape(-1, len(index))).reshape(v, v, len(moves), -1, len(index))
-        G = np.moveaxis(np.einsum("vwqkb,k->vwqb", total, STENCIL[1]) / h, (2, 3), (0, 1))
-        crossed = (missed.reshape(len(moves), -1, len(index)) != still.outside).any(axis=1)
-        G = np.where(crossed[..., None, None], np.nan, G)
+        # a batch takes one table for all its joints, and equal walls have a table of their own
+        parts = [[move] for move in moves] if effective.model == "joint" else [moves]
+        G = np.concatenate([_relative_rates(effective, index, still, part) for part in parts])
         dC[:, index] = still.L @ G @ np.swapaxes(still.L, -1, -2)
         dS[:, index] = -np.swapaxes(still.back, -1, -2) @ G @ still.back
     return dC, dS
+
+
+def _relative_rates(effective: Effective, index: Index, still: Held, moves: Sequence[Move]) -> Array:
+    """L^-1 dC L^-T (q, b, v, v) of some members, whose relaxed motions are held, along each move."""
+    cell, model, v = effective.cell, effective.model, still.L.shape[-1]
+    h = STEP * sizes(FAMILIES[cell.family], parameters_of(cell, index), moves)
+    near = moved(cell, index, moves, STENCIL[0][:, None] * h[:, None])
+    joined, missed = _jointed(near, model)
+    total = sum(energy.sum(axis=2) for _, _, energy in energies(joined, model, still))
+    total = (total / near.volume.reshape(-1, len(index))).reshape(v, v, len(moves), -1, len(index))
+    rates = np.moveaxis(np.einsum("vwqkb,k->vwqb", total, STENCIL[1]) / h, (2, 3), (0, 1))
+    crossed = (missed.reshape(len(moves), -1, len(index)) != still.outside).any(axis=1)
+    return np.where(crossed[..., None, None], np.nan, rates)
 
 
 def check_differentiable(effective: Effective) -> None:

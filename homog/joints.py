@@ -18,7 +18,7 @@ from __future__ import annotations
 import dataclasses
 import functools
 import itertools
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from importlib import resources
 from typing import Any, NamedTuple
@@ -91,6 +91,10 @@ def _gap(coordinate: Any) -> Any:
     return 2.0 * np.arctan(np.exp(coordinate))
 
 
+def _forked(gap: Any) -> list[Any]:
+    return [gap, TURN - 2.0 * gap, gap]
+
+
 def _span(low_deg: float, high_deg: float) -> tuple[float, float]:
     return float(_open(np.radians(low_deg))), float(_open(np.radians(high_deg)))
 
@@ -103,7 +107,7 @@ TURN = 2.0 * np.pi
 SHAPES = (
     # a stem (wall 0) between two arms, all equal: honeycombs
     Shape("even-fork", 3, ((FORK[0], 0.0, FORK[1]),), ((20, 24),),
-          lambda u: [_gap(u[0]), TURN - 2.0 * _gap(u[0]), _gap(u[0])],
+          lambda u: _forked(_gap(u[0])),
           lambda u: [1.0 + 0.0 * u[0]] * 3, lambda g, t: [_open(g[0])]),
     # a stem of twice the arms' thickness; the corners pass its round end at 120 and 150 degrees
     Shape("double-fork", 3, ((FORK[0], 0.0, *_span(120.0, 150.0), FORK[1]),), ((16, 12, 12, 16),),
@@ -111,7 +115,7 @@ SHAPES = (
           lambda u: [1.0 + 0.0 * u[0], 0.5 + 0.0 * u[0], 0.5 + 0.0 * u[0]], lambda g, t: [_open(g[0])]),
     # a stem (wall 0) of another thickness between two equal arms
     Shape("fork", 3, ((FORK[0], 0.0, FORK[1]), (-RATIO, 0.0, RATIO)), ((14, 16), (8, 8)),
-          lambda u: [_gap(u[0]), TURN - 2.0 * _gap(u[0]), _gap(u[0])],
+          lambda u: _forked(_gap(u[0])),
           lambda u: [1.0 + 0.0 * u[1], np.exp(u[1]), np.exp(u[1])],
           lambda g, t: [_open(g[0]), np.log(t[1] / t[0])]),
     # two straight walls that cross: square, kagome
@@ -315,10 +319,7 @@ def with_joints(cell: UnitCell) -> tuple[UnitCell, Mask, Array]:
     blocks, (members,) = [block for block in cell.blocks if len(block)], cell.shape
     ends_of, shifts_of = (np.concatenate([getattr(b, name) for b in blocks]) for name in ("nodes", "shifts"))
     m = len(ends_of)
-    t, E, nu = (
-        np.concatenate([np.broadcast_to(b.props[name], (members, len(b))) for b in blocks], axis=1).T
-        for name in PLAIN_WALL
-    )
+    t, E, nu = (_by_wall([b.props[name] for b in blocks], [len(b) for b in blocks]) for name in PLAIN_WALL)
     points, lattice = (np.ascontiguousarray(np.moveaxis(x, (-1, -2), (0, 1))) for x in (cell.points, cell.lattice))
     reach = np.einsum("mkp,dpb->dkmb", shifts_of.astype(float), lattice)
     home = points[:, ends_of[:, 0]] + reach[:, 0]
@@ -351,7 +352,8 @@ def with_joints(cell: UnitCell) -> tuple[UnitCell, Mask, Array]:
         if joint is None:
             joint = _joint(given, units[:, walls] * np.where(ends == 0, 1.0, -1.0)[:, None])
             known.append(joint)
-        np.subtract.at(plain, walls, joint.cut)
+        for wall, cut in zip(walls, joint.cut, strict=True):  # both ends of a wall may meet here
+            plain[wall] -= cut
         outside |= joint.outside
         walls, ends = walls[joint.order], ends[joint.order]
         shifts = -shifts_of[walls, ends]  # of the wall's middle, seen from this end
@@ -369,6 +371,14 @@ def with_joints(cell: UnitCell) -> tuple[UnitCell, Mask, Array]:
         ),
     )  # fmt: skip
     return joined, outside, np.asarray((plain / t).min(axis=0))
+
+
+def _by_wall(values: Sequence[Array], lengths: Sequence[int]) -> Array:
+    """Return a property (..., m) of several blocks, wall by wall: (m, b), or (m, 1) where all members share it."""
+    shared = all(value.ndim == 1 or value.strides[0] == 0 for value in values)
+    rows = [value[None] if value.ndim == 1 else value[:1] if shared else value for value in values]
+    members = max(len(row) for row in rows)
+    return np.concatenate([np.broadcast_to(r, (members, n)).T for r, n in zip(rows, lengths, strict=True)])
 
 
 class _Joint(NamedTuple):
@@ -395,6 +405,7 @@ def _joint(given: tuple[Array, ...], units: Array) -> _Joint:
         for i in range(1, len(l)):
             along, across = turned[3 * i - 3], turned[3 * i - 2]
             turned[3 * i - 3], turned[3 * i - 2] = c[i] * along - s[i] * across, s[i] * along + c[i] * across
+    W = (W + W.swapaxes(0, 1)) / 2.0  # round-off of the stretch counts beside the bending
     return _Joint(given, order, W, _swallowed(gaps, t), outside)
 
 

@@ -17,12 +17,13 @@ import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from homog.cell import Kind
-from homog.columns import COLUMNS, Results, column, columns_of, evaluate
+from homog.columns import COLUMNS, column, columns_of, evaluate
 from homog.effective import DEFAULT_MODEL, Effective, homogenize
 from homog.families import FAMILIES, family
 from homog.gradient import Move, check_differentiable, moved, numeric, parameters_of, sizes, sound, tensor_rates
 from homog.materials import UNIT, Material
 from homog.materials import material as named_material
+from homog.results import Results
 
 if TYPE_CHECKING:
     import pandas as pd

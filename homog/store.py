@@ -22,9 +22,10 @@ import pyarrow.csv
 import pyarrow.parquet as pq
 
 from homog.brief import Brief
-from homog.columns import COLUMNS, Words, columns_of
+from homog.columns import COLUMNS, columns_of
 from homog.errors import InputError
 from homog.files import whole_file, writing
+from homog.results import Words
 
 if TYPE_CHECKING:
     import pandas as pd

@@ -27,7 +27,7 @@ from typing import Any, NamedTuple
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
-from homog.assembly import Strained, dense, freedoms, sparse, strained_blocks
+from homog.assembly import Strained, energy_parts, freedoms, sparse, strained_blocks
 from homog.cell import Block, Status, UnitCell
 from homog.effective import CHUNK_ROWS, DENSE_LIMIT, RANK_TOLERANCE, SPARSE_SHIFT, Effective, homogenize
 from homog.errors import InputError
@@ -183,10 +183,8 @@ def _motion(cell: UnitCell, model: str, compliance: Array, mechanisms: NDArray[n
         for i in range(members):
             u[i, :-1] = _solved_sparse(cell.at(i), model, compliance[i])
     elif count:
-        M = np.moveaxis(dense(cell, model), -1, 0)
-        K = np.tril(M[:, :count, :count])
-        K += np.swapaxes(np.tril(K, -1), -1, -2)
-        right = np.swapaxes(M[:, count:, :count], -1, -2) @ compliance
+        K, F, _ = energy_parts(cell, model)
+        right = F @ compliance
         sure = mechanisms == 0
         u[sure, :-1] = -np.linalg.solve(K[sure], right[sure])
         for i in np.flatnonzero(~sure).tolist():

@@ -9,12 +9,13 @@ from samples import case_name, cases, possible
 
 import homog
 from homog.cell import Block, Status, UnitCell
-from homog.columns import COLUMNS, column, columns_of, evaluate, listed, table
+from homog.columns import COLUMNS, column, columns_of, evaluate, table
 from homog.effective import Effective
 from homog.errors import InputError
 from homog.families import FAMILIES, build, family
 from homog.materials import UNIT, Material, material
 from homog.reasons import REASONS, reason_level, reason_text
+from homog.results import listed
 from homog.tensors import isotropic, orthotropic, stiffness_to_voigt
 
 PLA = material("PLA")

@@ -19,7 +19,7 @@ ORDER = [
     *("families", "assembly", "reference"),
     *("effective", "stress", "gradient"),
     *("directional", "bounds", "bands"),
-    *("reasons", "columns"),
+    *("reasons", "results", "columns"),
     *("candidates", "brief"),
     *("store", "ranking", "engine", "screening", "recheck"),
     *("sensitivity", "problem", "tuning"),

@@ -328,7 +328,7 @@ def test_the_plane_of_a_lattice_in_space_is_its_own():
     C = tensors.isotropic(3.0, 0.2, d=3)
     S = np.linalg.inv(C)
     S[2, 2] /= 2.0
-    from homog.columns import Results
+    from homog.results import Results
 
     panels = _space_panels(Results(dataclasses.replace(cell, stiffness=np.linalg.inv(S))))
     assert panels[1].curves[0] == pytest.approx(3.0, rel=1e-9) and panels[1].curves[1].max() > 3.1

@@ -11,7 +11,7 @@ from samples import case_name, cases, numeric, possible, repeated, with_props
 
 from homog import columns, gradient
 from homog.cell import Block
-from homog.columns import COLUMNS, Results, columns_of, evaluate
+from homog.columns import COLUMNS, columns_of, evaluate
 from homog.directional import plane_extremes, poisson
 from homog.effective import Flag, homogenize
 from homog.errors import InputError
@@ -19,6 +19,7 @@ from homog.families import FAMILIES, build
 from homog.gradient import _walls, sizes, tensor_rates, wall_rates
 from homog.joints import applies
 from homog.materials import UNIT, material
+from homog.results import Results
 from homog.sensitivity import column_rates, elasticities, sensitivities, smooth_columns
 
 SEED = 90217
@@ -118,6 +119,14 @@ def test_a_batch_is_a_loop(case, model):
             np.testing.assert_allclose(alone[name][:, 0], whole[name][:, i], rtol=1e-6, atol=1e-9)
 
 
+def test_equal_walls_stay_in_their_own_table():
+    """One move's joints are looked up without the others': equal walls that turn are no unequal ones."""
+    effective = homogenize(build("reentrant-honeycomb", angle=-20.0, thickness=1.0))
+    together, _ = tensor_rates(effective, [{"angle": 1.0}, {"thickness": 1.0}])
+    alone, _ = tensor_rates(effective, [{"angle": 1.0}])
+    np.testing.assert_array_equal(together[0], alone[0])
+
+
 def test_at_the_edge_of_a_joint_table_there_is_no_derivative():
     # the narrowest gap of a fork's table is 9 deg: inclined walls that leave the stem at 81 deg from the horizontal
     values = {"angle": [-80.0, -80.98, -81.5], "thickness": 0.1, "inclined": 10.0, "vertical": 40.0}
@@ -151,7 +160,9 @@ def test_a_cell_that_grows_as_a_whole_stays_as_stiff(case, model):
 @given(angle=st.floats(-60.0, -12.0), thickness=st.floats(0.2, 1.0), vertical=st.floats(25.0, 60.0))
 @settings(max_examples=15, deadline=None)
 def test_moves_add_up(angle, thickness, vertical):
-    effective = homogenize(build("reentrant-honeycomb", angle=angle, thickness=thickness, vertical=vertical))
+    # not with condensed joints, where walls of equal and of unequal thickness have tables of their own
+    cell = build("reentrant-honeycomb", angle=angle, thickness=thickness, vertical=vertical)
+    effective = homogenize(cell, model="timoshenko")
     moves = [{"thickness": 1.0}, {"vertical_thickness": 1.0}, {"thickness": 1.0, "vertical_thickness": 1.0},
              {"thickness": 2.0, "angle": -3.0}, {"angle": 1.0}]  # fmt: skip
     rates = column_rates(effective, ["E1_MPa", "nu12", "G_max_MPa", "density_kg_m3"], moves=moves)
@@ -345,9 +356,16 @@ def test_without_a_tolerance_there_is_no_column_and_no_work(monkeypatch):
     evaluate(effective, ["E1_MPa"], tolerance=0.1)
     with pytest.raises(AssertionError, match="nobody asked"):
         evaluate(effective, ["nu12_scatter"], tolerance=0.1)
-    own = dataclasses.replace(effective.cell, family="custom")
-    for other in (dataclasses.replace(effective, model="solid"), dataclasses.replace(effective, cell=own)):
-        assert np.isnan(Results(other, tolerance=0.1).tolerances).all()
+    own = dataclasses.replace(effective, cell=dataclasses.replace(effective.cell, family="custom"))
+    assert np.isnan(Results(own, tolerance=0.1).tolerances).all()
+
+
+def test_a_solid_takes_the_tolerances_of_its_joints():
+    effective = homogenize(build("reentrant-honeycomb", thickness=0.5))
+    solid = dataclasses.replace(effective, stiffness=1.1 * effective.stiffness, model="solid")
+    mine, theirs = (Results(one, tolerance=0.1).tolerances for one in (solid, effective))
+    assert np.isfinite(theirs).all()
+    np.testing.assert_allclose(mine, theirs)
 
 
 def test_a_sheet_is_of_one_piece_and_bad_members_stay_alone():

@@ -375,7 +375,7 @@ def test_the_sensitivity_command_shows_what_the_library_finds(capsys):
 
 def test_the_commands_show_their_progress(monkeypatch, capsys):
     told = []
-    monkeypatch.setattr(cli_tune, "_teller", lambda: told.append)
+    monkeypatch.setattr(cli_tune, "teller", lambda: told.append)
     assert main(shlex.split("tune square-grid --target E1_MPa=0.05 --starts 4 --model euler")) == 0
     capsys.readouterr()
     assert told[0] == "step 0: 4 searches" and told[-1] == ""

@@ -6,7 +6,7 @@ import numpy as np
 import pytest
 
 from homog import cli, directional
-from homog.columns import Results, evaluate
+from homog.columns import evaluate
 from homog.effective import homogenize
 from homog.errors import InputError
 from homog.families import build
@@ -14,6 +14,7 @@ from homog.materials import material
 from homog.plots import polar_figure
 from homog.plots.dial import TURN
 from homog.plots.page import _yield_panels
+from homog.results import Results
 
 PLA = material("PLA")
 

@@ -15,7 +15,7 @@ from numpy.typing import NDArray
 
 from homog import directional
 from homog.cell import Status
-from homog.columns import Results, column, evaluate
+from homog.columns import column, evaluate
 from homog.directional import Extremes
 from homog.effective import Effective, soft_mode
 from homog.errors import InputError, unknown
@@ -39,6 +39,7 @@ from homog.plots.style import (
     wrapped,
     write,
 )
+from homog.results import Results
 from homog.stress import sections
 from homog.tensors import vector
 
