@@ -1,5 +1,6 @@
 """The engine: the same parts and shortlist whatever computes them, killed or not, in bounded memory."""
 
+import gc
 import json
 import os
 import random
@@ -399,25 +400,35 @@ def test_a_second_look_gets_twice_as_many_and_has_the_last_word(small):
 # -------------------------------------------------------------------------------------------- bounded memory
 
 
-def peak_of(brief):
-    """Return the most memory, in Python's and in Arrow's hands, that a run takes besides what it hands over."""
-    arrow = []
-    base = pa.total_allocated_bytes()
+def held_by(brief, parts):
+    """Return the memory, in Python's and in Arrow's hands, that a run holds after every fourth part."""
+    python, arrow = [], []
+
+    def look(number):
+        arrow.append(pa.total_allocated_bytes())
+        if len(arrow) % 4 == 0:
+            gc.collect()
+            python.append(tracemalloc.get_traced_memory()[0])
+
     tracemalloc.start()
-    run_screen(brief, parts=Nowhere(), progress=lambda number: arrow.append(pa.total_allocated_bytes() - base))
-    peak = tracemalloc.get_traced_memory()[1]
+    run_screen(brief, parts=parts, progress=look)
     tracemalloc.stop()
-    return peak, max(arrow)
+    return np.array(python), np.array(arrow)
+
+
+def grows(held):
+    """Say whether the last quarter of a run holds more than the second."""
+    quarter = len(held) // 4
+    return held[-quarter:].max() > 1.05 * held[quarter : 2 * quarter].max()
 
 
 def test_memory_does_not_grow_with_the_number_of_candidates(small, monkeypatch):
     monkeypatch.setattr(ranking, "SAMPLE", 100)
-    monkeypatch.setattr(ranking, "LOOSE", 50)
-    text = BRIEF.replace("samples = 1300", "samples = {}").replace("count = 300", "count = 60").replace("{ ", "{{ ")
-    text = text.replace(" }", " }}").replace("samples = {}", "samples = {samples}")
-    peak_of(parse_brief(text.format(samples=200)))  # what is loaded and made once
-    few, many = (peak_of(parse_brief(text.format(samples=samples))) for samples in (1000, 8000))
-    assert many[0] < 1.1 * few[0] and many[1] < 1.1 * few[1]
+    monkeypatch.setattr(ranking, "LOOSE", 20)
+    brief = parse_brief(BRIEF.replace("samples = 1300", "samples = 5000"))
+    python, arrow = held_by(brief, Nowhere())
+    assert len(arrow) == 106 and not grows(python) and not grows(arrow)
+    assert grows(held_by(brief, Memory())[0])  # which keeps every part
 
 
 def test_the_size_of_a_part_follows_the_size_of_the_cell():
