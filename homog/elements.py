@@ -28,8 +28,8 @@ Props = Mapping[str, Array]
 
 MODELS = ("euler", "timoshenko", "joint", "solid")
 """`euler`: flexure and stretch; `timoshenko`: adds shear with kappa = 5/6 (walls), 6 (1 + nu) / (7 + 6 nu) (struts);
-`joint`: the same walls between condensed joints where a cell has them, else `timoshenko`; `solid`: the true section as
-a continuum, planar wall cells only. Weights know the first two; `effective.homogenize` the others."""
+`joint`: the same walls or struts between condensed joints where a cell has them, else `timoshenko`; `solid`: the true
+section as a continuum, planar wall cells only. Weights know the first two; `effective.homogenize` the others."""
 
 WALL_SHEAR = 5.0 / 6.0
 ARC_POINTS = 12  # Gauss points of a curved wall's flexibility: exact to round-off for arcs up to half a turn

@@ -30,6 +30,7 @@ Index = NDArray[np.int64]
 Mask = NDArray[np.bool_]
 
 TABLES = "joint_tables_spatial.npz"
+PLAIN_STRUT = ("diameter", "modulus", "poisson")
 POISSON = (0.0, 0.49)
 """Range of the tables."""
 POINTS = 5
@@ -91,19 +92,27 @@ class _Joint:
     ends: Index
 
 
-def _directions(cell: UnitCell) -> tuple[Array, Array]:
-    """Return lengths (m, b) and directions (m, b, 3) of the struts."""
-    strut = cell.blocks[0]
-    vectors = element_vectors(cell.points, cell.lattice, strut.nodes, strut.shifts)
-    vectors = np.moveaxis(np.broadcast_to(vectors, (*cell.shape, len(strut), 3)), -2, 0)
-    lengths = np.linalg.norm(vectors, axis=-1)
-    return lengths, vectors / lengths[..., None]
+def _struts(cell: UnitCell) -> tuple[Index, Index, Array]:
+    """Return nodes (m, 2), shifts (m, 2, p) and vectors (b, m, 3) of the struts of all blocks."""
+    blocks = [block for block in cell.blocks if len(block)]
+    nodes, shifts = (np.concatenate([getattr(block, name) for block in blocks]) for name in ("nodes", "shifts"))
+    vectors = element_vectors(cell.points, cell.lattice, nodes, shifts)
+    return nodes, shifts, np.broadcast_to(vectors, (*cell.shape, len(nodes), 3))
 
 
-def _joints(cell: UnitCell, e: Array) -> list[_Joint] | None:
-    """Return the joints of a cell whose struts have the directions e (m, 3), None if one has no table's pattern."""
+def _directions(vectors: Array) -> tuple[Array, Array]:
+    """Return lengths (m, b) and directions (m, b, 3) of struts (b, m, 3)."""
+    across = np.moveaxis(vectors, -2, 0)
+    lengths = np.linalg.norm(across, axis=-1)
+    return lengths, across / lengths[..., None]
+
+
+def _joints(n: int, nodes: Index, e: Array) -> list[_Joint] | None:
+    """Return the joints of n points whose struts have the directions e (m, 3), None if one has no table's pattern."""
     found = []
-    for arms in arms_of(cell.n, cell.blocks[0].nodes):
+    for arms in arms_of(n, nodes):
+        if not arms:
+            return None
         struts, ends = (np.array(part, np.int64) for part in zip(*arms, strict=True))
         out = e[struts] * np.where(ends == 0, 1.0, -1.0)[:, None]
         patterns = [pattern for pattern in PATTERNS if len(pattern.directions) == len(out)]
@@ -118,9 +127,9 @@ def _joints(cell: UnitCell, e: Array) -> list[_Joint] | None:
     return found
 
 
-def _sound(cell: UnitCell, e: Array) -> int:
+def _sound(e: Array, status: NDArray[np.int8]) -> int:
     """Return the first member that is a cell: it gives the pattern of all."""
-    return int(np.argmax(np.isfinite(e).all(axis=(0, 2)) & (cell.status == Status.OK)))
+    return int(np.argmax(np.isfinite(e).all(axis=(0, 2)) & (status == Status.OK)))
 
 
 def applies(cell: UnitCell) -> bool:
@@ -128,24 +137,22 @@ def applies(cell: UnitCell) -> bool:
 
     The members of a batch must have the same directions.
     """
-    if cell.kind != "spatial" or len(cell.blocks) != 1 or cell.blocks[0].kind != "strut":
+    blocks = [block for block in cell.blocks if len(block)]
+    if cell.kind != "spatial" or not blocks or any(block.kind != "strut" for block in blocks):
         return False
-    if not set(cell.blocks[0].props) <= {"diameter", "modulus", "poisson"}:
+    if any(np.any(value) for block in blocks for name, value in block.props.items() if name not in PLAIN_STRUT):
         return False
+    nodes, _, vectors = _struts(cell)
     with np.errstate(all="ignore"):
-        e = _directions(cell if len(cell.shape) == 1 else _flat(cell))[1]
-    first = e[:, _sound(cell, e)]
-    same = ~(np.abs(e - first[:, None]) > MATCH_TOLERANCE).any()  # what is not finite is no cell and does not count
-    return bool(same and np.isfinite(first).all()) and _joints(cell, first) is not None
-
-
-def _flat(cell: UnitCell) -> UnitCell:
-    return cell.at(tuple(np.indices(cell.shape).reshape(len(cell.shape), -1))) if cell.shape else cell.at(None)
+        e = _directions(vectors.reshape(-1, len(nodes), 3))[1]
+        first = e[:, _sound(e, np.broadcast_to(cell.status, cell.shape).ravel())]
+        same = ~(np.abs(e - first[:, None]) > MATCH_TOLERANCE).any()  # what is not finite is no cell: it does not count
+    return bool(same and np.isfinite(first).all()) and _joints(cell.n, nodes, first) is not None
 
 
 def freedoms(cell: UnitCell) -> int:
     """Return how many freedoms `with_joints` leaves a cell."""
-    return 3 if cell.n == 1 else 6 * len(cell.blocks[0]) - 3
+    return 3 if cell.n == 1 else 6 * sum(len(block) for block in cell.blocks) - 3
 
 
 def with_joints(cell: UnitCell) -> tuple[UnitCell, Mask, Mask]:
@@ -153,11 +160,14 @@ def with_joints(cell: UnitCell) -> tuple[UnitCell, Mask, Mask]:
 
     A cell of one point keeps it; others have the middles of their struts as points.
     """
-    strut, (members,) = cell.blocks[0], cell.shape
-    shape = (members, len(strut))
-    d, E, nu = (np.broadcast_to(strut.props[name], shape).T for name in ("diameter", "modulus", "poisson"))
-    lengths, e = _directions(cell)
-    joints = _joints(cell, e[:, _sound(cell, e)])
+    (members,), struts = cell.shape, [block for block in cell.blocks if len(block)]
+    d, E, nu = (
+        np.concatenate([np.broadcast_to(b.props[name], (members, len(b))) for b in struts], axis=1).T
+        for name in PLAIN_STRUT
+    )
+    ends_of, shifts_of, vectors = _struts(cell)
+    lengths, e = _directions(vectors)
+    joints = _joints(cell.n, ends_of, e[:, _sound(e, np.broadcast_to(cell.status, cell.shape))])
     assert joints is not None, "joints apply to this cell"
     plain = lengths.copy()
     for joint in joints:
@@ -165,11 +175,11 @@ def with_joints(cell: UnitCell) -> tuple[UnitCell, Mask, Mask]:
     outside, near = _missed(joints, d, E, nu), np.asarray((plain < NEAR * d).any(axis=0))
     if cell.n == 1:
         scale = np.where(outside, 0.0, _in_poisson(nu[0]))
-        return _one_point(cell, joints[0], lengths, d, E, nu, scale), outside, near
-    home = cell.points[..., strut.nodes[:, 0], :] + np.einsum(
-        "mp,...pd->...md", strut.shifts[:, 0].astype(float), cell.lattice
+        element = _one_point(joints[0], shifts_of[:, 1] - shifts_of[:, 0], lengths, d, E, nu, scale)
+        return dataclasses.replace(cell, blocks=(element,)), outside, near
+    home = cell.points[..., ends_of[:, 0], :] + np.einsum(
+        "mp,...pd->...md", shifts_of[:, 0].astype(float), cell.lattice
     )
-    middles = home + element_vectors(cell.points, cell.lattice, strut.nodes, strut.shifts) / 2.0
     blocks: dict[int, list[tuple[Index, Index, Array]]] = {}
     for joint in joints:
         k = joint.struts
@@ -177,11 +187,11 @@ def with_joints(cell: UnitCell) -> tuple[UnitCell, Mask, Mask]:
         F = _star(joint.pattern, lengths[k] / 2.0, d[k], E[k], nu[k], scale)
         tips = joint.pattern.directions[:3, :, None] * (lengths[k[:3]] / 2.0)[:, None]
         weight = _framed(np.asarray(np.linalg.inv(np.moveaxis(F, -1, 0))), tips)
-        blocks.setdefault(len(k), []).append((k, -strut.shifts[k, joint.ends], weight))
+        blocks.setdefault(len(k), []).append((k, -shifts_of[k, joint.ends], weight))
     return (
         dataclasses.replace(
             cell,
-            points=middles,
+            points=home + vectors / 2.0,
             blocks=tuple(
                 Block("joint", np.stack(nodes), np.stack(shifts), {"weight": np.stack(weights, axis=1)})
                 for nodes, shifts, weights in (zip(*found, strict=True) for found in blocks.values())
@@ -241,9 +251,9 @@ def _sized(delta: Array, d: Array, E: Array) -> Array:
     return np.asarray(delta / (E * d ** (1.0 + turns[:, None] + turns)[..., None]))
 
 
-def _one_point(cell: UnitCell, joint: _Joint, lengths: Array, d: Array, E: Array, nu: Array, scale: Array) -> UnitCell:
-    """Return a cell of one point as an element from it to its images along three of its struts."""
-    strut, (m, members) = cell.blocks[0], lengths.shape
+def _one_point(joint: _Joint, shifts: Index, lengths: Array, d: Array, E: Array, nu: Array, scale: Array) -> Block:
+    """Return the joint of a cell of one point as an element from it to its images along three of its struts (m, p)."""
+    m, members = lengths.shape
     p = joint.pattern.directions
     arm = np.array([np.flatnonzero((joint.struts == j) & (joint.ends == 0))[0] for j in range(m)])
     back = np.array([np.flatnonzero((joint.struts == j) & (joint.ends == 1))[0] for j in range(m)])
@@ -271,7 +281,6 @@ def _one_point(cell: UnitCell, joint: _Joint, lengths: Array, d: Array, E: Array
     for j in range(m):
         k = slice(3 * j, 3 * j + 3)
         F[k, k] += 2.0 * np.einsum("kb,kij->ijb", scales[:2, j], strut_shares(p[arm[j]])[:2, :3, :3])
-    shifts = strut.shifts[:, 1] - strut.shifts[:, 0]
     three = next(t for t in map(list, itertools.combinations(range(m), 3)) if abs(np.linalg.det(shifts[t])) > 0.5)
     share = np.linalg.solve(shifts[three].T.astype(float), shifts.T).T  # of the chords of the three in each chord
     spread = np.kron(share, np.eye(3))
@@ -280,6 +289,5 @@ def _one_point(cell: UnitCell, joint: _Joint, lengths: Array, d: Array, E: Array
     small = _framed(spread.T @ forces_of, np.concatenate([np.zeros((1, 3, members)), ends]))
     weight = np.zeros((members, 1, 3, 2, 3, 3, 2, 3))  # rotations of images are the point's own: no strain, no weight
     weight[:, 0, :, 0, :, :, 0] = small.reshape(members, 3, 3, 3, 3)
-    images = np.concatenate([np.zeros((1, cell.p), np.int64), shifts[three]])
-    block = Block("joint", np.zeros((1, 4), np.int64), images[None], {"weight": weight.reshape(members, 1, 18, 18)})
-    return dataclasses.replace(cell, blocks=(block,))
+    images = np.concatenate([np.zeros((1, 3), np.int64), shifts[three]])
+    return Block("joint", np.zeros((1, 4), np.int64), images[None], {"weight": weight.reshape(members, 1, 18, 18)})

@@ -22,7 +22,7 @@ from homog.materials import Material
 from homog.strut_solid import factor, lame, mesh_struts, stiffness_parts
 
 CASES = (*((ratio, 0.3) for ratio in (0.2, 0.1, 0.15, 0.3, 0.4, 0.05)), (0.2, 0.0), (0.2, 0.45))
-SIZES = (2.0, 1.4)
+SIZES = (2.8, 2.0)
 PATH = Path(__file__).parent.parent / "data" / "octet_solid.csv"
 ORIGIN = """\
 # Octet lattice of round struts: three-dimensional solid against the models of this package, E of the parent = 1.
