@@ -35,8 +35,6 @@ POISSON = (0.0, 0.49)
 """Range of the tables."""
 POINTS = 5
 """Chebyshev points in it."""
-NEAR = 0.4
-"""Plain strut between the creases of neighbouring joints, in diameters, below which they feel each other."""
 
 
 @dataclass(frozen=True)
@@ -155,7 +153,7 @@ def freedoms(cell: UnitCell) -> int:
     return 3 if cell.n == 1 else 6 * sum(len(block) for block in cell.blocks) - 3
 
 
-def with_joints(cell: UnitCell) -> tuple[UnitCell, Mask, Mask]:
+def with_joints(cell: UnitCell) -> tuple[UnitCell, Mask, Array]:
     """Return a cell of struts as condensed joints; see `joints.with_joints`.
 
     A cell of one point keeps it; others have the middles of their struts as points.
@@ -172,11 +170,11 @@ def with_joints(cell: UnitCell) -> tuple[UnitCell, Mask, Mask]:
     plain = lengths.copy()
     for joint in joints:
         np.subtract.at(plain, joint.struts, joint.pattern.swallowed * d[joint.struts])
-    outside, near = _missed(joints, d, E, nu), np.asarray((plain < NEAR * d).any(axis=0))
+    outside, least = _missed(joints, d, E, nu), np.asarray((plain / d).min(axis=0))
     if cell.n == 1:
         scale = np.where(outside, 0.0, _in_poisson(nu[0]))
         element = _one_point(joints[0], shifts_of[:, 1] - shifts_of[:, 0], lengths, d, E, nu, scale)
-        return dataclasses.replace(cell, blocks=(element,)), outside, near
+        return dataclasses.replace(cell, blocks=(element,)), outside, least
     home = cell.points[..., ends_of[:, 0], :] + np.einsum(
         "mp,...pd->...md", shifts_of[:, 0].astype(float), cell.lattice
     )
@@ -198,7 +196,7 @@ def with_joints(cell: UnitCell) -> tuple[UnitCell, Mask, Mask]:
             ),
         ),
         outside,
-        near,
+        least,
     )
 
 
