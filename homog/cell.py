@@ -42,7 +42,8 @@ LENGTH_POWER: Mapping[str, int] = {
 
 
 MATRICES = frozenset({"weight"})
-"""Properties that are a matrix for each element, (..., m, s, s); of a joint's, every third strain is a rotation."""
+"""Properties that are a matrix for each element, (..., m, s, s); a joint's strains are lengths and rotations by turns,
+two and one in the plane, three and three in space."""
 
 
 def tail(name: str) -> int:
@@ -292,8 +293,9 @@ class UnitCell:
                     power = LENGTH_POWER.get(f"{b.kind}.{name}", LENGTH_POWER.get(name, 0))
                 props[name] = value * factor**power
                 if name in MATRICES:  # moments and rotations: a length more each
-                    size = np.tile([1.0, 1.0, factor], value.shape[-1] // 3)
-                    props[name] = value * size[:, None] * size
+                    each = [1.0, 1.0, factor] if self.d == 2 else [1.0, 1.0, 1.0, factor, factor, factor]
+                    size = np.tile(each, value.shape[-1] // len(each))
+                    props[name] = value * size[:, None] * size * factor ** (self.d - 2)
             blocks.append(dataclasses.replace(b, props=props))
         sheet = self.kind == "sheet"
         return dataclasses.replace(

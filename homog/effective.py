@@ -18,11 +18,12 @@ from typing import TYPE_CHECKING
 import numpy as np
 from numpy.typing import NDArray
 
+from homog import joints
 from homog.assembly import dense, freedoms, sparse, strain_count
 from homog.cell import STRAINS, Kind, Status, UnitCell
 from homog.elements import check_model
 from homog.errors import GeometryError, InputError, MechanismError
-from homog.joints import NEAR, applies, with_joints
+from homog.joints import NEAR
 from homog.solid import homogenize_solid
 from homog.tensors import voigt_factors
 
@@ -147,10 +148,10 @@ def homogenize(cell: UnitCell, *, model: str = DEFAULT_MODEL, fillet: float = 0.
         volume, density = (np.broadcast_to(x, (members,)) for x in (flat.volume, flat.relative_density))
     good = np.broadcast_to((flat.status == Status.OK) & (volume > 0.0), (members,))
     v = strain_count(cell.kind)
-    condensed = model == "joint" and applies(cell)
+    condensed = model == "joint" and joints.applies(cell)
     if model == "joint" and not condensed:
         model = "timoshenko"
-    count = 3 * sum(len(block) for block in cell.blocks) - 2 if condensed else freedoms(flat).count
+    count = joints.freedoms(cell) if condensed else freedoms(flat).count
     flags = np.zeros(members, np.int8)
     C = np.empty((members, v, v))
     mechanisms = np.zeros(members, np.int64)
@@ -254,7 +255,7 @@ def _solid(cell: UnitCell, fillet: float) -> Effective:
 
 
 def _joined(cell: UnitCell) -> tuple[UnitCell, NDArray[np.int8]]:
-    joined, outside, plain = with_joints(cell)
+    joined, outside, plain = joints.with_joints(cell)
     overlap = plain < 0.0
     near = (plain < NEAR) & ~overlap
     flags = outside * Flag.JOINT_OUTSIDE + near * Flag.JOINTS_NEAR + overlap * Flag.JOINTS_OVERLAP

@@ -28,8 +28,8 @@ Props = Mapping[str, Array]
 
 MODELS = ("euler", "timoshenko", "joint", "solid")
 """`euler`: flexure and stretch; `timoshenko`: adds shear with kappa = 5/6 (walls), 6 (1 + nu) / (7 + 6 nu) (struts);
-`joint`: the same walls between condensed joints where a cell has them, else `timoshenko`; `solid`: the true section as
-a continuum, planar wall cells only. Weights know the first two; `effective.homogenize` the others."""
+`joint`: the same walls or struts between condensed joints where a cell has them, else `timoshenko`; `solid`: the true
+section as a continuum, planar wall cells only. Weights know the first two; `effective.homogenize` the others."""
 
 WALL_SHEAR = 5.0 / 6.0
 ARC_POINTS = 12  # Gauss points of a curved wall's flexibility: exact to round-off for arcs up to half a turn
@@ -40,8 +40,9 @@ class Element:
     """One kind of element.
 
     `nodes` is the number of nodes (the least if `more` are allowed: `strains` then repeat for each node but the first),
-    `dimensions` the spaces it lives in, `turns` whether its nodes carry rotations, `required` and `optional` the
-    property names (optional ones are zero when absent).
+    `strains` names what is measured (`strains_in_space` if that differs there), `dimensions` the spaces it lives in,
+    `turns` whether its nodes carry rotations, `required` and `optional` the property names (optional ones are zero when
+    absent).
     """
 
     kind: str
@@ -55,6 +56,7 @@ class Element:
     measure: Callable[[Array, Array, Array, Props], Array]
     weights: Callable[[Array, Props, str], Array]
     more: bool = False
+    strains_in_space: tuple[str, ...] = ()
 
 
 def element(kind: str) -> Element:
@@ -337,33 +339,52 @@ def _strut_weights(x: Array, props: Props, model: str) -> Array:
     return W
 
 
-# joint: motion of tips 1 to n - 1 relative to the rigid motion of tip 0, in the frame of the line from tip 0 to 1 ----
+# joint: motion of tips 1 to n - 1 relative to the rigid motion of tip 0, in the frame of the first tips ---
 
 
-def _joint_frame(x: Array) -> tuple[Array, Array]:
+def _joint_frame(x: Array) -> Array:
+    """Return the axes (d, d, *): the line from tip 0 to tip 1; in space tip 2 lies in the plane of the first two."""
+    if len(x[0]) == 2:
+        e = (x[1] - x[0]) / _norm(x[1] - x[0])
+        return np.stack([e, np.stack([-e[1], e[0]])])
+    if len(x) == 2:  # any frame round the line: the weight has to be the same for all
+        return np.stack(_triad(x)[1:])
     e = (x[1] - x[0]) / _norm(x[1] - x[0])
-    return e, np.stack([-e[1], e[0]])
+    upright = _cross(e, x[2] - x[0])
+    upright = upright / _norm(upright)
+    return np.stack([e, _cross(upright, e), upright])
 
 
 def _joint_rows(x: Array, props: Props) -> Array:
-    e, n = _joint_frame(x)
-    rows = np.zeros((3 * len(x) - 3, len(x), 3) + x.shape[2:])
+    frame, d = _joint_frame(x), len(x[0])
+    r = rotations(d)
+    rows = np.zeros(((d + r) * (len(x) - 1), len(x), d + r) + x.shape[2:])
     for i in range(1, len(x)):
-        k, arm = 3 * i - 3, x[i] - x[0]
-        carried = np.stack([-arm[1], arm[0]])  # motion of tip i per unit rotation of tip 0
-        for row, axis in ((k, e), (k + 1, n)):
-            rows[row, i, :2], rows[row, 0, :2] = axis, -axis
-            rows[row, 0, 2] = -_dot(axis, carried)
-        rows[k + 2, i, 2], rows[k + 2, 0, 2] = 1.0, -1.0
+        k, arm = (d + r) * (i - 1), x[i] - x[0]
+        for row, axis in enumerate(frame, k):
+            rows[row, i, :d], rows[row, 0, :d] = axis, -axis
+            rows[row, 0, d:] = -_cross(arm, axis)  # axis . (turn x arm) = turn . (arm x axis)
+        if d == 2:
+            rows[k + 2, i, 2], rows[k + 2, 0, 2] = 1.0, -1.0
+        else:
+            rows[k + 3 : k + 6, i, 3:], rows[k + 3 : k + 6, 0, 3:] = frame, -frame
     return rows
 
 
 def _joint_measure(x: Array, u: Array, turn: Array, props: Props) -> Array:
-    e, n = _joint_frame(x)
+    frame = _joint_frame(x)
     strains = []
+    if len(frame) == 2:
+        for i in range(1, len(x)):
+            moved = _turned(x[i] + u[i] - x[0] - u[0], -turn[0, 0]) - (x[i] - x[0])
+            strains += [_dot(frame[0], moved), _dot(frame[1], moved), turn[i, 0] - turn[0, 0]]
+        return np.stack(strains)
+    mine = [_rodrigues(axis, turn[0]) for axis in frame]
     for i in range(1, len(x)):
-        moved = _turned(x[i] + u[i] - x[0] - u[0], -turn[0, 0]) - (x[i] - x[0])
-        strains += [_dot(e, moved), _dot(n, moved), turn[i, 0] - turn[0, 0]]
+        strains += [_dot(a, x[i] + u[i] - x[0] - u[0]) - _dot(b, x[i] - x[0]) for a, b in zip(mine, frame, strict=True)]
+        his = [_rodrigues(axis, turn[i]) for axis in frame]
+        # the turn relative to tip 0's, about each axis, as a strut's twist is measured
+        strains += [(_dot(his[j], mine[k]) - _dot(his[k], mine[j])) / 2.0 for j, k in ((1, 2), (2, 0), (0, 1))]
     return np.stack(strains)
 
 
@@ -386,8 +407,8 @@ ELEMENTS: Mapping[str, Element] = dict(
         _entry("fold", 4, (3,), False, ("dihedral",), ("stiffness",), (), _fold_rows, _fold_measure, _fold_weights),
         _entry("wall", 2, (2,), True, ("stretch", *BENDING), ("thickness", "modulus", "poisson"),
                ("arc", *ENDS, *ARMS), _wall_rows, _wall_measure, _wall_weights),
-        _entry("joint", 2, (2,), True, ("along", "across", "rotation"), ("weight",), (), _joint_rows, _joint_measure,
-               _joint_weights, True),
+        _entry("joint", 2, (2, 3), True, ("along", "across", "rotation"), ("weight",), (), _joint_rows, _joint_measure,
+               _joint_weights, True, ("along", "across", "upright", "turn_along", "turn_across", "turn_upright")),
         _entry("strut", 2, (3,), True, ("stretch", "twist", *(f"{b}_{i}" for i in (3, 2) for b in BENDING)),
                ("diameter", "modulus", "poisson"), ENDS, _strut_rows, _strut_measure, _strut_weights),
     ]

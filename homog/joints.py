@@ -26,6 +26,7 @@ from typing import Any, NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
+from homog import spatial_joints
 from homog.cell import Block, Status, UnitCell
 from homog.errors import InputError
 from homog.section import arms_of, corner_cuts
@@ -291,7 +292,12 @@ def _on_demand(gaps: Array, ratio: Array, poisson: Array) -> Array:
 
 
 def applies(cell: UnitCell) -> bool:
-    """Say whether a cell has condensed joints: planar, all straight walls that meet at their points, no end springs."""
+    """Say whether a cell has condensed joints: planar, all straight walls that meet at their points, no end springs.
+
+    Or in space, plain round struts whose points all have a table's pattern (`spatial_joints`).
+    """
+    if cell.kind == "spatial":
+        return spatial_joints.applies(cell)
     walls = [block for block in cell.blocks if len(block)]
     if cell.kind != "planar" or not walls or any(block.kind != "wall" for block in walls):
         return False
@@ -299,6 +305,13 @@ def applies(cell: UnitCell) -> bool:
     joined = np.bincount(nodes.ravel(), minlength=cell.n)[nodes].max(axis=1) > 1
     others = (np.any(value) for block in walls for name, value in block.props.items() if name not in PLAIN_WALL)
     return not any(others) and bool(joined.all())
+
+
+def freedoms(cell: UnitCell) -> int:
+    """Return how many freedoms `with_joints` leaves a cell to which joints apply."""
+    if cell.kind == "spatial":
+        return spatial_joints.freedoms(cell)
+    return 3 * sum(len(block) for block in cell.blocks) - 2
 
 
 def with_joints(cell: UnitCell) -> tuple[UnitCell, Mask, Array]:
@@ -316,6 +329,8 @@ def with_joints(cell: UnitCell) -> tuple[UnitCell, Mask, Array]:
     plain : ndarray of shape (b,); least plain wall between two joints, in thicknesses of the wall; negative where the
         inner corners of two joints overlap: no such pair of joints exists
     """
+    if cell.kind == "spatial":
+        return spatial_joints.with_joints(cell)
     blocks, (members,) = [block for block in cell.blocks if len(block)], cell.shape
     ends_of, shifts_of = (np.concatenate([getattr(b, name) for b in blocks]) for name in ("nodes", "shifts"))
     m = len(ends_of)

@@ -129,7 +129,7 @@ def member_forces(effective: Effective) -> tuple[Members, ...]:
     ----------
     effective : Effective
         A batch of any shape; here it is flat (b,). Members without a compliance are NaN. The `solid` model has no
-        members: theirs are those of the same cell's `joint` model.
+        members: theirs are those of the same cell's `joint` model, and of `joint` in space those of `timoshenko`.
 
     Raises
     ------
@@ -137,8 +137,9 @@ def member_forces(effective: Effective) -> tuple[Members, ...]:
         For elements without a cross section.
     """
     cell = check_sections(effective.cell)
-    if effective.model == "solid":
-        effective = homogenize(cell if cell.shape else cell.at(None), model="joint")
+    other = {"solid": "joint"} | ({"joint": "timoshenko"} if cell.kind == "spatial" else {})
+    if effective.model in other:
+        effective = homogenize(cell if cell.shape else cell.at(None), model=other[effective.model])
     model, flat = effective.model, _flat(effective)
     b, v = flat.shape[0], effective.stiffness.shape[-1]
     stiffness, mechanisms = effective.stiffness.reshape(b, v, v), effective.mechanisms.reshape(b)

@@ -74,19 +74,20 @@ def nodes_of(kind):
     return ELEMENTS[kind].nodes + ELEMENTS[kind].more
 
 
-def strains_of(kind):
-    """Return the names of the strains of an element of `nodes_of(kind)` nodes."""
+def strains_of(kind, d):
+    """Return the names of the strains of an element of `nodes_of(kind)` nodes in d dimensions."""
     e = ELEMENTS[kind]
-    return e.strains * (nodes_of(kind) - 1) if e.more else e.strains
+    strains = e.strains_in_space if d == 3 and e.strains_in_space else e.strains
+    return strains * (nodes_of(kind) - 1) if e.more else strains
 
 
-def random_props(kind, shape, rng, *, optional=True):
+def random_props(kind, shape, rng, *, d, optional=True):
     """Return every property of an element kind at random, arrays of `shape`, (*shape, s, s) for matrices."""
     e = ELEMENTS[kind]
     props = {}
     for name in e.required + e.optional * optional:
         if name in MATRICES:
-            s = len(strains_of(kind))
+            s = len(strains_of(kind, d))
             root = rng.uniform(-0.5, 0.5, (*np.atleast_1d(shape), s, s)) + np.eye(s)
             props[name] = root @ np.swapaxes(root, -1, -2) + 0.1 * np.eye(s)
         else:
@@ -120,7 +121,7 @@ def random_cell(d, p, kinds, rng, *, points=3, members=(), optional=True):
                 places = len(np.unique(np.column_stack([nodes[i], shifts[i]]), axis=0))
                 if places == k and np.bincount(nodes[i]).max() < 3:  # three images of a point may lie in line
                     break
-        blocks.append(Block(kind, nodes, shifts, random_props(kind, (*members, m), rng, optional=optional)))
+        blocks.append(Block(kind, nodes, shifts, random_props(kind, (*members, m), rng, d=d, optional=optional)))
     return UnitCell(x, lattice, tuple(blocks))
 
 

@@ -27,7 +27,7 @@ def samples(kind, d, *, optional=True):
     gap = np.linalg.norm(x[:, None] - x[None], axis=2) + 9.0 * np.eye(len(x))[:, :, None]
     x = x[:, :, gap.min(axis=(0, 1)) > 0.4][:, :, :MANY]  # no two nodes nearer than the arms reach
     assert x.shape[-1] == MANY
-    props = random_props(kind, MANY, rng, optional=optional)
+    props = random_props(kind, MANY, rng, d=d, optional=optional)
     return x, {name: np.moveaxis(v, 0, -1) for name, v in props.items()}, rng
 
 
@@ -127,7 +127,7 @@ def test_weights_are_symmetric_and_positive(kind, d, model, optional):
     x, props, _ = samples(kind, d, optional=optional)
     e = element(kind)
     W = np.moveaxis(e.weights(x, props, model), -1, 0)
-    assert W.shape[1:] == (len(strains_of(kind)), len(strains_of(kind)))
+    assert W.shape[1:] == (len(strains_of(kind, d)), len(strains_of(kind, d)))
     size = np.sqrt(np.diagonal(W, axis1=-2, axis2=-1))
     W = W / (size[:, :, None] * size[:, None, :])
     np.testing.assert_allclose(W, np.swapaxes(W, -1, -2), rtol=0, atol=1e-12)

@@ -15,7 +15,7 @@ ORDER = [
     *("version", "errors", "tensors", "files"),
     *("materials", "section", "mesh"),
     *("cell", "elements"),
-    *("stars", "joint_solid", "joints", "solid"),
+    *("stars", "spatial_stars", "joint_solid", "strut_solid", "spatial_joints", "joints", "solid"),
     *("families", "assembly", "reference"),
     *("effective", "stress", "gradient"),
     *("directional", "bounds", "bands"),
