@@ -50,9 +50,7 @@ def star_flexibility(angles: Array, lengths: Array, thickness: Array, modulus: A
     return star_of(np.cos(angles - angles[0]), np.sin(angles - angles[0]), lengths, thickness, modulus, poisson)
 
 
-def star_of(
-    cosine: Array, sine: Array, lengths: Array, thickness: Array, modulus: Array, poisson: Array
-) -> Array:
+def star_of(cosine: Array, sine: Array, lengths: Array, thickness: Array, modulus: Array, poisson: Array) -> Array:
     """Return `star_flexibility` from the cosine and sine (n, ...) of each wall's angle from the first."""
     Q = _held(cosine, sine, lengths)
     f0 = wall_flexibility(lengths[0], thickness[0], modulus, poisson)

@@ -248,14 +248,15 @@ def _positive(S: Array) -> NDArray[np.bool_]:
         good &= M[j, j] > 0.0
         for i in range(j + 1, len(M)):
             M[i, i:] -= M[j, i] / M[j, j] * M[j, i:]
-    return good
+    return np.asarray(good)
 
 
 def space_extremes(compliance: ArrayLike) -> Extremes:
     """Return the extremes over all directions of spatial compliances (..., 6, 6), Mandel, positive definite.
 
-    E over n; nu and G over n and over m across it, by `frames.extremes`, by `cubic.extremes` where the axes are cubic. A member that is not finite or not positive
-    definite gives NaN. Where an extreme is reached along a whole cone of directions, the one reported need not be the
+    E over n; nu and G over n and over m across it, by `frames.extremes`, in closed form (`cubic`) where the tensor is
+    cubic about the axes. A member that is not finite or not positive definite gives NaN. Where an extreme is reached
+    along a whole cone of directions, the one reported need not be the
     nearest to axis 1. `auxetic_share` is exact in m and a mean over 1024 directions n.
 
     Measured: on 6900 tensors of all symmetries, E varying up to 1e6-fold, one of 41,400 extremes was missed (nu of a
