@@ -76,8 +76,7 @@ def _affine_strains(kind: Kind, rows: Array, x: Array, middle: Array) -> Array:
 
     def sum_of(*terms: tuple[int, Array]) -> Array:
         """The strains (s, *) of motions (k - 1, *) of the nodes along or about their freedoms."""
-        strains = [np.einsum("sk...,k...->s...", rows[:, :, f], motion) for f, motion in terms]
-        return np.asarray(sum(strains))
+        return np.asarray(sum(np.einsum("sk...,k...->s...", rows[:, :, f], motion) for f, motion in terms))
 
     for v, (i, j) in enumerate(PAIRS[2 if kind == "sheet" else d]):
         out[:, v] = sum_of((i, y[:, i])) if i == j else sum_of((j, y[:, i]), (i, y[:, j])) * HALF
@@ -159,10 +158,10 @@ def _places(
     starts = [0, *breaks.tolist()]
     runs = [(a, b, int(targets[a])) for a, b in zip(starts, [*starts[1:], len(targets)], strict=True)]
     moved: dict[int, list[tuple[int, int]]] = {}
-    for node, spans in zip(numbers, strains, strict=True):
-        for number, span in zip(node, spans, strict=True):
+    for node, of_node in zip(numbers, strains, strict=True):
+        for number, span in zip(node, of_node, strict=True):
             moved.setdefault(number, []).append(span)
-    everything = [span for spans in strains for span in spans]
+    everything = [span for of_node in strains for span in of_node]
     columns = []
     for number in targets.tolist():
         felt = moved.get(number, everything) if number < first else everything

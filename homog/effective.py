@@ -166,14 +166,14 @@ def homogenize(cell: UnitCell, *, model: str = DEFAULT_MODEL, fillet: float = 0.
             if condensed:
                 piece, flags[part] = _joined(piece)
             if room is None:
-                schur, upper, null = (x[..., None] for x in _sparse_member(piece.at(0), model))
+                whole, upper, null = (x[..., None] for x in _sparse_member(piece.at(0), model))
             else:
-                schur, upper, null = _dense_members(piece, model, count, good[part], room[..., : part.stop - start])
-            schur /= volume[part]
-            finite = good[part] & np.isfinite(schur.sum(axis=(0, 1)))
-            schur[:, :, ~finite] = np.nan
-            C[part] = np.moveaxis(schur, -1, 0)
-            soft = _null_count(schur, upper / volume[part])
+                whole, upper, null = _dense_members(piece, model, count, good[part], room[..., : part.stop - start])
+            whole /= volume[part]
+            finite = good[part] & np.isfinite(whole.sum(axis=(0, 1)))
+            whole[:, :, ~finite] = np.nan
+            C[part] = np.moveaxis(whole, -1, 0)
+            soft = _null_count(whole, upper / volume[part])
             mechanisms[part] = np.where(finite, null + soft, 0)
             status[part][finite] = np.where(soft > 0, Status.MECHANISM, Status.OK)[finite]
     finite = status != Status.IMPOSSIBLE

@@ -2,6 +2,8 @@
 
     python scripts/sparse_cost.py [LARGEST]      1e6 freedoms unless another largest is given: some minutes, 5 GB
 
+Sizes that the .csv has already are not measured again: delete it for a fresh start, or stop and go on.
+
 The cell is a regular honeycomb, n by n, whose joints are moved at random, model `timoshenko`. `whole` is the way from
 the cell to its tensor, `factor and solve` the bare factorisation (SuperLU, minimum degree) and three solves of the same
 scaled matrix, `multigrid` smoothed aggregation with conjugate gradients (pyamg, if installed) to 1e-10. Best of a few
@@ -81,30 +83,31 @@ def multigrid(cell: UnitCell, A: sp.csc_matrix, F: np.ndarray, scale: np.ndarray
 
 def main() -> None:
     largest = float(sys.argv[1]) if len(sys.argv) > 1 else 1e6
-    rows = []
+    path = DATA / "sparse-cost.csv"
+    table = pd.read_csv(path) if path.exists() else pd.DataFrame({"freedoms": pd.Series(dtype=int)})
     for n in SIZES:
-        if 6 * n * n - 2 > largest:
-            break
+        count = 6 * n * n - 2
+        if count > largest or count in set(table["freedoms"]):
+            continue
         cell = network(n)
         A, F, scale = scaled(cell)
         repeats = 5 if n < 60 else 2 if n < 200 else 1
         bare, x = spent(lambda A=A, F=F: direct(A, F), repeats)
         whole, _ = spent(lambda c=cell: homog.homogenize(c, model="timoshenko"), repeats)
-        row = {"freedoms": len(scale), "whole_s": whole, "factor_and_solve_s": bare, "ratio": whole / bare}
+        row = {"freedoms": count, "whole_s": whole, "factor_and_solve_s": bare, "ratio": whole / bare}
         try:
-            if len(scale) <= MULTIGRID_LIMIT:
+            if count <= MULTIGRID_LIMIT:
                 row["multigrid_s"], y = spent(lambda: multigrid(cell, A, F, scale), 1)  # noqa: B023
                 row["multigrid_error"] = np.abs(y - x).max() / np.abs(x).max()
         except ImportError:
             pass
         row["peak_GB"] = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 1e6
-        rows.append(row)
+        table = pd.concat([table, pd.DataFrame([row])]).sort_values("freedoms", ignore_index=True)
+        table.to_csv(path, index=False, float_format="%.4g")
         print("  ".join(f"{name} {value:.4g}" for name, value in row.items()), flush=True)
-    table = pd.DataFrame(rows)
     large = table[table["freedoms"] > 5e3]
     exponent = np.polyfit(np.log(large["freedoms"]), np.log(large["whole_s"]), 1)[0]
     print(f"whole time grows like freedoms^{exponent:.2f} above 5000")
-    table.to_csv(DATA / "sparse-cost.csv", index=False, float_format="%.4g")
     figure, axes = plt.subplots(figsize=(6.4, 4.4), layout="constrained")
     for name, mark, words in (
         ("whole_s", "o-", f"cell to tensor, like freedoms$^{{{exponent:.2f}}}$"),
@@ -112,7 +115,8 @@ def main() -> None:
         ("multigrid_s", "^:", "multigrid with conjugate gradients"),
     ):
         if name in table:
-            axes.loglog(table["freedoms"], table[name], mark, label=words)
+            known = table[table[name].notna()]
+            axes.loglog(known["freedoms"], known[name], mark, label=words)
     axes.set(xlabel="freedoms", ylabel="processor time of one core, s", title="One large random honeycomb cell")
     axes.grid(alpha=0.3)
     axes.legend(frameon=False)

@@ -1,4 +1,4 @@
-"""Arithmetic over the batch: swept inverses, Jacobi eigenvalues, cubic closed forms, joints computed once."""
+"""The arithmetic over the batch: swept inverses, Jacobi eigenvalues, cubic closed forms, joints computed once."""
 
 import dataclasses
 

@@ -4,10 +4,10 @@ With s = S11 - S12 - S44/2 (Voigt), J = n1^2 n2^2 + n2^2 n3^2 + n3^2 n1^2 and P 
 
     1/E = S11 - 2 s J        nu = -(S12 + s P) E        1/G = S44 + 4 s P
 
-so that E is extreme along the axes (J = 0) and the diagonals (J = 1/3), G where P is 0 or 1/2, and nu with n =
-(1, 1, a) and m = (1, -1, 0) or (a, a, -2) (Norris 2006, Proc. R. Soc. A 462, 3385; confirmed against the search). On
-w = 1/(2 + a^2) in [0, 1/2] both are quadratics over a quadratic, stationary where another quadratic is zero. Arrays
-only.
+so that E is extreme along the axes (J = 0) and the diagonals (J = 1/3), G where P is 0 or 1/2, and nu with n along
+(1, 1, a) and m along (1, -1, 0) or (a, a, -2) (Norris 2006, Proc. R. Soc. A 462, 3385, from memory; confirmed against
+the search). On w = 1/(2 + a^2) in [0, 1/2] both are quadratics over a quadratic, stationary where another quadratic is
+zero. Arrays only.
 """
 
 from __future__ import annotations
