@@ -270,7 +270,7 @@ def sections(effective: Effective) -> Sections:
     cell = effective.cell
     flat = _flat(effective)
     swallowed: list[Array | None] = [None] * len(cell.blocks)
-    if effective.model in ("joint", "solid") and applies(cell):
+    if effective.model in ("joint", "solid") and cell.kind == "planar" and applies(cell):
         sizes = [len(block) for block in cell.blocks]
         t = [
             np.broadcast_to(b.props["thickness"], (len(flat.points), m))
