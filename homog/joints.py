@@ -335,6 +335,7 @@ def with_joints(cell: UnitCell) -> tuple[UnitCell, Mask, Array]:
     ends_of, shifts_of = (np.concatenate([getattr(b, name) for b in blocks]) for name in ("nodes", "shifts"))
     m = len(ends_of)
     t, E, nu = (_by_wall([b.props[name] for b in blocks], [len(b) for b in blocks]) for name in PLAIN_WALL)
+    t = np.broadcast_to(t, (m, members))
     points, lattice = (np.ascontiguousarray(np.moveaxis(x, (-1, -2), (0, 1))) for x in (cell.points, cell.lattice))
     reach = np.einsum("mkp,dpb->dkmb", shifts_of.astype(float), lattice)
     home = points[:, ends_of[:, 0]] + reach[:, 0]
