@@ -9,7 +9,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from samples import case_name, cases, numeric, possible, repeated, with_props
 
-from homog import columns, gradient
+from homog import gradient, results
 from homog.cell import Block
 from homog.columns import COLUMNS, columns_of, evaluate
 from homog.directional import plane_extremes, poisson
@@ -351,7 +351,7 @@ def test_without_a_tolerance_there_is_no_column_and_no_work(monkeypatch):
     def never(effective):
         raise AssertionError("computed, though nobody asked for it")
 
-    monkeypatch.setattr(columns, "wall_rates", never)
+    monkeypatch.setattr(results, "wall_rates", never)
     assert all(np.isnan(evaluate(effective)[name]).all() for name in TOLERANCES)
     evaluate(effective, ["E1_MPa"], tolerance=0.1)
     with pytest.raises(AssertionError, match="nobody asked"):
