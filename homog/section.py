@@ -113,7 +113,10 @@ def element_vectors(points: Array, lattice: Array, nodes: Index, shifts: Index) 
     out = np.ascontiguousarray(first)[:, nodes[:, 1]] - np.ascontiguousarray(first)[:, nodes[:, 0]]
     apart = shifts[:, 1] - shifts[:, 0]
     if apart.any():
-        out = out + np.einsum("mp,dp...->dm...", apart.astype(float), np.ascontiguousarray(last))
+        moved = np.einsum("mp,dp...->dm...", apart.astype(float), np.ascontiguousarray(last))
+        ndim = max(out.ndim, moved.ndim)  # the batches stand to the right: fill up between
+        out, moved = (x.reshape(*x.shape[:2], *(1,) * (ndim - x.ndim), *x.shape[2:]) for x in (out, moved))
+        out = out + moved
     return np.asarray(np.moveaxis(out, (0, 1), (-1, -2)))
 
 

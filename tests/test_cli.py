@@ -471,7 +471,9 @@ def test_screen_finds_nothing(place, capsys):
 
 
 def test_screen_where_all_are_rejected(place, capsys):
-    (place / "r.toml").write_text('material = "PLA"\n[[candidates]]\nfamily = "octet"\ndiameter = [3.0, 4.0]')
+    (place / "r.toml").write_text(
+        'model = "euler"\nmaterial = "PLA"\n[[candidates]]\nfamily = "octet"\ndiameter = [3.0, 4.0]'
+    )
     status, out, err = run("screen r.toml --out x", capsys)
     assert (status, err) == (3, "") and "every one is rejected" in out
 

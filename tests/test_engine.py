@@ -416,10 +416,10 @@ def held_by(brief, parts):
     return np.array(python), np.array(arrow)
 
 
-def grows(held):
-    """Say whether the last quarter of a run holds more than the second."""
+def growth(held):
+    """Return by how much the last quarter of a run holds more than the second."""
     quarter = len(held) // 4
-    return held[-quarter:].max() > 1.05 * held[quarter : 2 * quarter].max()
+    return held[-quarter:].max() - held[quarter : 2 * quarter].max()
 
 
 def test_memory_does_not_grow_with_the_number_of_candidates(small, monkeypatch):
@@ -427,8 +427,9 @@ def test_memory_does_not_grow_with_the_number_of_candidates(small, monkeypatch):
     monkeypatch.setattr(ranking, "LOOSE", 20)
     brief = parse_brief(BRIEF.replace("samples = 1300", "samples = 5000"))
     python, arrow = held_by(brief, Nowhere())
-    assert len(arrow) == 106 and not grows(python) and not grows(arrow)
-    assert grows(held_by(brief, Memory())[0])  # which keeps every part
+    kept = growth(held_by(brief, Memory())[0])  # which keeps every part
+    assert len(arrow) == 106 and kept > 0
+    assert growth(python) < 0.1 * kept and growth(arrow) < 0.1 * kept  # counters, and what the allocator rounds up
 
 
 def test_the_size_of_a_part_follows_the_size_of_the_cell():

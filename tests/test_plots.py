@@ -376,7 +376,8 @@ def test_nothing_on_a_page_overlaps_or_leaves_it(any_page):
 def test_a_page_says_what_it_is_in_letters_that_can_be_read(any_page):
     name, figure = any_page
     (foot,) = [text for text in figure.texts if text.get_gid() == "foot"]
-    for words in (PARENT.name, "timoshenko", "mall strain", "perfect lattice", "screening only", "not design evidence"):
+    model = f"Model: {homogenize(build(name)).model}."
+    for words in (PARENT.name, model, "mall strain", "perfect lattice", "screening only", "not design evidence"):
         assert words in foot.get_text()
     assert "\n" not in foot.get_text()
     assert min(t.get_fontsize() for t in [*figure.texts, *(t for ax in figure.axes for t in ax.texts)]) >= 8.0
