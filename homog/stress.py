@@ -189,7 +189,11 @@ def _motion(cell: UnitCell, model: str, compliance: Array, mechanisms: NDArray[n
         sure = mechanisms == 0
         u[sure, :-1] = -np.linalg.solve(K[sure], right[sure])
         for i in np.flatnonzero(~sure).tolist():
-            scale = 1.0 / np.sqrt(np.diagonal(K[i]))
+            diagonal = np.diagonal(K[i])
+            if not (diagonal > 0.0).all():  # no energy: joints that overlap
+                u[i, :-1] = np.nan
+                continue
+            scale = 1.0 / np.sqrt(diagonal)
             inverse = np.linalg.pinv(K[i] * scale[:, None] * scale, rcond=RANK_TOLERANCE, hermitian=True)
             u[i, :-1] = -scale[:, None] * (inverse @ (scale[:, None] * right[i]))
     return np.ascontiguousarray(np.moveaxis(u, 0, -1)[free.numbers])

@@ -472,3 +472,13 @@ def test_the_axial_force_is_along_the_line_of_a_curved_wall(monkeypatch):
     by_hand = np.einsum("bmqd,bmdv->bmqv", tangent, members.force)
     normal = carried.normal.reshape(b, m, 2001, -1)[:, :, 1:-1]
     np.testing.assert_allclose(normal, by_hand, atol=1e-5 * np.abs(members.force).max())
+
+
+def test_joints_that_overlap_leave_their_neighbours_their_yield():
+    """Thick arrowheads, whose joints have no energy to speak of: the batch's other members are as they are alone."""
+    t = np.concatenate([[0.5], np.linspace(2.6, 4.6, 40)])
+    parent = material("PLA")
+    found = evaluate(homogenize(build("arrowhead", outer_angle=20.0, inner_angle=40.0, thickness=t, material=parent)))
+    alone = evaluate(homogenize(build("arrowhead", outer_angle=20.0, inner_angle=40.0, thickness=0.5, material=parent)))
+    assert found["yield_1_MPa"][0] == pytest.approx(alone["yield_1_MPa"][0], rel=1e-9)
+    assert any("joints-overlap" in words for words in found["reasons"])
