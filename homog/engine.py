@@ -84,6 +84,11 @@ class Plan:
         start = (number - self._parts[which]) * size
         return Part(source, start, min(start + size, source.count), self._rows[which] + start + 1)
 
+    def holding(self, candidate: int) -> int:
+        """Return the number of the part that holds a candidate, by the candidate's number in the brief (from 1)."""
+        which = bisect.bisect_right(self._rows, candidate - 1) - 1
+        return self._parts[which] + (candidate - 1 - self._rows[which]) // self.sizes[which]
+
     def about(self) -> dict[str, Any]:
         """Return what a run is of, as plain values: the same for the same brief and version."""
         brief = self.brief

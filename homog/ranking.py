@@ -66,7 +66,7 @@ class Tally:
 
 @dataclass(eq=False)
 class Digest:
-    """What one part, or several, leave behind: rows of the best and of the nearest, counts, a sample of points."""
+    """What one part, or several, leave behind: who is best and why, rows of the nearest, counts, a sample of points."""
 
     best: list[pa.Table]
     near: list[pa.Table]
@@ -88,7 +88,13 @@ def goal_keys(values: Sequence[Array], goals: Sequence[Goal]) -> Array:
 
 
 def ranked(table: pa.Table, brief: Brief, depth: int) -> pa.Table:
-    """Return the rows that can still be shortlisted, in order: the front, or the first `depth` of each family."""
+    """Return who can still be shortlisted, in order: the front, or the first `depth` of each family.
+
+    Of each only number, family and what ranks it: a front may be most of millions.
+    """
+    table = table.select(
+        dict.fromkeys(["candidate", "family", *(g.column for g in brief.goals if g.column in table.column_names)])
+    )
     keys = goal_keys([number_column(table, goal.column) for goal in brief.goals], brief.goals)
     order = np.lexsort((table["candidate"].to_numpy(), *keys.T[::-1]))
     if brief.front:

@@ -13,6 +13,7 @@ from contextlib import nullcontext
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
+import numpy as np
 import pyarrow as pa
 
 from homog.brief import Brief
@@ -110,12 +111,27 @@ def run_screen(
             if progress is not None:
                 progress(done.rows)
     found = ranking.result()
-    best, looked = shortlist(frame(found.best[0]), brief, times=looks), None
+    best, looked = _whole(shortlist(frame(found.best[0]), brief, times=looks), job, parts), None
     if second is not None and len(best):
         looked = second(best, brief)
         best = shortlist(looked[looked["meets"]].drop(columns="rank"), brief)
     near, sample = frame(found.near[0]), sample_frame(found)
     return Screening(brief, best, near, ranking.falls(), found.tally, sample, parts, looked)
+
+
+def _whole(best: pd.DataFrame, job: Job, parts: Parts) -> pd.DataFrame:
+    """Return the whole rows of ranked candidates, from their parts; those that nobody kept are computed again."""
+    numbers, there, found = best["candidate"].to_numpy(), set(parts.done()), []
+    held = np.array([job.plan.holding(int(number)) for number in numbers], np.int64)
+    for part in np.unique(held).tolist():
+        table = parts.get(part) if part in there else job.part(part)
+        found.append(table.take(pa.array(numbers[held == part] - job.plan[part].first)))
+    if not found:
+        found = [job.plan.schema.empty_table()]
+    rows = frame(pa.concat_tables(found).unify_dictionaries()).set_index("candidate", drop=False)
+    rows = rows.loc[numbers].reset_index(drop=True)
+    rows.insert(0, "rank", best["rank"].to_numpy())
+    return rows
 
 
 def _others(plan: Plan, there: list[int]) -> Iterator[int]:
