@@ -38,6 +38,7 @@ KEYS = {
 }
 CANDIDATE_KEYS = ("family", "samples", "seed")
 MOST_KEPT = 200
+TOLERANCES = ("E1_tolerance_percent", "nu12_tolerance", "E1_scatter_percent", "nu12_scatter")
 MOST_CANDIDATES = 1_000_000_000
 """Sobol' points are numbered with SOBOL_BITS digits; a screen of so many takes days and some 300 GB."""
 _STATEMENT = re.compile(r"""\s*(\[|[\w"'][^=]*=)""")
@@ -227,10 +228,15 @@ class _Reader:
         made_by = self._process(tables["process"])
         limits = self._merged([*self._limits(data.get("limits", {}), kinds), *process_limits(made_by)])
         goals, front, keep, per_family = self._rank(tables["rank"], kinds)
+        parent, part = self._material(tables["material"]), self._part(tables["part"])
+        asked = [(("limits", limit.column), limit.column) for limit in limits if limit.column in data.get("limits", {})]
+        for place, name in [*asked, *((("rank", "by"), goal.column) for goal in goals)]:
+            lack = _lack(name, parent, made_by, part)
+            if lack:
+                raise self.fault(f"no candidate can have a value of '{name}': {lack}", *place)
         return Brief(
             " ".join(self._text(data.get("title", "untitled brief"), "title").split()),
-            self._material(tables["material"]), made_by, limits, goals, front, keep, per_family,
-            self._part(tables["part"]), model, candidates, self.text,
+            parent, made_by, limits, goals, front, keep, per_family, part, model, candidates, self.text,
         )  # fmt: skip
 
     def _known(self, given: Mapping[str, Any], what: str, table: str) -> None:
@@ -428,6 +434,17 @@ def _short(value: Any) -> str:
         return "a whole number of more than 18 digits"
     words = repr(value)
     return words if len(words) <= 60 else words[:57] + "..."
+
+
+def _lack(name: str, parent: Material, made_by: Process, part: tuple[float, ...]) -> str:
+    """Return what a brief would have to say for a column to have values, or nothing."""
+    if name.startswith("yield") and not math.isfinite(parent.yield_MPa):
+        return f"the parent {parent.name} has no yield; give yield_MPa in [material]"
+    if name == "cells_across" and not part:
+        return "the part's size is not known; give size_1_mm, size_2_mm in [part]"
+    if name in TOLERANCES and not made_by.wall_tolerance_mm > 0.0:
+        return "the process has no tolerance; give wall_tolerance_mm in [process]"
+    return ""
 
 
 def process_limits(made_by: Process) -> list[Limit]:

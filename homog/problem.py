@@ -145,7 +145,7 @@ def limit_of(found: Family, name: str, asked: Asked, origin: str) -> Limit:
             f"{what}: '{found.id}' is {found.kind} and has no such quantity; 'homog families ID' lists them"
         )
     if not known.smooth:
-        why = "text" if known.text else "a count, a direction or a tolerance, which has no derivative"
+        why = "text" if known.text else "a count, a direction, a band, a tolerance or a yield, which has no derivative"
         raise InputError(f"{what} is {why}; aim at a number such as nu12, E1_MPa or density_kg_m3")
     low, high = asked if isinstance(asked, tuple) else (asked, asked)
     low, high = -math.inf if low is None else float(low), math.inf if high is None else float(high)

@@ -32,7 +32,7 @@ REASONS: Mapping[str, tuple[str, str]] = {
                    "one, 38 to 68 % for an arrowhead"),
     "tangent-nodes": ("caution", "ligaments merge with their nodes along a tangent, which beams do not see: at a "
                       "thickness of 0.02 of the length E1 comes out 13 to 18 % and G12 34 to 44 % too low, at 0.1 "
-                      "they are 24 to 36 % and 53 to 68 %; use model 'solid'"),
+                      "they are 24 to 36 % and 53 to 68 %, and nu off the axes may change its sign; use model 'solid'"),
     "joint-outside": ("caution", "a joint's angle or thickness ratio lies outside its table: taken as a point"),
     "joints-near": ("caution", "less than 0.5 of a thickness of plain wall is left between two joints: moduli were up "
                     "to 5 % off"),
@@ -49,6 +49,7 @@ REASONS: Mapping[str, tuple[str, str]] = {
     "near-singular": ("caution", f"the softest strain is under {SINGULAR_CAUTION:g} of the stiffest: flaws decide"),
     "coupled": ("caution", "stretch along the axes comes with shear (eta1_12): a strip must be free to shear"),
     "reach-short": ("caution", f"auxetic only within {REACH_CAUTION_DEG:g} deg of axis 1: alignment decides"),
+    "no-cell": ("reject", "not one whole cell across the part: it is no lattice any more"),
     "few-cells": ("caution", f"fewer than {CELLS_CAUTION:g} cells across the part: edges decide"),
     "band-unknown": ("caution", "no band for E1 and nu12: this family, shape, parent or slenderness was not measured "
                      "against solids"),

@@ -161,7 +161,7 @@ def write_screening(
         progress("property chart")
         chart = plots.property_chart(
             screening.sample, shown, material=brief.material, limits=brief.limits, title=brief.title,
-            counts=screening.counts,
+            counts=screening.counts, model=brief.model,
         )  # fmt: skip
         for suffix in (".svg", ".png"):
             plots.save(chart, place / f"chart{suffix}")
@@ -370,14 +370,16 @@ def summary(screening: Screening, *, figures: Sequence[str], version: str, unloo
         reasons = screening.shortlist["reasons"]
     else:
         parts.append("## What is in the way\n")
-        worst = sorted(screening.falls, key=lambda fall: -fall.missed)
-        parts += [f"- {f.limit.words}: missed by {f.missed:,}, by {f.alone:,} as the only miss" for f in worst]
+        worst = sorted((fall for fall in screening.falls if fall.missed), key=lambda fall: -fall.missed)
+        parts += [f"- {f.limit.words}: {f.missed:,} miss it, {f.alone:,} of them nothing else" for f in worst]
         rejected = screening.tally.total("reject")
         counts = [(code, n) for code, n in _reasons(screening) if reason_level(code) == "reject"]
         why = f" ({', '.join(f'{code} {n:,}' for code, n in counts)})" if counts else ""
-        parts.append(f"- verdict not reject: missed by {rejected:,}{why}")
+        parts.append(f"- verdict not reject: {rejected:,} miss it{why}")
         parts.append(
-            "\nA limit that many candidates miss alone is the one to relax first, or to widen the ranges for.\n"
+            "\nEvery candidate is rejected, and no limit can help: look at what rejects them, and move the ranges.\n"
+            if rejected == brief.count
+            else "\nA limit that many candidates miss alone is the one to relax first, or to widen the ranges for.\n"
         )
         parts.append("## Nearest candidates\n")
         if len(screening.nearest):

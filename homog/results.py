@@ -269,7 +269,8 @@ class Results:
         shear = np.abs(S[:, :2, -1]) / np.sqrt(np.abs(S[:, [0, 1], [0, 1]] * S[:, -1, -1, None]))
         found["coupled"] = live & (shear.max(axis=-1) > COUPLING_CAUTION)
         found["reach-short"] = live & (self.ratio(0, 1) < 0.0) & (self.extremes.auxetic_reach_deg < REACH_CAUTION_DEG)
-        found["few-cells"] = live & (self.cells_across < CELLS_CAUTION)
+        found["no-cell"] = live & (self.cells_across < 1.0)
+        found["few-cells"] = live & (self.cells_across < CELLS_CAUTION) & ~found["no-cell"]
         found["band-unknown"] = live & ~found["joints-overlap"] & ~np.isfinite(self.band.E1_low)
         values = {"E1_MPa": self.young(0), "nu12": self.ratio(0, 1), **self.band.columns}
         found["limit-within-band"] = live & bands.within_band(values, self.limits, self.count)

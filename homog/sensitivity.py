@@ -19,7 +19,8 @@ from numpy.typing import ArrayLike, NDArray
 from homog.cell import Kind
 from homog.columns import COLUMNS, column, columns_of, evaluate
 from homog.effective import DEFAULT_MODEL, Effective, homogenize
-from homog.families import FAMILIES, family
+from homog.errors import InputError
+from homog.families import FAMILIES, Family, family
 from homog.gradient import Move, check_differentiable, moved, numeric, parameters_of, sizes, sound, tensor_rates
 from homog.materials import UNIT, Material
 from homog.materials import material as named_material
@@ -135,7 +136,7 @@ def sensitivities(
 
     found = family(family_id)
     parent = named_material(material) if isinstance(material, str) else material
-    names = smooth_columns(found.kind) if columns is None else [column(name).name for name in columns]
+    names = chosen_columns(found, columns)
     cell = found.build(given or {}, parent)
     single = not cell.shape
     effective = homogenize(cell, model=model)
@@ -148,6 +149,17 @@ def sensitivities(
         return pd.DataFrame(values[..., 0], index=pd.Index(names, name="column"), columns=by)
     index = pd.MultiIndex.from_product([range(values.shape[-1]), names], names=["member", "column"])
     return pd.DataFrame(np.moveaxis(values, -1, 0).reshape(len(index), len(by)), index=index, columns=by)
+
+
+def chosen_columns(found: Family, columns: Sequence[str] | None) -> list[str]:
+    """Return the columns asked for, or all smooth ones; InputError for one that the family's cells do not have."""
+    if not columns:
+        return smooth_columns(found.kind)
+    for name in columns:
+        if found.kind not in column(name).kinds:
+            raise InputError(f"Column '{name}' is not one of {found.kind} cells, which '{found.id}' are; "
+                             f"'homog families {found.id}' lists theirs")  # fmt: skip
+    return list(columns)
 
 
 def elasticities(effective: Effective, names: Sequence[str], rates: Array) -> Array:

@@ -510,3 +510,21 @@ def test_the_line_of_every_key_holds_the_key(path):
 
 def test_the_line_of_what_is_not_there_is_0():
     assert line_of(WHOLE, ("limits", "nu21")) == line_of("", ("title",)) == 0
+
+
+@pytest.mark.parametrize(
+    ("limit", "words"),
+    [
+        (
+            "yield_1_MPa = { min = 1.0 }",
+            "no candidate can have a value of 'yield_1_MPa': the parent TPU 85A has no yield",
+        ),
+        ("cells_across = { min = 4.0 }", "the part's size is not known; give size_1_mm"),
+        ("E1_tolerance_percent = { max = 9.0 }", "the process has no tolerance; give wall_tolerance_mm"),
+    ],
+)
+def test_a_limit_that_no_candidate_can_have_a_value_for_is_refused_at_once(limit, words):
+    text = f'material = "TPU 85A"\n[limits]\n{limit}\n[[candidates]]\nfamily = "square-grid"\n'
+    with pytest.raises(InputError, match="line 3") as caught:
+        parse_brief(text)
+    assert words in str(caught.value)

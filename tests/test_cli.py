@@ -89,6 +89,8 @@ BAD = {
     "sweep octet lenth=1:2:3 --out x.csv": "Unknown parameter 'lenth'; nearest known: length",
     "evaluate octet --material PLAA": "Unknown material 'PLAA'; nearest known: PLA",
     "materials plaa": "Unknown material 'plaa'",
+    "evaluate octet --deep": "--deep is for planar cells, whose walls may be deep along axis 3; 'octet' is spatial",
+    "sensitivity square-grid --column nu31": "Column 'nu31' is not one of planar cells",
     "evaluate octet --model beam": f"Unknown model 'beam'; known: {', '.join(sorted(MODELS))}",
     # assignments
     "evaluate octet length": "'length' is not PARAM=VALUE",

@@ -263,6 +263,7 @@ CASES = {
     "near-singular": lambda: evaluate(homogenize(build("square-grid", thickness=[0.005]))),
     "coupled": lambda: turned("square-grid", 22.5, thickness=[0.2]),
     "reach-short": lambda: evaluate(homogenize(build("reentrant-honeycomb", angle=[-3.0], thickness=0.4))),
+    "no-cell": lambda: evaluate(homogenize(build("square-grid", thickness=[0.2])), part=(9.0, 100.0)),
     "few-cells": lambda: evaluate(homogenize(build("square-grid", thickness=[0.2])), part=(39.0, 100.0)),
     "joint-outside": lambda: sharp(12.0, 15.0, 0.05),
     "joints-near": lambda: sharp(20.0, 40.0, 2.65),

@@ -444,8 +444,8 @@ def test_the_summary_when_nothing_meets():
     text = summary(found, figures=[], version="9.9")
     assert "**Nothing meets the brief**: none of 56 candidates." in text and "What was found" not in text
     fall = found.falls[0]
-    assert f"- nu12 at most -50: missed by 56, by {fall.alone} as the only miss" in text
-    assert re.search(r"- verdict not reject: missed by \d+ \(.*tips-collide \d+", text)
+    assert f"- nu12 at most -50: 56 miss it, {fall.alone} of them nothing else" in text
+    assert re.search(r"- verdict not reject: \d+ miss it \(.*tips-collide \d+", text)
     nearest = tables_of(text)[1]
     assert nearest[0][-1] == "misses" and len(nearest) == 1 + len(found.nearest)
     for line, row in zip(nearest[1:], records(found.nearest), strict=True):
@@ -458,7 +458,8 @@ def test_the_summary_when_all_are_rejected():
         parse_brief('model = "euler"\nmaterial = "PLA"\n[[candidates]]\nfamily = "octet"\ndiameter = [3.0, 6.0]')
     )
     text = summary(found, figures=[], version="9.9")
-    assert "- verdict not reject: missed by 2 (struts-merge 1, walls-thick 1)" in text
+    assert "- verdict not reject: 2 miss it (struts-merge 1, walls-thick 1)" in text
+    assert "Every candidate is rejected, and no limit can help" in text
     assert "None: every candidate is rejected" in text and "chart.png" not in text and "No limits." in text
 
 

@@ -64,7 +64,7 @@ def evaluate(
     from homog.reasons import reason_text
     from homog.report import WHAT_IT_IS, evaluation, number
 
-    parent = parent_of(material, modulus, poisson, solid_density, deep, yield_stress)
+    parent = parent_of(material, modulus, poisson, solid_density, deep, yield_stress, family_id=id)
     effective = one_cell(id, parameters, parent, model, fillet)
     card = evaluation(effective)
     given, quantities, stiffness = card["parameters"], card["columns"], np.array(card["stiffness"], float)
@@ -130,7 +130,7 @@ def polar(
     if out.suffix not in FIGURES:
         raise InputError(f"Figure '{out}' has the suffix '{out.suffix}'; allowed are {', '.join(FIGURES)}")
     check_free(out, overwrite=overwrite)
-    parent = parent_of(material, modulus, poisson, solid_density, deep, yield_stress)
+    parent = parent_of(material, modulus, poisson, solid_density, deep, yield_stress, family_id=id)
     effective = one_cell(id, parameters, parent, model)
     from homog import plots
 
@@ -174,7 +174,8 @@ def sweep(
     from homog.screening import sweep_tables
 
     check_table(out, overwrite=overwrite)
-    found, parent = family(id), parent_of(material, modulus, poisson, solid_density, deep, yield_stress)
+    found = family(id)
+    parent = parent_of(material, modulus, poisson, solid_density, deep, yield_stress, family_id=id)
     given = assigned(found, parameters)
     words = {name: values for name, values in given.items() if found.parameter(name).choices}
     spans = {name: values for name, values in given.items() if name not in words}

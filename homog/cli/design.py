@@ -66,14 +66,14 @@ def sensitivity(
     import numpy as np
 
     from homog.columns import COLUMNS, evaluate
-    from homog.columns import column as known
     from homog.families import family
     from homog.gradient import numeric
     from homog.report import WHAT_IT_IS, number, plain
-    from homog.sensitivity import column_rates, elasticities, smooth_columns
+    from homog.sensitivity import chosen_columns, column_rates, elasticities
 
-    found, parent = family(id), parent_of(material, modulus, poisson, solid_density, deep)
-    names = [known(name).name for name in column] if column else smooth_columns(found.kind)
+    found = family(id)
+    parent = parent_of(material, modulus, poisson, solid_density, deep, family_id=id)
+    names = chosen_columns(found, column)
     effective = one_cell(id, parameters, parent, model)
     values = evaluate(effective, names)
     rates = column_rates(effective, names)
@@ -91,7 +91,8 @@ def sensitivity(
                           "relative": relative, "columns": entries}, indent=2, allow_nan=False))  # fmt: skip
         return 0
     console = console_()
-    console.print(f"{found.title}  ({id}), model {effective.model}", style="bold")
+    verdict, codes = (evaluate(effective, ["verdict", "reasons"])[name][0] for name in ("verdict", "reasons"))
+    console.print(f"{found.title}  ({id}), model {effective.model}:  {verdict}  {codes}".rstrip(), style="bold")
     now_words = (f"{p} {effective.cell.parameters[p].reshape(-1)[0]:g} {found.parameter(p).unit}" for p in by)
     console.print(", ".join(now_words))
     heads = [f"{p} {'%/%' if relative else f'per {found.parameter(p).unit}'}" for p in by]
@@ -167,7 +168,8 @@ def tune(
 
     if out is not None:
         check_table(out, overwrite=overwrite)
-    found, parent = family(id), parent_of(material, modulus, poisson, solid_density, deep)
+    found = family(id)
+    parent = parent_of(material, modulus, poisson, solid_density, deep, family_id=id)
     made_by = named(process) if process is not None else Process("given limits")
     for key, option, text in (("min_wall_mm", "--min-wall", min_wall), ("max_cell_mm", "--max-cell", max_cell)):
         if text is not None:

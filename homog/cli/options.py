@@ -94,9 +94,15 @@ def parent_of(
     density: str | None,
     deep: bool,
     strength: str | None = None,
+    *,
+    family_id: str,
 ) -> Material:
+    from homog.families import family
     from homog.materials import UNIT, material
 
+    kind = family(family_id).kind
+    if deep and kind != "planar":
+        raise InputError(f"--deep is for planar cells, whose walls may be deep along axis 3; '{family_id}' is {kind}")
     values: dict[str, Any] = {}
     given = (("modulus_MPa", "--modulus", modulus), ("poisson", "--poisson", poisson),
              ("density_kg_m3", "--solid-density", density), ("yield_MPa", "--yield", strength))  # fmt: skip

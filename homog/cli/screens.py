@@ -74,7 +74,10 @@ def screen(
               "a solid.")  # fmt: skip
     else:
         worst = max(found.falls, key=lambda fall: fall.missed, default=None)
-        why = f"most miss: {worst.limit.words}" if worst and worst.missed else "every one is rejected"
+        rejected = found.tally.total("reject") == asked.count
+        why = (
+            "every one is rejected" if rejected or not worst or not worst.missed else f"most miss: {worst.limit.words}"
+        )
         print(f"nothing of {asked.count:,} candidates meets the brief; {why}.")
     print(f"Results: {out / 'summary.md'}")
     return 0 if len(found.shortlist) else 3

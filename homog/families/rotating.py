@@ -114,7 +114,7 @@ NOTES = "Rigid units give nu = -1; what the units themselves give way raises it.
 
 FAMILIES = (
     Family(
-        "rotating-squares", "Rotating squares", "planar", _parameters(89.0, 20.0), "square",
+        "rotating-squares", "Rotating squares", "planar", _parameters(89.0, 15.0), "square",
         "Grima & Evans 2000, J. Mater. Sci. Lett. 19, 1563 (from memory)", _squares, rules=RULES, notes=NOTES,
     ),
     Family(
