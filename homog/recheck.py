@@ -64,7 +64,7 @@ def second_look(
     """Return the rows of a ranking with the columns of their solids, and judged again.
 
     Rows of planar walls, MOST of them at most, get every column, `misses` and `meets` from the solid. `screened_...`
-    keeps what the screen had, and `note` says in a line why a solid could not be had.
+    keeps what the screen had and its model, and `note` says in a line why a solid could not be had.
 
     Parameters
     ----------
@@ -76,7 +76,7 @@ def second_look(
     again = best.reset_index(drop=True)
     for name in SCREENED:
         again[f"screened_{name}"] = again.get(name, np.nan)
-    again["note"] = ""
+    again["screened_model"], again["note"] = again["model"], ""
     tasks = {
         place: Task(str(row["family"]), given(row), brief.material, brief.known)
         for place, row in enumerate(records(best.head(MOST)))

@@ -291,15 +291,29 @@ def _tolerance(screening: Screening) -> str:
         f"{int((walls < brief.process.recommended_wall_mm).sum())} of {len(walls)} shortlisted cells."
     )
     share = tolerance / walls.min()
-    low = max(1.0 - share, 0.0) ** 3 - 1.0
-    return (
-        "## What the wall tolerance does\n\n"
+    lines = [
         f"A wall that is {tolerance:g} mm off everywhere is {share:.0%} of the thinnest shortlisted wall "
-        f"({number(walls.min())} mm). "
-        f"Where walls bend, stiffness goes with the cube of the wall: {low:+.0%} to {(1.0 + share) ** 3 - 1.0:+.0%}. "
-        f"Density moves by about {share:.0%}, Poisson's ratio little. A uniform bias counts; scatter from wall to wall "
-        f"hardly does. Make and measure a coupon first. {below}\n"
-    )
+        f"({number(walls.min())} mm)."
+    ]
+    names = ("E1_tolerance_percent", "nu12_tolerance", "E1_scatter_percent")
+    together, nu, apart = (_range(table[name]) for name in names)
+    if together:
+        lines.append(
+            f"To first order that moves E1 of the shortlisted cells by {together} % and nu12 by {nu} (`{names[0]}`, "
+            f"`{names[1]}` of each); the cube of a bending wall makes it more upwards and less downwards."
+        )
+    if apart:
+        lines.append(f"Where each wall of a cell is off by itself, E1 moves by {apart} %, and less over many cells.")
+    return "## What the wall tolerance does\n\n" + " ".join([*lines, "Make and measure a coupon first.", below]) + "\n"
+
+
+def _range(values: pd.Series[float]) -> str:
+    """Return the least and the largest of some numbers in words, or nothing if there are none."""
+    known = values.dropna()
+    if known.empty:
+        return ""
+    low, high = number(known.min()), number(known.max())
+    return low if low == high else f"{low} to {high}"
 
 
 def _second(screening: Screening, unlooked: str) -> str:
@@ -321,7 +335,7 @@ def _second(screening: Screening, unlooked: str) -> str:
     )
     gone = again[~again["meets"]]
     after = [f"{len(gone)} of them no longer meet the brief." if len(gone) else "All of them still meet the brief."]
-    for model, group in again.groupby(again["candidate"].map(_screen_models(screening)), sort=True):
+    for model, group in again.groupby("screened_model", sort=True):
         off = [(group[n] / group[f"screened_{n}"] - 1.0).abs().max() for n in SCREENED if not n.startswith("nu")]
         nu = max(float((group[n] - group[f"screened_{n}"]).abs().max()) for n in SCREENED if n.startswith("nu"))
         after.append(
@@ -331,22 +345,6 @@ def _second(screening: Screening, unlooked: str) -> str:
     notes = [f"- candidate {row['candidate']}: {row['note']}" for row in records(table[table["note"] != ""])]
     header = ["was", "no.", "family", *SCREENED, "now"]
     return head + words + markdown(header, lines) + "\n" + " ".join(after) + "\n" + "\n".join([*notes, ""])
-
-
-def _screen_models(screening: Screening) -> Callable[[int], str]:
-    """Return the model that the screen used for a candidate: what it asked for, or what that falls back to."""
-    assert screening.looked is not None
-    families = dict(zip(screening.looked["candidate"], screening.looked["family"], strict=True))
-    fallen: dict[str, str] = {}
-
-    def model(candidate: int) -> str:
-        name = families[candidate]
-        if name not in fallen:
-            cell = FAMILIES[name].build({}, screening.brief.material)
-            fallen[name] = homogenize(cell, model=screening.brief.model).model
-        return fallen[name]
-
-    return model
 
 
 def summary(screening: Screening, *, figures: Sequence[str], version: str, unlooked: str = "") -> str:

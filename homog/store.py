@@ -32,7 +32,6 @@ if TYPE_CHECKING:
 
 SCHEMA = 1
 """Version of the layout of parts; a change of names or types of columns that are there raises it."""
-LEADING = ("candidate", "family", "meets", "misses", "verdict", "reasons")
 TEXT = pa.dictionary(pa.int32(), pa.string())
 PLAIN = (pa.bool_(), pa.int64())
 RUN, CANDIDATES = "run.json", "candidates"
